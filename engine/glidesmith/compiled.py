@@ -1,0 +1,94 @@
+"""How the engine's kernels are compiled, said once.
+
+No kernel uses fastmath: it would let the compiler reorder sums, and then the same settings would not give the
+same samples for every block size. ``error_model="numpy"`` keeps Python exceptions out of compiled code, and
+``nogil`` lets kernels run beside Python. Compiled code is kept between runs in a folder that belongs to the user
+alone (the files are pickles) and that is named after the kernels' sources, since numba notices changes only in the
+file that a function stands in. Where no such folder can be had, kernels are compiled anew in every process.
+"""
+
+import hashlib
+import os
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, TypeVar
+
+import numba
+from numba import config
+from numba.core.compiler import CompilerBase, DefaultPassBuilder
+
+Function = TypeVar("Function", bound=Callable[..., Any])
+
+
+def _cache_root() -> Path:
+    named = os.environ.get("GLIDESMITH_CACHE")
+    if named:
+        return Path(named)
+    if sys.platform == "win32":
+        return Path(os.environ.get("LOCALAPPDATA", str(Path.home() / "AppData" / "Local"))) / "glidesmith"
+    if sys.platform == "darwin":
+        return Path.home() / "Library" / "Caches" / "glidesmith"
+    return Path(os.environ.get("XDG_CACHE_HOME", str(Path.home() / ".cache"))) / "glidesmith"
+
+
+def _sources_digest() -> str:
+    digest = hashlib.sha256(numba.__version__.encode())
+    for source in sorted(Path(__file__).parent.rglob("*.py")):
+        text = source.read_bytes()
+        if b"@kernel" in text or b"@vector_kernel" in text or source.name == "compiled.py":
+            digest.update(source.name.encode() + b"\0" + text)
+    return digest.hexdigest()[:16]
+
+
+def _private_folder() -> str | None:
+    """The folder for compiled code, made if need be; None where it can't be had or others could write to it."""
+    try:
+        folder = _cache_root() / _sources_digest()
+        folder.mkdir(mode=0o700, parents=True, exist_ok=True)
+        if hasattr(os, "getuid"):
+            facts = folder.stat()
+            if facts.st_uid != os.getuid() or facts.st_mode & 0o022:
+                return None
+        if not os.access(folder, os.W_OK | os.X_OK):
+            return None
+    except (OSError, RuntimeError):
+        return None
+    return str(folder)
+
+
+CACHE_FOLDER = _private_folder()
+
+
+def _compile(function: Function, **options: Any) -> Function:
+    kept = config.CACHE_DIR
+    config.CACHE_DIR = CACHE_FOLDER or ""
+    try:
+        return numba.njit(  # type: ignore[no-any-return]
+            nogil=True, error_model="numpy", cache=CACHE_FOLDER is not None, **options
+        )(function)
+    finally:
+        config.CACHE_DIR = kept
+
+
+def kernel(function: Function) -> Function:
+    """Compile a function of the engine: no GIL, no exceptions, no fastmath, kept between runs."""
+    return _compile(function)
+
+
+def inlined(function: Function) -> Function:
+    """As `kernel`, for small scalar functions that are inlined where they are called."""
+    return _compile(function, forceinline=True)
+
+
+class _Disjoint(CompilerBase):  # type: ignore[misc]
+    """The default pipeline with the promise that array arguments do not overlap."""
+
+    def define_pipelines(self) -> list[Any]:
+        self.state.flags.noalias = True
+        return [DefaultPassBuilder.define_nopython_pipeline(self.state)]
+
+
+def vector_kernel(function: Function) -> Function:
+    """As `kernel`, for array passes whose arrays never overlap: the promise lets loops use vector registers."""
+    return _compile(function, pipeline_class=_Disjoint)
