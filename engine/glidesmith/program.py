@@ -1,0 +1,279 @@
+"""The flat record that compiled code reads, made from a preset and a phrase.
+
+Everything that takes thinking is settled here, in Python and in exact numbers: which key sounds, whether its pitch glides or
+jumps, at which sample and which part of it. What is left for the audio thread is a walk through two lists of events.
+"""
+
+import math
+from dataclasses import dataclass, field
+from fractions import Fraction
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from glidesmith.amplifier import AMPLIFIER, amplifier_record
+from glidesmith.converter import converted_volts, held_time
+from glidesmith.envelope import ENVELOPE, GATE_EVENT, envelope_record
+from glidesmith.errors import SettingError
+from glidesmith.keyboard import LEGATO, PRESS, RELEASE, KeyChange, key_changes
+from glidesmith.slew import SLEW, Slew
+from glidesmith.units import note_hz
+from glidesmith.voice import quiet_sample
+from glidesmith.wavetable import Wavetables, build_wavetables, read_cycle
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from numpy.typing import NDArray
+
+    from glidesmith.phrase import Phrase
+    from glidesmith.preset import Preset, SlewSettings
+
+LOWEST_RATE, HIGHEST_RATE = 8_000, 384_000
+PHASE_CYCLE = 1 << 62
+"""One cycle of the oscillator in units of its whole-number phase."""
+
+SETTINGS = np.dtype(
+    [
+        ("pitch", SLEW),
+        ("gain", SLEW),
+        ("envelope", ENVELOPE),
+        ("amplifier", AMPLIFIER),
+        ("enveloped", np.int64),
+        ("sample_rate", np.float64),
+        ("step_s", np.float64),
+        ("octaves_per_volt", np.float64),
+        ("octaves_at_zero", np.float64),
+        ("steps_per_octave", np.float64),
+        ("level", np.float64),
+        ("drone_increment", np.int64),
+        ("drone_level", np.float64),
+        ("first_volts", np.float64),
+        ("length", np.int64),
+    ],
+    align=True,
+)
+"""One preset's settings at one sample rate.
+
+``step_s``: seconds a sample. ``octaves_at_zero``: log2 of cycles a sample at 0 V; ``octaves_per_volt``: 1 but for tracking
+error. ``level``, ``drone_level``: amplitudes. ``drone_increment``: phase a sample. ``length``: samples in all.
+"""
+
+PITCH_EVENT = np.dtype(
+    [("sample", np.int64), ("fraction", np.float64), ("volts", np.float64), ("jump", np.int64)], align=True
+)
+"""At ``sample`` + ``fraction`` the pitch's target becomes ``volts``; with ``jump`` the pitch is there at once."""
+
+
+@dataclass(frozen=True, slots=True)
+class PitchChange:
+    """A new target for the pitch: what the phrase asks (``volts``, at ``time``) and what the converter makes of it."""
+
+    time: Fraction
+    note: int
+    volts: float
+    jump: bool
+    held_time: Fraction
+    held_volts: float
+
+
+@dataclass(frozen=True, slots=True)
+class GateChange:
+    """A new level of the gate, 0 to 1 (0: closed). ``opens``: no key was held; ``trigger``: the envelope starts."""
+
+    time: Fraction
+    note: int
+    level: float
+    opens: bool
+    trigger: bool
+
+
+@dataclass(frozen=True)
+class Program:
+    """What compiled code needs to play one preset's phrase at one rate; see `compile_program`."""
+
+    preset: "Preset"
+    phrase: "Phrase"
+    sample_rate: int
+    settings: "NDArray[Any]"
+    pitch_events: "NDArray[Any]"
+    gate_events: "NDArray[Any]"
+    wavetables: Wavetables
+    pitch_changes: "tuple[PitchChange, ...]"
+    gate_changes: "tuple[GateChange, ...]"
+    cut_off: bool
+    warnings: tuple[str, ...] = field(default=())
+
+    @property
+    def length(self) -> int:
+        """Samples in all."""
+        return int(self.settings["length"][0])
+
+
+def slew_of(settings: "SlewSettings") -> Slew:
+    """The slew that a preset's table describes."""
+    return Slew(
+        settings.law, settings.rise, settings.fall, settings.bend, settings.knee, settings.curvature, settings.timing
+    )
+
+
+def note_volts(preset: "Preset", number: int) -> float:
+    """Pitch control voltage of a MIDI note number at 1 V/oct, 0 V on the preset's ``zero_volts`` note."""
+    return (number - preset.tuning.zero_volts) / 12.0
+
+
+def _glides(change: KeyChange, glide: str) -> bool:
+    if glide == "overlap":
+        return change.kind != PRESS
+    return glide == "always"
+
+
+def pitch_changes(preset: "Preset", phrase: "Phrase") -> tuple[PitchChange, ...]:
+    """Every change of the pitch's target, the first note's included (which jumps)."""
+    changes: list[PitchChange] = []
+    for change in key_changes(phrase.notes):
+        if change.kind == RELEASE:
+            continue
+        volts = note_volts(preset, phrase.notes[change.note].number)
+        jump = not changes or not _glides(change, preset.pitch.glide)
+        if changes and volts == changes[-1].volts and not jump:
+            continue
+        time, held = change.time, volts
+        if preset.converter:
+            held = converted_volts(preset.converter, volts)[0]
+            time = held_time(preset.converter, change.time)
+        changes.append(PitchChange(change.time, change.note, volts, jump, time, held))
+    return tuple(changes)
+
+
+def gate_changes(preset: "Preset", phrase: "Phrase") -> tuple[GateChange, ...]:
+    """Every change of the gate's level; velocity lowers it by up to the preset's ``velocity_db``."""
+    changes: list[GateChange] = []
+    retrigger = preset.envelope is not None and preset.envelope.retrigger
+    for change in key_changes(phrase.notes):
+        if change.kind == RELEASE:
+            changes.append(GateChange(change.time, change.note, 0.0, False, False))
+            continue
+        velocity = phrase.notes[change.note].velocity
+        level = 10.0 ** (-preset.amplifier.velocity_db * (1.0 - velocity) / 20.0)
+        opens = change.kind == PRESS
+        changes.append(GateChange(change.time, change.note, level, opens, opens or (retrigger and change.kind == LEGATO)))
+    return tuple(changes)
+
+
+def sample_position(time: Fraction, sample_rate: int) -> tuple[int, float]:
+    """The sample at or before ``time`` seconds, and how far beyond it the time lies, in samples from 0 to under 1."""
+    exact = time * sample_rate
+    sample = math.floor(exact)
+    fraction = float(exact - sample)
+    return (sample + 1, 0.0) if fraction == 1.0 else (sample, fraction)
+
+
+def _pitch_events(changes: "Sequence[PitchChange]", sample_rate: int) -> "NDArray[Any]":
+    """The converter's output as events; of several changes that one tick lets through, the last one counts."""
+    rows: list[tuple[int, float, float, bool]] = []
+    for index, change in enumerate(changes[1:], start=1):
+        if index + 1 < len(changes) and changes[index + 1].held_time == change.held_time:
+            continue
+        rows.append((*sample_position(change.held_time, sample_rate), change.held_volts, change.jump))
+    return np.array(rows, PITCH_EVENT)
+
+
+def _gate_events(changes: "Sequence[GateChange]", sample_rate: int) -> "NDArray[Any]":
+    rows = [(*sample_position(c.time, sample_rate), c.level, c.trigger) for c in changes]
+    return np.array(rows, GATE_EVENT)
+
+
+def _frequency_range(preset: "Preset", volts: "Sequence[float]", octaves_per_volt: float) -> tuple[float, float]:
+    zero_hz = note_hz(preset.tuning.zero_volts, preset.tuning.a4_hz)
+    reach = [min(volts), max(volts)]
+    if preset.pitch.steps_per_octave:
+        reach = [reach[0] - 1.0 / preset.pitch.steps_per_octave, reach[1] + 1.0 / preset.pitch.steps_per_octave]
+    ends = [zero_hz * 2.0 ** (v * octaves_per_volt) for v in reach]
+    return min(ends), max(ends)
+
+
+def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchChange]") -> tuple[str, ...]:
+    if preset.converter is None:
+        return ()
+    clipped = {c.note for c in changes if converted_volts(preset.converter, c.volts)[1]}
+    if not clipped:
+        return ()
+    first = min(clipped)
+    volts = note_volts(preset, phrase.notes[first].number)
+    return (
+        f"converter: {len(clipped)} of the phrase's notes lie outside ±{preset.converter.span_volts / 2:g} V and are clipped "
+        f"(the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move tuning.zero_volts",
+    )
+
+
+def _settings(preset: "Preset", sample_rate: int, first_volts: float) -> "NDArray[Any]":
+    settings = np.zeros(1, SETTINGS)
+    row = settings[0]
+    row["pitch"] = slew_of(preset.pitch.slew).record()[0]
+    row["gain"] = slew_of(preset.gain).record()[0]
+    row["amplifier"] = amplifier_record(preset.amplifier.law, preset.amplifier.range_db)[0]
+    if preset.envelope is not None:
+        row["enveloped"] = 1
+        row["envelope"] = envelope_record(preset.envelope)[0]
+    row["sample_rate"] = sample_rate
+    row["step_s"] = 1.0 / sample_rate
+    row["octaves_per_volt"] = 1.0 + preset.tuning.scale_error_cents_per_octave / 1200.0
+    row["octaves_at_zero"] = math.log2(note_hz(preset.tuning.zero_volts, preset.tuning.a4_hz) / sample_rate)
+    row["steps_per_octave"] = preset.pitch.steps_per_octave
+    row["level"] = 10.0 ** (preset.oscillator.level_db / 20.0)
+    row["first_volts"] = first_volts
+    if preset.drone is not None:
+        hz = note_hz(preset.drone.note, preset.tuning.a4_hz)
+        if hz < 0.45 * sample_rate:
+            row["drone_increment"] = round(hz / sample_rate * PHASE_CYCLE)
+            row["drone_level"] = 10.0 ** (preset.drone.level_db / 20.0)
+    return settings
+
+
+def check_sample_rate(sample_rate: int) -> int:
+    """``sample_rate`` itself where the engine can run at it: a whole number of hertz, 8,000 to 384,000."""
+    if isinstance(sample_rate, bool) or int(sample_rate) != sample_rate or not LOWEST_RATE <= sample_rate <= HIGHEST_RATE:
+        raise SettingError(
+            f"sample rate {sample_rate!r}: give a whole number of hertz, {LOWEST_RATE} to {HIGHEST_RATE} (48000 is usual)"
+        )
+    return int(sample_rate)
+
+
+def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s: float = 30.0) -> Program:
+    """Settle what a preset makes of a phrase at a sample rate.
+
+    Parameters
+    ----------
+    preset, phrase
+        As `load_preset` and `load_phrase` give them.
+    sample_rate : int
+        Hz, 8,000 to 384,000.
+    tail_s : float
+        The longest time, in seconds, that the sound may go on after the last gate.
+
+    Raises
+    ------
+    SettingError
+        For a rate or a tail out of range, and for an oscillator file that can't be used.
+    """
+    rate = check_sample_rate(sample_rate)
+    if not 0.0 <= tail_s <= 3600.0:
+        raise SettingError(f"tail {tail_s!r}: give 0 to 3600 seconds")
+    pitch, gate = pitch_changes(preset, phrase), gate_changes(preset, phrase)
+    first_volts = pitch[0].held_volts
+    settings = _settings(preset, rate, first_volts)
+    cycle = None
+    if preset.oscillator.wave == "file":
+        assert preset.oscillator.file is not None
+        cycle = read_cycle(preset.oscillator.file)
+    low, high = _frequency_range(preset, [c.held_volts for c in pitch], float(settings["octaves_per_volt"][0]))
+    tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, low, high, rate)
+    pitch_events, gate_events = _pitch_events(pitch, rate), _gate_events(gate, rate)
+    latest = int(gate_events["sample"][-1]) + 1 + math.ceil(tail_s * rate)
+    length = quiet_sample(settings, gate_events, latest)
+    settings["length"] = length
+    warnings = _clip_warnings(preset, phrase, pitch)
+    return Program(
+        preset, phrase, rate, settings, pitch_events, gate_events, tables, pitch, gate, length == latest, warnings
+    )
