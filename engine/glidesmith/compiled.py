@@ -2,7 +2,8 @@
 
 No kernel uses fastmath: it would let the compiler reorder sums, and then the same settings would not give the
 same samples for every block size. ``error_model="numpy"`` keeps Python exceptions out of compiled code, and
-``nogil`` lets kernels run beside Python. Compiled code is kept between runs in a folder that belongs to the user
+``nogil`` lets kernels run beside Python. The compiler's memory runtime is off (``_nrt=False``): a kernel that would allocate
+does not compile, and passing arrays about touches no reference counts. Compiled code is kept between runs in a folder that belongs to the user
 alone (the files are pickles) and that is named after the kernels' sources, since numba notices changes only in the
 file that a function stands in. Where no such folder can be had, kernels are compiled anew in every process.
 """
@@ -65,7 +66,7 @@ def _compile(function: Function, **options: Any) -> Function:
     config.CACHE_DIR = CACHE_FOLDER or ""
     try:
         return numba.njit(  # type: ignore[no-any-return]
-            nogil=True, error_model="numpy", cache=CACHE_FOLDER is not None, **options
+            nogil=True, error_model="numpy", _nrt=False, cache=CACHE_FOLDER is not None, **options
         )(function)
     finally:
         config.CACHE_DIR = kept

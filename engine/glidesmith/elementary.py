@@ -32,24 +32,20 @@ def exp2(exponent: float) -> float:
     """2 to the power ``exponent``; relative error under 4e-16 for exponents from -1022 to 1023.
 
     Below -1022 the result is that of -1022 (2.2e-308), so that no denormal number is ever made. The exponent is
-    split into a whole number and a remainder of at most 1/2 either way, whose power is the Taylor series of
-    exp(r ln 2) to the 14th order (Abramowitz and Stegun, 4.2.1), evaluated by Horner's rule.
+    split into a whole number and a remainder r of at most 1/2 either way; (2^r − 1)/r is the polynomial of the tenth order
+    through the Chebyshev points of that interval (Abramowitz and Stegun, 25.4.38, for the points), 1.3e-17 off at most.
     """
     held = max(exponent, _LOWEST)
     whole = np.floor(held + 0.5)
-    r = (held - whole) * 0.6931471805599453
-    series = fma(r, 1.0 / 87178291200.0, 1.0 / 6227020800.0)
-    series = fma(r, series, 1.0 / 479001600.0)
-    series = fma(r, series, 1.0 / 39916800.0)
-    series = fma(r, series, 1.0 / 3628800.0)
-    series = fma(r, series, 1.0 / 362880.0)
-    series = fma(r, series, 1.0 / 40320.0)
-    series = fma(r, series, 1.0 / 5040.0)
-    series = fma(r, series, 1.0 / 720.0)
-    series = fma(r, series, 1.0 / 120.0)
-    series = fma(r, series, 1.0 / 24.0)
-    series = fma(r, series, 1.0 / 6.0)
-    series = fma(r, series, 0.5)
-    series = fma(r, series, 1.0)
-    series = fma(r, series, 1.0)
-    return series * np.int64((np.int64(whole) + 1023) << 52).view(np.float64)
+    r = held - whole
+    series = fma(r, 4.4549605981865186e-10, 7.072585949269223e-09)
+    series = fma(r, series, 1.0178062445845774e-07)
+    series = fma(r, series, 1.321544258792169e-06)
+    series = fma(r, series, 1.525273382983612e-05)
+    series = fma(r, series, 0.0001540353044173605)
+    series = fma(r, series, 0.0013333558146416936)
+    series = fma(r, series, 0.009618129107606888)
+    series = fma(r, series, 0.0555041086648216)
+    series = fma(r, series, 0.24022650695910097)
+    series = fma(r, series, 0.6931471805599453)
+    return fma(r, series, 1.0) * np.int64((np.int64(whole) + 1023) << 52).view(np.float64)

@@ -184,13 +184,12 @@ def _gate_events(changes: "Sequence[GateChange]", sample_rate: int) -> "NDArray[
     return np.array(rows, GATE_EVENT)
 
 
-def _frequency_range(preset: "Preset", volts: "Sequence[float]", octaves_per_volt: float) -> tuple[float, float]:
-    zero_hz = note_hz(preset.tuning.zero_volts, preset.tuning.a4_hz)
-    reach = [min(volts), max(volts)]
+def _lowest_hz(preset: "Preset", volts: "Sequence[float]", octaves_per_volt: float) -> float:
+    """The lowest frequency that a phrase can reach: its lowest target, and a glissando step under it."""
+    lowest = min(volts)
     if preset.pitch.steps_per_octave:
-        reach = [reach[0] - 1.0 / preset.pitch.steps_per_octave, reach[1] + 1.0 / preset.pitch.steps_per_octave]
-    ends = [zero_hz * 2.0 ** (v * octaves_per_volt) for v in reach]
-    return min(ends), max(ends)
+        lowest -= 1.0 / preset.pitch.steps_per_octave
+    return note_hz(preset.tuning.zero_volts, preset.tuning.a4_hz) * 2.0 ** (lowest * octaves_per_volt)
 
 
 def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchChange]") -> tuple[str, ...]:
@@ -267,8 +266,8 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
     if preset.oscillator.wave == "file":
         assert preset.oscillator.file is not None
         cycle = read_cycle(preset.oscillator.file)
-    low, high = _frequency_range(preset, [c.held_volts for c in pitch], float(settings["octaves_per_volt"][0]))
-    tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, low, high, rate)
+    lowest_hz = _lowest_hz(preset, [c.held_volts for c in pitch], float(settings["octaves_per_volt"][0]))
+    tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, lowest_hz, rate)
     pitch_events, gate_events = _pitch_events(pitch, rate), _gate_events(gate, rate)
     latest = int(gate_events["sample"][-1]) + 1 + math.ceil(tail_s * rate)
     length = quiet_sample(settings, gate_events, latest)

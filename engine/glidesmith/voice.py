@@ -30,7 +30,7 @@ if TYPE_CHECKING:
 
     from glidesmith.program import Program
 
-CHUNK = 256
+CHUNK = 512
 """Samples a pass. Short enough for the scratch arrays to stay in the processor's first cache."""
 
 QUIET = 10.0 ** (-90.0 / 20.0)
@@ -40,6 +40,7 @@ _NEVER = np.int64(1) << 62
 _PHASE_MASK = (1 << 62) - 1
 _RADIANS_PER_UNIT = 2.0 * np.pi / 2.0**62
 _DRONE_FADE_S = 0.02
+_LARGEST_FLOAT32 = 3.4028234663852886e38
 
 VOICE = np.dtype(
     [
@@ -70,7 +71,7 @@ Scratch = namedtuple(  # noqa: PYI024 - compiled code knows this kind, and no ot
 )
 Traces = namedtuple("Traces", "pitch_volts gain_control gain")  # noqa: PYI024
 Events = namedtuple("Events", "pitch gate")  # noqa: PYI024
-Tables = namedtuple("Tables", "levels coefficients first_level")  # noqa: PYI024
+Tables = namedtuple("Tables", "levels cells")  # noqa: PYI024
 
 
 @inlined
@@ -285,36 +286,38 @@ def _mix_drone(settings: Any, sample: int, out: Any) -> None:
 @vector_kernel
 def _amplify(level: float, wave: Any, gain: Any, out: Any) -> None:
     for i in range(out.size):
-        out[i] = np.float32(wave[i] * (gain[i] * level))
+        out[i] = np.float32(wave[i] * (gain[i] * level) + 0.0)  # + 0 so that silence is never -0
 
 
 @vector_kernel
-def _extremes(out: Any) -> float:
-    """The largest magnitude in ``out``; infinite where a sample is not a number."""
-    largest = np.float32(0.0)
-    odd = 0
+def _largest(out: Any) -> float:
+    """The largest magnitude in ``out``; not a number where a sample is not.
+
+    Magnitudes of IEEE 754 numbers are in the order of their bits, and not-a-number comes after infinity; whole numbers are
+    compared in whole registers where floating-point ones, for the sake of not-a-number, would not be.
+    """
+    largest = np.int32(0)
     for i in range(out.size):
-        size = abs(out[i])
-        odd += np.int64(not size <= np.float32(3.4e38))
-        largest = max(largest, size)
-    return np.inf if odd else float(largest)
+        largest = max(largest, np.int32(np.float32(out[i]).view(np.int32) & np.int32(0x7FFFFFFF)))
+    return float(np.int32(largest).view(np.float32))
 
 
 @kernel
 def _limit(voice: Any, out: Any) -> None:
     """The ceiling of 0 dBFS; what has to be clipped or was not finite is counted."""
-    largest = _extremes(out)
-    if largest > 1.0:
-        for i in range(out.size):
-            if not abs(out[i]) <= np.float32(3.4e38):
-                out[i] = np.float32(0.0)
-                voice.broken += 1
-            elif abs(out[i]) > np.float32(1.0):
-                voice.peak = max(voice.peak, float(abs(out[i])))
-                out[i] = np.float32(1.0) if out[i] > 0.0 else np.float32(-1.0)
-                voice.clipped += 1
-    else:
+    largest = _largest(out)
+    if largest <= 1.0:
         voice.peak = max(voice.peak, largest)
+        return
+    for i in range(out.size):
+        size = float(abs(out[i]))
+        if not size <= _LARGEST_FLOAT32:
+            out[i] = np.float32(0.0)
+            voice.broken += 1
+        elif size > 1.0:
+            out[i] = np.float32(1.0) if out[i] > 0.0 else np.float32(-1.0)
+            voice.clipped += 1
+            voice.peak = max(voice.peak, size)
 
 
 @kernel
@@ -335,12 +338,18 @@ def _play_chunk(settings: Any, voice: Any, events: Any, tables: Any, scratch: An
     _fill_heights(settings, volts, heights)
     phases, wave = scratch.phases[:count], scratch.wave[:count]
     voice.phase = advance_phase(scratch.increments[:count], voice.phase, phases)
-    oscillate(phases, heights, tables.levels, tables.coefficients, tables.first_level, wave)
+    oscillate(phases, heights, tables.levels, tables.cells, wave)
     _amplify(settings.level, wave, gain, out)
     if settings.drone_level > 0.0:
         _mix_drone(settings, voice.sample, out)
     _limit(voice, out)
     voice.sample += count
+
+
+@vector_kernel
+def _copy(source: Any, out: Any) -> None:
+    for i in range(out.size):
+        out[i] = source[i]
 
 
 @kernel
@@ -354,9 +363,9 @@ def play(settings: Any, voice: Any, events: Any, tables: Any, scratch: Any, out:
         end = min(first + CHUNK, out.size)
         _play_chunk(settings, voice, events, tables, scratch, out[first:end])
         if traces.pitch_volts.size:
-            traces.pitch_volts[first:end] = scratch.volts[: end - first]
-            traces.gain_control[first:end] = scratch.control[: end - first]
-            traces.gain[first:end] = scratch.gain[: end - first]
+            _copy(scratch.volts, traces.pitch_volts[first:end])
+            _copy(scratch.control, traces.gain_control[first:end])
+            _copy(scratch.gain, traces.gain[first:end])
 
 
 @kernel
@@ -434,7 +443,7 @@ class Voice:
         self._settings = program.settings
         self._events = Events(program.pitch_events, program.gate_events)
         tables = program.wavetables
-        self._tables = Tables(tables.levels, tables.coefficients, tables.first_level)
+        self._tables = Tables(tables.levels, tables.cells)
         self._scratch = make_scratch()
         self._state = np.zeros(1, VOICE)
         self.reset()
