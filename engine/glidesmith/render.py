@@ -77,20 +77,34 @@ def _report(program: Program, voice: Voice) -> Report:
     return Report(voice.sample, program.sample_rate, float(peak_db), voice.clipped, tuple(warnings))
 
 
-def stream(program: Program, sink: "Sink", progress: Callable[[int, int], None] | None = None) -> Report:
+def stream(
+    program: Program,
+    sink: "Sink",
+    progress: Callable[[int, int], None] | None = None,
+    watch: Callable[[Traces], None] | None = None,
+) -> Report:
     """Play a program into a sink, in blocks, and leave the sink open.
 
-    ``progress``, where given, is called after each block with the samples made and the samples in all.
+    ``progress``, where given, is called after each block with the samples made and the samples in all; ``watch`` with the
+    block's control signals, float64 (n,) each, which the next block overwrites.
     """
     voice = Voice(program)
     block = np.empty(BLOCK, np.float32)
+    signals = _room_for_traces(BLOCK if watch else 0)
     while voice.sample < program.length:
         part = block[: min(BLOCK, program.length - voice.sample)]
-        voice.play(part)
+        seen = Traces(*(signal[: part.size] for signal in signals))
+        voice.play(part, seen)
         sink.write(part)
+        if watch is not None:
+            watch(seen)
         if progress is not None:
             progress(voice.sample, program.length)
     return _report(program, voice)
+
+
+def _room_for_traces(count: int) -> Traces:
+    return Traces(*(np.empty(count) for _ in Traces._fields))
 
 
 def render_program(program: Program, trace: bool = False) -> Rendering:
@@ -100,7 +114,7 @@ def render_program(program: Program, trace: bool = False) -> Rendering:
     if not trace:
         voice.play(audio)
         return Rendering(audio, program.sample_rate, _report(program, voice))
-    traces = Traces(*(np.empty(program.length) for _ in Traces._fields))
+    traces = _room_for_traces(program.length)
     voice.play(audio, traces)
     return Rendering(audio, program.sample_rate, _report(program, voice), *traces)
 
