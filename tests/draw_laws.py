@@ -12,7 +12,8 @@ from glidesmith import Slew
 PICTURE = Path(__file__).resolve().parent.parent / "shared" / "pictures" / "laws.svg"
 SAMPLE_RATE = 2000
 
-# Colours that colour-blind people can tell apart: Okabe and Ito (2008), "Color universal design". Dashes tell them apart too.
+# Colours that colour-blind people can tell apart: Okabe and Ito (2008), "Color universal design". Dashes tell
+# them apart too.
 LAWS = (
     ("linear", {}, "#000000", "-"),
     ("rc", {}, "#0072B2", "-"),
@@ -43,7 +44,9 @@ def draw() -> Figure:
         for law, more, colour, dashes in LAWS:
             y = Slew(law, 1.0, 1.0, **more).run(np.full(time.size, target), SAMPLE_RATE, start=origin)
             axes.plot(time, y, color=colour, linestyle=dashes, linewidth=1.8)
-            name = axes.annotate(law, PLACES[law][side], color=colour, fontsize=10, fontweight="bold", zorder=5)
+            name = axes.annotate(
+                law, PLACES[law][side], color=colour, fontsize=10, fontweight="bold", zorder=5
+            )
             name.set_path_effects([withStroke(linewidth=3, foreground="white")])
         axes.set_title("an octave up" if side == 0 else "an octave down", fontsize=11)
         axes.set_xlabel("time in units of T")

@@ -33,6 +33,8 @@ def random_phrase(seconds, seed, shortest=0.05, longest=0.5, low=48, high=84) ->
     while at < seconds:
         lasts = Fraction(int(generator.integers(int(shortest * 1e6), int(longest * 1e6))), 1_000_003)
         over = Fraction(int(generator.integers(50, 130)), 100)
-        rows.append((at, at + lasts * over, int(generator.integers(low, high)), float(generator.uniform(0.3, 1))))
+        rows.append(
+            (at, at + lasts * over, int(generator.integers(low, high)), float(generator.uniform(0.3, 1)))
+        )
         at += lasts
     return make_phrase(*rows)

@@ -26,7 +26,9 @@ def test_a_12_bit_converter_over_10_volts_steps_by_2_93_cents():
     assert 0.5 < max(errors) <= 10 / 4096 * 1200 / 2
 
 
-@pytest.mark.parametrize(("volts", "held"), [(5.0, 5.0 - 10 / 16), (9.0, 5.0 - 10 / 16), (-5.0, -5.0), (-7.0, -5.0)])
+@pytest.mark.parametrize(
+    ("volts", "held"), [(5.0, 5.0 - 10 / 16), (9.0, 5.0 - 10 / 16), (-5.0, -5.0), (-7.0, -5.0)]
+)
 def test_outside_the_span_it_clips_and_says_so(volts, held):
     assert converted_volts(Converter(4, 10.0, 0.0), volts) == (held, volts != -5.0)
 

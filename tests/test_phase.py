@@ -18,7 +18,9 @@ NODES, WEIGHTS = np.polynomial.legendre.leggauss(40)
 
 
 def quadrature(frequency, begin, end, kinks=()):
-    """The integral of ``frequency``, Gauss-Legendre of order 40 on intervals graded towards ``begin``, cut at ``kinks``."""
+    """The integral of ``frequency``, Gauss-Legendre of order 40 on intervals graded towards ``begin``, cut at
+    ``kinks``.
+    """
     edges = begin + (end - begin) * np.concatenate([[0.0], 2.0 ** -np.arange(40.0, -1.0, -1.0)])
     edges = np.unique(np.concatenate([edges, [k for k in kinks if begin < k < end]]))
     middle, half = (edges[1:] + edges[:-1]) / 2, (edges[1:] - edges[:-1]) / 2
@@ -48,7 +50,9 @@ def output(law, side, origin, target, k, b, c):
 
 
 def expected_cycles(slews, notes, low_hz, span_s):
-    """Cycles of a phrase of (start, number, index of slew) from 0 to ``span_s``, first note sounding from 0."""
+    """Cycles of a phrase of (start, number, index of slew) from 0 to ``span_s``, first note sounding from
+    0.
+    """
     total, volts = 0.0, notes[0][1] / 12
     for i, (start, number, which) in enumerate(notes):
         end = notes[i + 1][0] if i + 1 < len(notes) else span_s
@@ -68,13 +72,20 @@ def played_phase(preset, phrase, rate, samples):
 
 @pytest.mark.parametrize("law", LAWS)
 def test_phase_stays_with_the_integral_over_many_fast_and_slow_glides(law):
-    """2,400 glides in 10 minutes over all laws when run long; a share of it otherwise, with the same bound."""
+    """2,400 glides in 10 minutes over all laws when run long.
+
+    A share of it otherwise, with the same bound.
+    """
     generator = np.random.default_rng(LAWS.index(law))
     count = 2400 if LONG else 240
     step = Fraction(600, 2400)
     worst = 0.0
     for rise, fall in ((0.0, 1.0), (1e-5, 3e-4), (1e-3, 0.01), (0.03, 0.2)):
-        k, b, c = float(generator.uniform(-8, 8)), float(generator.uniform(0.1, 2)), float(generator.uniform(0.01, 1))
+        k, b, c = (
+            float(generator.uniform(-8, 8)),
+            float(generator.uniform(0.1, 2)),
+            float(generator.uniform(0.01, 1)),
+        )
         slew = {"law": law, "rise": rise, "fall": fall, "curvature": k, "bend": b, "knee": c}
         numbers = (np.cumsum(generator.integers(1, 36, count)) % 36) - 12  # no note twice in a row
         starts = [i * step + Fraction(int(generator.integers(0, 9999)), 1_000_003) for i in range(count)]

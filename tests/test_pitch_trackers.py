@@ -1,17 +1,17 @@
 """Independent pitch trackers on the rendered audio find each glide where it should be.
 
-Two of them: interpolated zero crossings, and the autocorrelation method of Boersma (1993), "Accurate short-term analysis of
-the fundamental frequency", as praat-parselmouth has it. Bounds (the project's own): a glide's start within 2 ms and its
-duration within 3 %, for glides of 50 ms and longer on notes from 200 Hz up.
+Two of them: interpolated zero crossings, and the autocorrelation method of Boersma (1993), "Accurate
+short-term analysis of the fundamental frequency", as praat-parselmouth has it. Bounds (the project's own): a
+glide's start within 2 ms and its duration within 3 %, for glides of 50 ms and longer on notes from 200 Hz up.
 """
 
 import numpy as np
 import parselmouth
 import pytest
-from making import make_phrase, make_preset
 from scipy.optimize import least_squares
 
 from glidesmith import render
+from making import make_phrase, make_preset
 
 START_S = 0.2
 WITHIN_START_S = 2e-3
@@ -44,7 +44,9 @@ def glide_course(law, progress):
 
 
 def fitted(law, times, hz, low_hz, high_hz, guess_s, window_s):
-    """Start and duration of the law's course that fits the tracked pitch best, smoothed as the tracker's window does."""
+    """Start and duration of the law's course that fits the tracked pitch best, smoothed as the tracker's
+    window does.
+    """
     octaves = np.log2(hz / low_hz) / np.log2(high_hz / low_hz)
     spread = np.linspace(-0.5, 0.5, 9) * window_s
     weight = np.hanning(11)[1:-1]

@@ -1,13 +1,15 @@
-"""The slew laws against their closed forms, against `scipy.integrate.solve_ivp`, and against handbook values."""
+"""The slew laws against their closed forms, against `scipy.integrate.solve_ivp`, and against handbook
+values.
+"""
 
 import itertools
 
 import numpy as np
 import pytest
-from conftest import LONG
 from scipy.integrate import solve_ivp
 from scipy.signal import lfilter
 
+from conftest import LONG
 from glidesmith import SettingError, Slew
 from glidesmith.slew import (
     GLIDE,
@@ -112,7 +114,14 @@ def test_run_is_what_solve_ivp_makes_of_the_differential_equation(law, timing):
         lasts = float(begun(slew, origin, target)["lasts"])
         times = np.linspace(0, 0.9 * min(lasts, 8 * side), 50)
         solved = solve_ivp(
-            slope, (0, times[-1]), [origin], "DOP853", times, args=(target, slew, side), rtol=1e-12, atol=1e-13
+            slope,
+            (0, times[-1]),
+            [origin],
+            "DOP853",
+            times,
+            args=(target, slew, side),
+            rtol=1e-12,
+            atol=1e-13,
         )
         glide = begun(slew, origin, target)
         assert np.abs([glide_volts(glide, t) for t in times] - solved.y[0]).max() < WITHIN_VOLTS, slew
@@ -126,7 +135,8 @@ def test_a_phrase_of_targets_does_not_depend_on_the_sample_rate(law, timing):
         slew = random_slew(generator, law, timing)
         targets = np.repeat(generator.uniform(-2, 3, 12), 20)
         at_300_hz = [
-            slew.run(np.repeat(targets, rate // 300), rate)[:: rate // 300] for rate in (44_100, 48_000, 96_000)
+            slew.run(np.repeat(targets, rate // 300), rate)[:: rate // 300]
+            for rate in (44_100, 48_000, 96_000)
         ]
         assert np.ptp(at_300_hz, axis=0).max() < WITHIN_VOLTS, slew
 
@@ -154,7 +164,10 @@ def test_a_minute_long_glide_gathers_no_error(slew, rate):
 
 
 def test_rc_is_a_one_pole_filter_at_audio_rate():
-    """Reference: `scipy.signal.lfilter` with a = exp(−dt/T), which delays by the sample that run's timing counts."""
+    """Reference.
+
+    `scipy.signal.lfilter` with a = exp(−dt/T), which delays by the sample that run's timing counts.
+    """
     x = np.random.default_rng(23).standard_normal(48_000)
     for time_constant in (1e-6, 1e-4, 0.01, 3.0):
         a = np.exp(-1 / 48_000 / time_constant)
@@ -163,7 +176,9 @@ def test_rc_is_a_one_pole_filter_at_audio_rate():
         assert np.abs(y[1:] - filtered[:-1]).max() < WITHIN_VOLTS
 
 
-@pytest.mark.parametrize(("rise", "fall"), [(0.002, 0.03), (0.03, 0.002), (0.0, 0.01), (0.01, 0.0), (0.0, 0.0)])
+@pytest.mark.parametrize(
+    ("rise", "fall"), [(0.002, 0.03), (0.03, 0.002), (0.0, 0.01), (0.01, 0.0), (0.0, 0.0)]
+)
 def test_rc_with_two_sides_is_the_plain_recurrence(rise, fall):
     x = np.random.default_rng(24).standard_normal(20_000)
     y = Slew("rc", rise, fall).run(x, 48_000, start=0.3)
@@ -186,9 +201,18 @@ def test_audio_rate_noise_steps_by_the_closed_form_each_sample(law):
 
 
 def test_rc_handbook_percentages():
-    """Part of the way after 1 to 5 time constants: 63.2, 86.5, 95.0, 98.2, 99.3 % (any electronics handbook; from memory)."""
+    """Part of the way after 1 to 5 time constants.
+
+    63.2, 86.5, 95.0, 98.2, 99.3 % (any electronics handbook; from memory).
+    """
     y = Slew("rc", 0.1, 0.1).run(np.ones(48_000), 48_000)
-    assert np.round(100 * y[[4800, 9600, 14_400, 19_200, 24_000]], 1).tolist() == [63.2, 86.5, 95.0, 98.2, 99.3]
+    assert np.round(100 * y[[4800, 9600, 14_400, 19_200, 24_000]], 1).tolist() == [
+        63.2,
+        86.5,
+        95.0,
+        98.2,
+        99.3,
+    ]
 
 
 def test_rc_rise_time_is_2_2_time_constants():
@@ -248,7 +272,9 @@ def test_soft_is_safe_at_both_ends_of_its_knee(knee):
 
 def test_durations_are_what_the_timing_says():
     for law in ("linear", "curve", "cosine"):
-        by_rate, fixed = (begun(Slew(law, 0.3, 0.3, timing=t, curvature=2.0), 0.0, 2.5) for t in ("rate", "fixed"))
+        by_rate, fixed = (
+            begun(Slew(law, 0.3, 0.3, timing=t, curvature=2.0), 0.0, 2.5) for t in ("rate", "fixed")
+        )
         assert by_rate["lasts"] == pytest.approx(0.75)
         assert fixed["lasts"] == pytest.approx(0.3)
     assert [Slew(law, 1, 1).timing for law in ("linear", "curve", "cosine")] == ["rate", "fixed", "fixed"]
@@ -320,7 +346,12 @@ def test_new_settings_in_mid_glide_go_on_from_the_present_output(law):
     glide = begun(before, 0.0, 2.0)
     elapsed = 0.3 * float(glide["lasts"])
     volts = glide_volts(glide, elapsed)
-    for after in (Slew("rc", 0.1, 0.1), Slew("linear", 0.1, 0.1), Slew("cosine", 0.5, 0.5), Slew(law, 0.0, 0.0)):
+    for after in (
+        Slew("rc", 0.1, 0.1),
+        Slew("linear", 0.1, 0.1),
+        Slew("cosine", 0.5, 0.5),
+        Slew(law, 0.0, 0.0),
+    ):
         moved = glide.copy()
         glide_resettle(moved, after.record()[0], elapsed)
         assert moved["target"] == 2.0
@@ -328,7 +359,8 @@ def test_new_settings_in_mid_glide_go_on_from_the_present_output(law):
 
 
 @pytest.mark.parametrize(
-    ("before", "after"), list(itertools.product([("linear", "fixed"), ("curve", "rate"), ("cosine", "fixed")], repeat=2))
+    ("before", "after"),
+    list(itertools.product([("linear", "fixed"), ("curve", "rate"), ("cosine", "fixed")], repeat=2)),
 )
 def test_a_timed_glide_keeps_the_share_that_was_left_of_its_new_duration(before, after):
     glide = begun(Slew(before[0], 0.4, 0.4, timing=before[1], curvature=1.0), 0.0, 2.0)

@@ -1,17 +1,21 @@
-"""The whole chain: the same bits however it is run, the same voltages at every rate, and finite whatever the settings."""
+"""The whole chain.
 
+The same bits however it is run, the same voltages at every rate, and finite whatever the settings.
+"""
+
+import itertools
 from concurrent.futures import ThreadPoolExecutor
 
 import numpy as np
 import pytest
-from conftest import LONG
-from making import make_phrase, make_preset, random_phrase
 from scipy.integrate import solve_ivp
 
+from conftest import LONG
 from glidesmith import render
 from glidesmith.program import compile_program
 from glidesmith.slew import LAWS
 from glidesmith.voice import Traces, Voice
+from making import make_phrase, make_preset, random_phrase
 
 ENVELOPE = {"attack": 0.02, "decay": 0.1, "sustain": 0.6, "release": 0.15}
 VARIED = {
@@ -33,7 +37,8 @@ VARIED = {
         pitch={"law": "exp", "rise": 0.3, "fall": 0.2, "steps_per_octave": 7},
     ),
     "soft, converter": make_preset(
-        pitch={"law": "soft", "rise": 0.05, "fall": 0.1}, converter={"bits": 8, "span_volts": 12.0, "rate_hz": 333.0}
+        pitch={"law": "soft", "rise": 0.05, "fall": 0.1},
+        converter={"bits": 8, "span_volts": 12.0, "rate_hz": 333.0},
     ),
     "curve, overlap": make_preset(
         pitch={"law": "curve", "rise": 0.1, "fall": 0.2, "curvature": 4.0, "glide": "overlap"},
@@ -86,7 +91,10 @@ def test_one_and_eight_threads_and_later_runs_give_the_same_bits():
 
 @pytest.mark.parametrize("law", LAWS)
 def test_a_phrase_gives_the_same_voltages_at_44_1_48_and_96_khz(law):
-    """DESIGN section 4: to 1e-9 V for pitch and for gain without an envelope, where instants coincide (every 1/300 s)."""
+    """DESIGN section 4.
+
+    To 1e-9 V for pitch and for gain without an envelope, where instants coincide (every 1/300 s).
+    """
     preset = make_preset(
         pitch={"law": law, "rise": 0.13, "fall": 0.07, "curvature": 3.0},
         gain={"law": law, "rise": 0.03, "fall": 0.05, "curvature": -3.0},
@@ -139,7 +147,7 @@ def test_an_enveloped_gain_agrees_with_solve_ivp_at_any_rate(law, shape):
     times = np.arange(0, 0.5, 1 / 300)
     kinks = [0, attack, attack + decay, held, held + release, 0.5]
     expected, y = np.empty(times.size), 0.0
-    for begin, end in zip(kinks, kinks[1:], strict=False):
+    for begin, end in itertools.pairwise(kinks):
         with np.errstate(divide="ignore"):  # inside the solver, where a step's error is 0
             solved = solve_ivp(
                 slope, (begin, end), [y], "Radau", rtol=1e-9, atol=1e-11, dense_output=True, max_step=2e-3
@@ -154,8 +162,12 @@ def test_an_enveloped_gain_agrees_with_solve_ivp_at_any_rate(law, shape):
 
 
 def test_the_value_at_an_event_is_the_value_before_it():
-    preset = make_preset(pitch={"law": "linear", "rise": 0, "fall": 0}, gain={"law": "linear", "rise": 0, "fall": 0})
-    rendering = render(preset, make_phrase(("1/1000", "2/1000", 60), ("2/1000", "3/1000", 72)), 48_000, trace=True)
+    preset = make_preset(
+        pitch={"law": "linear", "rise": 0, "fall": 0}, gain={"law": "linear", "rise": 0, "fall": 0}
+    )
+    rendering = render(
+        preset, make_phrase(("1/1000", "2/1000", 60), ("2/1000", "3/1000", 72)), 48_000, trace=True
+    )
     assert rendering.gain[[48, 49, 144]].tolist() == [0.0, 1.0, 1.0]
     assert rendering.pitch_volts[[0, 96, 97]].tolist() == [0.0, 0.0, 1.0]
     assert rendering.audio.size == 145
@@ -167,7 +179,9 @@ def test_an_event_between_samples_is_split_there():
         phrase = make_phrase((0, 1, 60), (start, 1, 84))
         volts = render(preset, phrase, 48_000, trace=True).pitch_volts
         at = float(phrase.notes[1].start)
-        assert np.allclose(volts[:9000], np.clip((np.arange(9000) / 48_000 - at) / 0.1, 0, 2), rtol=0, atol=1e-12)
+        assert np.allclose(
+            volts[:9000], np.clip((np.arange(9000) / 48_000 - at) / 0.1, 0, 2), rtol=0, atol=1e-12
+        )
 
 
 def test_glide_modes():
@@ -212,7 +226,8 @@ def test_velocity_scales_the_gate_in_decibels():
 
 def test_the_converter_is_heard_in_the_pitch_and_held_until_its_tick():
     preset = make_preset(
-        pitch={"law": "linear", "rise": 0, "fall": 0}, converter={"bits": 8, "span_volts": 10.0, "rate_hz": 10.0}
+        pitch={"law": "linear", "rise": 0, "fall": 0},
+        converter={"bits": 8, "span_volts": 10.0, "rate_hz": 10.0},
     )
     volts = render(preset, make_phrase((0, 2, 60), ("1/3", 2, 67)), 48_000, trace=True).pitch_volts
     assert volts[19_200] == 0.0
@@ -274,7 +289,10 @@ def test_clipped_samples_are_counted_held_at_the_ceiling_and_reported():
 
 @pytest.mark.parametrize("law", LAWS)
 def test_extremes_are_finite_and_under_the_ceiling(law):
-    """Denormals, silence, T from 0 to 60 s, pitch from -5 to +7 V (MIDI notes 0 to 127 reach -5 to +5.6 V; 0 V moved for the rest)."""
+    """Denormals, silence, T from 0 to 60 s, pitch from -5 to +7 V (MIDI notes 0 to 127 reach -5 to +5.6 V.
+
+    0 V moved for the rest).
+    """
     generator = np.random.default_rng(LAWS.index(law))
     sides = (0.0, 1e-6, 1e-3, 60.0)
     for case in range(24 if LONG else 8):
@@ -293,7 +311,9 @@ def test_extremes_are_finite_and_under_the_ceiling(law):
             gain={"law": law, "rise": gain_rise, "fall": gain_fall},
             tuning={"zero_volts": "G3" if case % 2 else "C4"},
         )
-        phrase = make_phrase((0, "1/10", 0), ("1/10", "2/10", 127), ("2/10", "3/10", 1), ("5/10", "6/10", 115))
+        phrase = make_phrase(
+            (0, "1/10", 0), ("1/10", "2/10", 127), ("2/10", "3/10", 1), ("5/10", "6/10", 115)
+        )
         rate = int(generator.choice([22_050, 48_000, 192_000]))
         rendering = render(preset, phrase, rate, trace=True, tail_s=0.3)
         for signal in (rendering.audio, rendering.pitch_volts, rendering.gain_control, rendering.gain):

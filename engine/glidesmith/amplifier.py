@@ -21,7 +21,10 @@ def amplifier_record(law: str, range_db: float) -> "np.ndarray[Any, np.dtype[Any
 
 @inlined
 def amplifier_gain(amplifier: Any, control: float) -> float:
-    """The gain for a control level: the level itself, or (10^(r u/20) − 1)/(10^(r/20) − 1) with r in decibels."""
+    """The gain for a control level.
+
+    The level itself, or (10^(r u/20) − 1)/(10^(r/20) − 1) with r in decibels.
+    """
     if amplifier.decibel:
         return (exp2(amplifier.octaves * control) - 1.0) * amplifier.scale
     return control

@@ -2,10 +2,11 @@
 
 No kernel uses fastmath: it would let the compiler reorder sums, and then the same settings would not give the
 same samples for every block size. ``error_model="numpy"`` keeps Python exceptions out of compiled code, and
-``nogil`` lets kernels run beside Python. The compiler's memory runtime is off (``_nrt=False``): a kernel that would allocate
-does not compile, and passing arrays about touches no reference counts. Compiled code is kept between runs in a folder that belongs to the user
-alone (the files are pickles) and that is named after the kernels' sources, since numba notices changes only in the
-file that a function stands in. Where no such folder can be had, kernels are compiled anew in every process.
+``nogil`` lets kernels run beside Python. The compiler's memory runtime is off (``_nrt=False``): a kernel that
+would allocate does not compile, and passing arrays about touches no reference counts. Compiled code is kept
+between runs in a folder that belongs to the user alone (the files are pickles) and that is named after the
+kernels' sources, since numba notices changes only in the file that a function stands in. Where no such folder
+can be had, kernels are compiled anew in every process.
 """
 
 import hashlib
@@ -43,7 +44,10 @@ def _sources_digest() -> str:
 
 
 def _private_folder() -> str | None:
-    """The folder for compiled code, made if need be; None where it can't be had or others could write to it."""
+    """The folder for compiled code, made if need be.
+
+    None where it can't be had or others could write to it.
+    """
     try:
         folder = _cache_root() / _sources_digest()
         folder.mkdir(mode=0o700, parents=True, exist_ok=True)
@@ -91,5 +95,8 @@ class _Disjoint(CompilerBase):  # type: ignore[misc]
 
 
 def vector_kernel(function: Function) -> Function:
-    """As `kernel`, for array passes whose arrays never overlap: the promise lets loops use vector registers."""
+    """As `kernel`, for array passes whose arrays never overlap.
+
+    The promise lets loops use vector registers.
+    """
     return _compile(function, pipeline_class=_Disjoint)

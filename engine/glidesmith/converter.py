@@ -11,8 +11,8 @@ if TYPE_CHECKING:
 def converted_volts(converter: "Converter", volts: float) -> tuple[float, bool]:
     """The nearest of the converter's steps, and whether the voltage was clipped to its range.
 
-    The steps are those of a bipolar converter: 2^bits codes, ``span_volts``/2^bits apart, from -span/2 to one step under
-    +span/2 (two's complement).
+    The steps are those of a bipolar converter: 2^bits codes, ``span_volts``/2^bits apart, from -span/2 to one
+    step under +span/2 (two's complement).
     """
     step = converter.span_volts / 2**converter.bits
     code = math.floor(volts / step + 0.5)
@@ -22,7 +22,10 @@ def converted_volts(converter: "Converter", volts: float) -> tuple[float, bool]:
 
 
 def held_time(converter: "Converter", time: Fraction) -> Fraction:
-    """The tick at which a change at ``time`` seconds comes through: the first of k/``rate_hz`` not before it."""
+    """The tick at which a change at ``time`` seconds comes through.
+
+    The first of k/``rate_hz`` not before it.
+    """
     if converter.rate_hz == 0.0:
         return time
     rate = Fraction(converter.rate_hz)

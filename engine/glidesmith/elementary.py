@@ -1,9 +1,10 @@
 """Arithmetic in a form that compilers turn into vector code and that gives every machine the same bits.
 
-The platform's own `exp2` is a call per sample, and its last bit differs from one system to the next. This one is plain
-multiplying and adding, so that a loop over it fills whole vector registers. Products that are added are fused
-(IEEE 754-2008, 5.4.1, fusedMultiplyAdd: rounded once), by name and not at the compiler's discretion: a fused operation is defined
-to the last bit, whether the processor has one or a library stands in for it.
+The platform's own `exp2` is a call per sample, and its last bit differs from one system to the next. This one
+is plain multiplying and adding, so that a loop over it fills whole vector registers. Products that are added
+are fused (IEEE 754-2008, 5.4.1, fusedMultiplyAdd: rounded once), by name and not at the compiler's
+discretion: a fused operation is defined to the last bit, whether the processor has one or a library stands in
+for it.
 """
 
 from typing import Any
@@ -31,9 +32,10 @@ def fma(typing_context: Any, a: Any, b: Any, c: Any) -> Any:
 def exp2(exponent: float) -> float:
     """2 to the power ``exponent``; relative error under 4e-16 for exponents from -1022 to 1023.
 
-    Below -1022 the result is that of -1022 (2.2e-308), so that no denormal number is ever made. The exponent is
-    split into a whole number and a remainder r of at most 1/2 either way; (2^r − 1)/r is the polynomial of the tenth order
-    through the Chebyshev points of that interval (Abramowitz and Stegun, 25.4.38, for the points), 1.3e-17 off at most.
+    Below -1022 the result is that of -1022 (2.2e-308), so that no denormal number is ever made. The exponent
+    is split into a whole number and a remainder r of at most 1/2 either way; (2^r − 1)/r is the polynomial of
+    the tenth order through the Chebyshev points of that interval (Abramowitz and Stegun, 25.4.38, for the
+    points), 1.3e-17 off at most.
     """
     held = max(exponent, _LOWEST)
     whole = np.floor(held + 0.5)

@@ -1,7 +1,8 @@
 """Which key sounds when: last note first, on one voice.
 
-A phrase's notes are keys pressed and released. The latest pressed of the held keys sounds; releasing it returns to the
-latest that is still held. At one moment releases come before presses, and of two presses the later-listed wins.
+A phrase's notes are keys pressed and released. The latest pressed of the held keys sounds; releasing it
+returns to the latest that is still held. At one moment releases come before presses, and of two presses the
+later-listed wins.
 """
 
 from collections.abc import Iterable, Iterator
@@ -20,9 +21,9 @@ PRESS, LEGATO, RETURN, RELEASE = "press", "legato", "return", "release"
 class KeyChange:
     """A moment at which another key sounds, or none.
 
-    ``time`` is in seconds. ``note`` is the index in the phrase of the note that sounds from now on; for a release of the
-    last key held it is the note that sounded, whose pitch stays. ``kind`` is ``press`` (no key was held), ``legato``
-    (an earlier key still is), ``return`` (to a key held all along) or ``release``.
+    ``time`` is in seconds. ``note`` is the index in the phrase of the note that sounds from now on; for a
+    release of the last key held it is the note that sounded, whose pitch stays. ``kind`` is ``press`` (no key
+    was held), ``legato`` (an earlier key still is), ``return`` (to a key held all along) or ``release``.
     """
 
     time: Fraction

@@ -1,13 +1,15 @@
 """The oscillator's phase: the exact integral of its frequency, as whole-number increments.
 
-The frequency is g = 2^(s V + o) cycles a sample, with s octaves per volt and o octaves at 0 V. Over a sample in the middle
-of a glide its integral is the trapezoid's with the first Euler-Maclaurin correction (Abramowitz and Stegun, 23.1.30),
+The frequency is g = 2^(s V + o) cycles a sample, with s octaves per volt and o octaves at 0 V. Over a sample
+in the middle of a glide its integral is the trapezoid's with the first Euler-Maclaurin correction (Abramowitz
+and Stegun, 23.1.30),
 
     (g0 + g1)/2 + (g0' − g1')/12,        g' = g s ln 2 V'   per sample,
 
-whose error is of the fourth order in the sample's length. Where the correction is not small (fast glides, and the samples in
-which something happens) the integral is taken by Gauss-Legendre quadrature in steps that adapt (Abramowitz and Stegun,
-25.4.30, 3 points checked by 5). Increments are then rounded to 2^-62 of a cycle and summed as whole numbers, which is exact.
+whose error is of the fourth order in the sample's length. Where the correction is not small (fast glides, and
+the samples in which something happens) the integral is taken by Gauss-Legendre quadrature in steps that adapt
+(Abramowitz and Stegun, 25.4.30, 3 points checked by 5). Increments are then rounded to 2^-62 of a cycle and
+summed as whole numbers, which is exact.
 """
 
 from typing import Any
@@ -82,7 +84,10 @@ def _smooth_cycles(settings: Any, glide: Any, begin: float, end: float) -> float
     while begin < end:
         length = min(length, end - begin)
         fine = _gauss_5(settings, glide, begin, length)
-        if abs(fine - _gauss_3(settings, glide, begin, length)) <= _TOLERANCE * step_s or length < _SHORTEST * step_s:
+        if (
+            abs(fine - _gauss_3(settings, glide, begin, length)) <= _TOLERANCE * step_s
+            or length < _SHORTEST * step_s
+        ):
             total += fine
             begin = end if length >= end - begin else begin + length
             length *= 2.0
@@ -126,10 +131,11 @@ def glide_cycles(settings: Any, glide: Any, begin: float, end: float) -> float:
 
 @vector_kernel
 def smooth_increments(settings: Any, volts: Any, rates: Any, cycles: Any, bends: Any, increments: Any) -> int:
-    """Increments of the samples between the instants of one glide; returns how many need `glide_cycles` instead.
+    """Increments of the samples between the instants of one glide; returns how many need `glide_cycles`
+    instead.
 
-    ``volts``, ``rates``, and the scratch ``cycles`` and ``bends`` are (n + 1,), ``increments`` (n,) in phase units. A sample
-    whose correction is not small gets a negative increment: its size is then unknown.
+    ``volts``, ``rates``, and the scratch ``cycles`` and ``bends`` are (n + 1,), ``increments`` (n,) in phase
+    units. A sample whose correction is not small gets a negative increment: its size is then unknown.
     """
     per_volt, at_zero, bend = settings.octaves_per_volt, settings.octaves_at_zero, 0.0
     bend = settings.octaves_per_volt * settings.step_s * (_LN_2 / 12.0)

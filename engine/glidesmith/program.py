@@ -1,7 +1,8 @@
 """The flat record that compiled code reads, made from a preset and a phrase.
 
-Everything that takes thinking is settled here, in Python and in exact numbers: which key sounds, whether its pitch glides or
-jumps, at which sample and which part of it. What is left for the audio thread is a walk through two lists of events.
+Everything that takes thinking is settled here, in Python and in exact numbers: which key sounds, whether its
+pitch glides or jumps, at which sample and which part of it. What is left for the audio thread is a walk
+through two lists of events.
 """
 
 import math
@@ -55,19 +56,26 @@ SETTINGS = np.dtype(
 )
 """One preset's settings at one sample rate.
 
-``step_s``: seconds a sample. ``octaves_at_zero``: log2 of cycles a sample at 0 V; ``octaves_per_volt``: 1 but for tracking
-error. ``level``, ``drone_level``: amplitudes. ``drone_increment``: phase a sample. ``length``: samples in all.
+``step_s``: seconds a sample. ``octaves_at_zero``: log2 of cycles a sample at 0 V; ``octaves_per_volt``: 1 but
+for tracking error. ``level``, ``drone_level``: amplitudes. ``drone_increment``: phase a sample. ``length``:
+samples in all.
 """
 
 PITCH_EVENT = np.dtype(
     [("sample", np.int64), ("fraction", np.float64), ("volts", np.float64), ("jump", np.int64)], align=True
 )
-"""At ``sample`` + ``fraction`` the pitch's target becomes ``volts``; with ``jump`` the pitch is there at once."""
+"""At ``sample`` + ``fraction`` the pitch's target becomes ``volts``.
+
+With ``jump`` the pitch is there at once.
+"""
 
 
 @dataclass(frozen=True, slots=True)
 class PitchChange:
-    """A new target for the pitch: what the phrase asks (``volts``, at ``time``) and what the converter makes of it."""
+    """A new target for the pitch.
+
+    What the phrase asks (``volts``, at ``time``) and what the converter makes of it.
+    """
 
     time: Fraction
     note: int
@@ -79,7 +87,10 @@ class PitchChange:
 
 @dataclass(frozen=True, slots=True)
 class GateChange:
-    """A new level of the gate, 0 to 1 (0: closed). ``opens``: no key was held; ``trigger``: the envelope starts."""
+    """A new level of the gate, 0 to 1 (0.
+
+    Closed). ``opens``: no key was held; ``trigger``: the envelope starts.
+    """
 
     time: Fraction
     note: int
@@ -113,7 +124,13 @@ class Program:
 def slew_of(settings: "SlewSettings") -> Slew:
     """The slew that a preset's table describes."""
     return Slew(
-        settings.law, settings.rise, settings.fall, settings.bend, settings.knee, settings.curvature, settings.timing
+        settings.law,
+        settings.rise,
+        settings.fall,
+        settings.bend,
+        settings.knee,
+        settings.curvature,
+        settings.timing,
     )
 
 
@@ -157,12 +174,16 @@ def gate_changes(preset: "Preset", phrase: "Phrase") -> tuple[GateChange, ...]:
         velocity = phrase.notes[change.note].velocity
         level = 10.0 ** (-preset.amplifier.velocity_db * (1.0 - velocity) / 20.0)
         opens = change.kind == PRESS
-        changes.append(GateChange(change.time, change.note, level, opens, opens or (retrigger and change.kind == LEGATO)))
+        changes.append(
+            GateChange(change.time, change.note, level, opens, opens or (retrigger and change.kind == LEGATO))
+        )
     return tuple(changes)
 
 
 def sample_position(time: Fraction, sample_rate: int) -> tuple[int, float]:
-    """The sample at or before ``time`` seconds, and how far beyond it the time lies, in samples from 0 to under 1."""
+    """The sample at or before ``time`` seconds, and how far beyond it the time lies, in samples from 0 to
+    under 1.
+    """
     exact = time * sample_rate
     sample = math.floor(exact)
     fraction = float(exact - sample)
@@ -170,7 +191,10 @@ def sample_position(time: Fraction, sample_rate: int) -> tuple[int, float]:
 
 
 def _pitch_events(changes: "Sequence[PitchChange]", sample_rate: int) -> "NDArray[Any]":
-    """The converter's output as events; of several changes that one tick lets through, the last one counts."""
+    """The converter's output as events.
+
+    Of several changes that one tick lets through, the last one counts.
+    """
     rows: list[tuple[int, float, float, bool]] = []
     for index, change in enumerate(changes[1:], start=1):
         if index + 1 < len(changes) and changes[index + 1].held_time == change.held_time:
@@ -201,8 +225,9 @@ def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchC
     first = min(clipped)
     volts = note_volts(preset, phrase.notes[first].number)
     return (
-        f"converter: {len(clipped)} of the phrase's notes lie outside ±{preset.converter.span_volts / 2:g} V and are clipped "
-        f"(the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move tuning.zero_volts",
+        f"converter: {len(clipped)} of the phrase's notes lie outside ±{preset.converter.span_volts / 2:g} V "
+        f"and are clipped (the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move "
+        "tuning.zero_volts",
     )
 
 
@@ -232,9 +257,14 @@ def _settings(preset: "Preset", sample_rate: int, first_volts: float) -> "NDArra
 
 def check_sample_rate(sample_rate: int) -> int:
     """``sample_rate`` itself where the engine can run at it: a whole number of hertz, 8,000 to 384,000."""
-    if isinstance(sample_rate, bool) or int(sample_rate) != sample_rate or not LOWEST_RATE <= sample_rate <= HIGHEST_RATE:
+    if (
+        isinstance(sample_rate, bool)
+        or int(sample_rate) != sample_rate
+        or not LOWEST_RATE <= sample_rate <= HIGHEST_RATE
+    ):
         raise SettingError(
-            f"sample rate {sample_rate!r}: give a whole number of hertz, {LOWEST_RATE} to {HIGHEST_RATE} (48000 is usual)"
+            f"sample rate {sample_rate!r}: give a whole number of hertz, {LOWEST_RATE} to {HIGHEST_RATE} "
+            "(48000 is usual)"
         )
     return int(sample_rate)
 
@@ -274,5 +304,15 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
     settings["length"] = length
     warnings = _clip_warnings(preset, phrase, pitch)
     return Program(
-        preset, phrase, rate, settings, pitch_events, gate_events, tables, pitch, gate, length == latest, warnings
+        preset,
+        phrase,
+        rate,
+        settings,
+        pitch_events,
+        gate_events,
+        tables,
+        pitch,
+        gate,
+        length == latest,
+        warnings,
     )

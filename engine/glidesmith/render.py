@@ -40,8 +40,9 @@ class Report:
 class Rendering:
     """A phrase as rendered, in memory.
 
-    ``audio`` is float32 (n,), within ±1. With a trace, ``pitch_volts`` (V, after glissando steps), ``gain_control`` (0 to 1,
-    after the gain slew) and ``gain`` (after the amplifier's law) are float64 (n,); otherwise None.
+    ``audio`` is float32 (n,), within ±1. With a trace, ``pitch_volts`` (V, after glissando steps),
+    ``gain_control`` (0 to 1, after the gain slew) and ``gain`` (after the amplifier's law) are float64 (n,);
+    otherwise None.
     """
 
     audio: "NDArray[np.float32]"
@@ -67,11 +68,13 @@ def _report(program: Program, voice: Voice) -> Report:
     if voice.clipped:
         over_db = 20.0 * np.log10(voice.peak)
         warnings.append(
-            f"{voice.clipped} samples were clipped at 0 dBFS ({over_db:.1f} dB over); lower oscillator.level_db by as much"
+            f"{voice.clipped} samples were clipped at 0 dBFS ({over_db:.1f} dB over); lower "
+            "oscillator.level_db by as much"
         )
     if program.cut_off:
         warnings.append(
-            f"the gain was still over -90 dB after the tail and is cut off there; raise the tail, or shorten gain.fall"
+            "the gain was still over -90 dB after the tail and is cut off there; raise the tail, or shorten "
+            "gain.fall or the envelope's release"
         )
     peak_db = 20.0 * np.log10(min(voice.peak, 1.0)) if voice.peak > 0.0 else -np.inf
     return Report(voice.sample, program.sample_rate, float(peak_db), voice.clipped, tuple(warnings))
@@ -85,8 +88,8 @@ def stream(
 ) -> Report:
     """Play a program into a sink, in blocks, and leave the sink open.
 
-    ``progress``, where given, is called after each block with the samples made and the samples in all; ``watch`` with the
-    block's control signals, float64 (n,) each, which the next block overwrites.
+    ``progress``, where given, is called after each block with the samples made and the samples in all;
+    ``watch`` with the block's control signals, float64 (n,) each, which the next block overwrites.
     """
     voice = Voice(program)
     block = np.empty(BLOCK, np.float32)
@@ -133,14 +136,15 @@ def render(
     trace : bool
         Whether to return the control signals too.
     tail_s : float
-        The longest time in seconds, 0 to 3600, that the sound may go on after the last gate. A render ends when the gain stays
-        under -90 dB.
+        The longest time in seconds, 0 to 3600, that the sound may go on after the last gate. A render ends
+        when the gain stays under -90 dB.
 
     Returns
     -------
     Rendering
-        ``audio`` float32 (n,) and, with ``trace``, ``pitch_volts``, ``gain_control`` and ``gain``, float64 (n,). The same bits
-        for the same settings on one machine, whatever the block size or the number of threads.
+        ``audio`` float32 (n,) and, with ``trace``, ``pitch_volts``, ``gain_control`` and ``gain``, float64
+        (n,). The same bits for the same settings on one machine, whatever the block size or the number of
+        threads.
 
     Raises
     ------

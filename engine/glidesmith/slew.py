@@ -1,6 +1,7 @@
 """The slew stage: seven laws by which an output follows its target, each in closed form.
 
-``x`` is the target, ``y`` the output, ``T`` the time of the side in use: ``rise`` while x > y, ``fall`` while x < y.
+``x`` is the target, ``y`` the output, ``T`` the time of the side in use: ``rise`` while x > y, ``fall`` while
+x < y.
 
 =========  ==========================  ==================================================================
 law        y'                          the output at time t after the glide began at y0
@@ -14,11 +15,11 @@ curve      by progress p = t/D         y0 + (x − y0)(1 − exp(−k p))/(1 −
 cosine     by progress p = t/D         y0 + (x − y0)(1 − cos(π p))/2
 =========  ==========================  ==================================================================
 
-A *glide* is one stretch of constant target. It is held as a record (`GLIDE`) with what the closed form needs, and the
-output at any moment is computed from the glide's own start, never from the sample before. So neither the sample rate nor
-the size of the blocks leaves a trace in the result, and errors do not add up. `rc` is the charging of a capacitor through a
-resistor; `soft` is the differential pair's hyperbolic tangent (a transconductor into a capacitor); `log` and `exp`
-are circuits whose output is fed back to their own rate.
+A *glide* is one stretch of constant target. It is held as a record (`GLIDE`) with what the closed form needs,
+and the output at any moment is computed from the glide's own start, never from the sample before. So neither
+the sample rate nor the size of the blocks leaves a trace in the result, and errors do not add up. `rc` is the
+charging of a capacitor through a resistor; `soft` is the differential pair's hyperbolic tangent (a
+transconductor into a capacitor); `log` and `exp` are circuits whose output is fed back to their own rate.
 """
 
 from dataclasses import dataclass
@@ -41,7 +42,10 @@ HELD = -1
 """The law of a glide that has nothing to do: the output is at its target."""
 
 SETTLED = 1e-15
-"""An `rc` or `soft` glide is over when it is this close: under the resolution of a double near 5 V, and far from denormal numbers."""
+"""An `rc` or `soft` glide is over when it is this close.
+
+Under the resolution of a double near 5 V, and far from denormal numbers.
+"""
 
 _STRETCH = 64
 _LOG2_E = 1.4426950408889634
@@ -79,8 +83,9 @@ GLIDE = np.dtype(
 )
 """One glide from ``origin`` to ``target``, both in volts, over after ``lasts`` seconds.
 
-``interval`` is the distance, in volts, that the glide had when it began, and ``share`` the part of the whole duration that was
-left to it (1 unless its settings changed on the way). ``pace``, ``shape`` and ``depth`` are the law's own constants:
+``interval`` is the distance, in volts, that the glide had when it began, and ``share`` the part of the whole
+duration that was left to it (1 unless its settings changed on the way). ``pace``, ``shape`` and ``depth`` are
+the law's own constants:
 
 ======  ===========================  ==================  =============================
 law     pace                         shape               depth
@@ -168,7 +173,9 @@ def _set_by_rate(glide: Any, slew: Any, side: float) -> None:
         glide.pace = 1.0 / (slew.knee * side)
         glide.shape = slew.knee if span > 0.0 else -slew.knee
         glide.depth = _log_sinh(distance / slew.knee)
-        glide.lasts = (glide.depth - _log_sinh(SETTLED / slew.knee)) / glide.pace if distance > SETTLED else 0.0
+        glide.lasts = (
+            (glide.depth - _log_sinh(SETTLED / slew.knee)) / glide.pace if distance > SETTLED else 0.0
+        )
     else:
         bend = slew.bend if slew.law == LOG else -slew.bend
         rate = np.exp(-bend * glide.origin) / side
@@ -201,7 +208,10 @@ def glide_begin(glide: Any, slew: Any, origin: float, target: float) -> None:
 
 @inlined
 def glide_volts(glide: Any, elapsed: float) -> float:
-    """The output in volts, ``elapsed`` seconds (≥ 0) after the glide began; after its end, exactly the target."""
+    """The output in volts, ``elapsed`` seconds (≥ 0) after the glide began.
+
+    After its end, exactly the target.
+    """
     if elapsed >= glide.lasts:
         return glide.target
     if glide.law == LINEAR:
@@ -267,9 +277,11 @@ def glide_time(glide: Any, volts: float) -> float:
 
 @kernel
 def glide_resettle(glide: Any, slew: Any, elapsed: float) -> None:
-    """Go on from the present output under new settings; a timed glide keeps the share of its duration that was left.
+    """Go on from the present output under new settings; a timed glide keeps the share of its duration that
+    was left.
 
-    ``elapsed`` seconds of the glide are over. A glide that was not timed and becomes so has its whole new duration.
+    ``elapsed`` seconds of the glide are over. A glide that was not timed and becomes so has its whole new
+    duration.
     """
     origin = glide_volts(glide, elapsed)
     target, interval = glide.target, glide.interval
@@ -304,10 +316,11 @@ def _fill_rc(glide: Any, count: float, fraction: float, step: float, volts: Any,
 
 @kernel
 def fill_glide(glide: Any, count: int, fraction: float, step: float, volts: Any, rates: Any) -> None:
-    """Fill ``volts`` and ``rates`` (n,) with the output (V) and its rate of change (V/s) at evenly spaced instants.
+    """Fill ``volts`` and ``rates`` (n,) with the output (V) and its rate of change (V/s) at evenly spaced
+    instants.
 
-    Instant i is ``count + i - fraction`` steps of ``step`` seconds after the glide began, all of them before its end.
-    The result at an instant has the same bits whatever stretch it is asked in.
+    Instant i is ``count + i - fraction`` steps of ``step`` seconds after the glide began, all of them before
+    its end. The result at an instant has the same bits whatever stretch it is asked in.
     """
     if glide.law == LINEAR:
         _fill_linear(glide, float(count), fraction, step, volts, rates)
@@ -324,9 +337,9 @@ def fill_glide(glide: Any, count: int, fraction: float, step: float, volts: Any,
 def _run_rc(x: Any, y: Any, start: float, rise: Any, fall: Any) -> None:
     """`rc` on any signal. What is carried is the distance e = x − y, so that rounding stays relative to it.
 
-    ``rise`` and ``fall`` are (2,): the factor exp(−dt/T) as a double, and what rounding took from it, which a long run
-    would feel and which is made good at each stretch's end. Of the two sides' results the right one is always the
-    smaller, or always the larger: the sign of e decides, and both have it.
+    ``rise`` and ``fall`` are (2,): the factor exp(−dt/T) as a double, and what rounding took from it, which a
+    long run would feel and which is made good at each stretch's end. Of the two sides' results the right one
+    is always the smaller, or always the larger: the sign of e decides, and both have it.
     """
     y[0] = start
     short = x[0] - start
@@ -353,7 +366,10 @@ def _run_rc(x: Any, y: Any, start: float, rise: Any, fall: Any) -> None:
 
 @kernel
 def _run_glides(x: Any, y: Any, start: float, slew: Any, glide: Any, step: float) -> None:
-    """Any law on any signal: each stretch of equal samples is one glide, evaluated from the stretch's start."""
+    """Any law on any signal.
+
+    Each stretch of equal samples is one glide, evaluated from the stretch's start.
+    """
     y[0] = start
     n = 0
     last = x.size - 1
@@ -407,9 +423,9 @@ class Slew:
     law : {"linear", "rc", "log", "exp", "soft", "curve", "cosine"}
         The law; the table at the top of this module gives its formula.
     rise, fall : float
-        Seconds, 0 (immediate) or 1e-6 to 60: the side's T. Seconds per volt for ``linear``; the time constant, in which
-        63.2 % of the way is done, for ``rc``; seconds per volt at 0 V for ``log`` and ``exp``, per volt far off for
-        ``soft``; for ``curve`` and ``cosine`` as ``timing`` says.
+        Seconds, 0 (immediate) or 1e-6 to 60: the side's T. Seconds per volt for ``linear``; the time
+        constant, in which 63.2 % of the way is done, for ``rc``; seconds per volt at 0 V for ``log`` and
+        ``exp``, per volt far off for ``soft``; for ``curve`` and ``cosine`` as ``timing`` says.
     bend : float
         Per volt, 0.01 to 10: how much the rate of ``log`` and ``exp`` depends on the output.
     knee : float
@@ -417,8 +433,8 @@ class Slew:
     curvature : float
         -20 to 20, for ``curve``: above 0 starts fast, 0 is straight.
     timing : {"rate", "fixed"}, optional
-        ``rate``: T is seconds per volt. ``fixed``: a glide lasts T whatever its interval. ``linear`` offers both
-        (default ``rate``), ``curve`` and ``cosine`` too (default ``fixed``).
+        ``rate``: T is seconds per volt. ``fixed``: a glide lasts T whatever its interval. ``linear`` offers
+        both (default ``rate``), ``curve`` and ``cosine`` too (default ``fixed``).
 
     Raises
     ------
@@ -442,8 +458,8 @@ class Slew:
             raise SettingError(f"timing = {self.timing!r}: choose one of {', '.join(TIMINGS)}")
         if timing == "fixed" and self.law in ("rc", "log", "exp", "soft"):
             raise SettingError(
-                f"timing = 'fixed' does not go with law = {self.law!r}: its rate follows from where the output is, "
-                "so the duration can't be set; choose linear, curve or cosine"
+                f"timing = 'fixed' does not go with law = {self.law!r}: its rate follows from where the "
+                "output is, so the duration can't be set; choose linear, curve or cosine"
             )
         checked = {
             "rise": _check_time("rise", self.rise),
@@ -464,7 +480,15 @@ class Slew:
     def record(self) -> "NDArray[Any]":
         """The settings as a `SLEW` array of shape (1,), as compiled code reads them."""
         assert self.timing is not None
-        row = (LAWS.index(self.law), TIMINGS.index(self.timing), self.rise, self.fall, self.bend, self.knee, self.curvature)
+        row = (
+            LAWS.index(self.law),
+            TIMINGS.index(self.timing),
+            self.rise,
+            self.fall,
+            self.bend,
+            self.knee,
+            self.curvature,
+        )
         return np.array([row], dtype=SLEW)
 
     def run(self, x: "ArrayLike", sample_rate: float, start: float = 0.0) -> "NDArray[np.float64]":
@@ -473,7 +497,8 @@ class Slew:
         Parameters
         ----------
         x : array_like (n,)
-            The target in volts (or full levels, for a gate); ``x[n]`` holds from n/``sample_rate`` to the next sample.
+            The target in volts (or full levels, for a gate); ``x[n]`` holds from n/``sample_rate`` to the
+            next sample.
         sample_rate : float
             Samples a second, above 0.
         start : float
@@ -482,13 +507,14 @@ class Slew:
         Returns
         -------
         y : float64 (n,)
-            The output in volts at n/``sample_rate``; ``y[0] == start``. Within 1e-9 V of the law's closed form.
+            The output in volts at n/``sample_rate``; ``y[0] == start``. Within 1e-9 V of the law's closed
+            form.
 
         Raises
         ------
         SettingError
-            Where ``x`` is not a row of finite numbers, and where a timed law meets a target that moves: one that
-            changes on two samples in a row.
+            Where ``x`` is not a row of finite numbers, and where a timed law meets a target that moves: one
+            that changes on two samples in a row.
         """
         signal = np.ascontiguousarray(x, dtype=np.float64)
         if signal.ndim != 1:
@@ -505,7 +531,9 @@ class Slew:
             self._fill(signal, y, float(sample_rate), float(start))
         return y
 
-    def _fill(self, signal: "NDArray[np.float64]", y: "NDArray[np.float64]", sample_rate: float, start: float) -> None:
+    def _fill(
+        self, signal: "NDArray[np.float64]", y: "NDArray[np.float64]", sample_rate: float, start: float
+    ) -> None:
         if self.law == "rc":
             _run_rc(signal, y, start, _decay(sample_rate, self.rise), _decay(sample_rate, self.fall))
             return
@@ -513,8 +541,8 @@ class Slew:
             at = _moves_twice(signal)
             if at >= 0:
                 raise SettingError(
-                    f"x changes on two samples in a row (samples {at - 1} and {at}): a timed glide ({self.law}, timing "
-                    f"{self.timing!r}) starts afresh at each change and never gets on with a target that moves; "
-                    "choose linear with timing 'rate', rc, log, exp or soft"
+                    f"x changes on two samples in a row (samples {at - 1} and {at}): a timed glide "
+                    f"({self.law}, timing {self.timing!r}) starts afresh at each change and never gets on "
+                    "with a target that moves; choose linear with timing 'rate', rc, log, exp or soft"
                 )
         _run_glides(signal, y, start, self.record()[0], np.zeros(1, GLIDE)[0], 1.0 / sample_rate)

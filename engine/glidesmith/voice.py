@@ -3,8 +3,9 @@
     pitch events ─► glide ─► [steps] ─► phase ─► wave ──┐
     gate events ─► [envelope] ─► gain slew ─► amplifier ─┴─► level, ceiling ─► out
 
-Live and offline run this and nothing else. What is carried from chunk to chunk is the `VOICE` record; each value is computed
-from the event before it or summed in whole numbers, so that where a chunk ends leaves no trace in the samples.
+Live and offline run this and nothing else. What is carried from chunk to chunk is the `VOICE` record; each
+value is computed from the event before it or summed in whole numbers, so that where a chunk ends leaves no
+trace in the samples.
 """
 
 from collections import namedtuple
@@ -61,17 +62,18 @@ VOICE = np.dtype(
     ],
     align=True,
 )
-"""All that a voice remembers: the sample it is at, its phase, the glide in hand and since when, and what it had to clip.
+"""All that a voice remembers: the sample it is at, its phase, the glide in hand and since when, and what it
+had to clip.
 
 ``broken`` counts samples that were not finite and were silenced; it stays 0.
 """
 
-Scratch = namedtuple(  # noqa: PYI024 - compiled code knows this kind, and no other
+Scratch = namedtuple(
     "Scratch", "volts rates cycles bends increments phases heights control unslewed gain wave"
 )
-Traces = namedtuple("Traces", "pitch_volts gain_control gain")  # noqa: PYI024
-Events = namedtuple("Events", "pitch gate")  # noqa: PYI024
-Tables = namedtuple("Tables", "levels cells")  # noqa: PYI024
+Traces = namedtuple("Traces", "pitch_volts gain_control gain")
+Events = namedtuple("Events", "pitch gate")
+Tables = namedtuple("Tables", "levels cells")
 
 
 @inlined
@@ -140,8 +142,8 @@ def _split_sample(settings: Any, voice: Any, events: Any, sample: int) -> float:
 def _gliding_samples(settings: Any, glide: Any, since: int, fraction: float, sample: int, most: int) -> int:
     """How many of the next ``most`` instants, from ``sample`` on, lie before the glide's end.
 
-    The division only guesses; each instant's own elapsed time decides, so that the answer for an instant is the same from
-    wherever it is asked.
+    The division only guesses; each instant's own elapsed time decides, so that the answer for an instant is
+    the same from wherever it is asked.
     """
     left = glide.lasts / settings.step_s - (float(sample - since) - fraction)
     count = np.int64(min(max(np.ceil(left), 0.0), float(most)))
@@ -177,7 +179,10 @@ def _single_sample(settings: Any, voice: Any, sample: int) -> int:
 
 @kernel
 def _step_pitch(settings: Any, voice: Any, scratch: Any, at: int, sample: int, count: int) -> None:
-    """A glissando's increments: a sample that stays on one step is plain, one that crosses to another is split."""
+    """A glissando's increments.
+
+    A sample that stays on one step is plain, one that crosses to another is split.
+    """
     for i in range(at, at + count):
         here = stepped_volts(settings, scratch.volts[i])
         if here == stepped_volts(settings, scratch.volts[i + 1]):
@@ -191,9 +196,7 @@ def _glide_pitch(settings: Any, voice: Any, scratch: Any, at: int, sample: int, 
     """``count`` samples inside a glide, all of whose instants and the next one lie before its end."""
     volts = scratch.volts[at : at + count + 1]
     rates = scratch.rates[: count + 1]
-    fill_glide(
-        voice.pitch, sample - voice.pitch_sample, voice.pitch_fraction, settings.step_s, volts, rates
-    )
+    fill_glide(voice.pitch, sample - voice.pitch_sample, voice.pitch_fraction, settings.step_s, volts, rates)
     if settings.steps_per_octave > 0.0:
         _step_pitch(settings, voice, scratch, at, sample, count)
         return
@@ -210,7 +213,7 @@ def _glide_pitch(settings: Any, voice: Any, scratch: Any, at: int, sample: int, 
 @kernel
 def _follow_pitch(settings: Any, voice: Any, events: Any, scratch: Any, count: int) -> None:
     """Fill pitch voltages (before steps) and phase increments for the next ``count`` samples."""
-    at = 0
+    at = np.int64(0)  # as a literal it would have every callee compiled for 0 too
     while at < count:
         sample = voice.sample + at
         glide = voice.pitch
@@ -293,8 +296,9 @@ def _amplify(level: float, wave: Any, gain: Any, out: Any) -> None:
 def _largest(out: Any) -> float:
     """The largest magnitude in ``out``; not a number where a sample is not.
 
-    Magnitudes of IEEE 754 numbers are in the order of their bits, and not-a-number comes after infinity; whole numbers are
-    compared in whole registers where floating-point ones, for the sake of not-a-number, would not be.
+    Magnitudes of IEEE 754 numbers are in the order of their bits, and not-a-number comes after infinity;
+    whole numbers are compared in whole registers where floating-point ones, for the sake of not-a-number,
+    would not be.
     """
     largest = np.int32(0)
     for i in range(out.size):
@@ -328,8 +332,14 @@ def _play_chunk(settings: Any, voice: Any, events: Any, tables: Any, scratch: An
     control, gain = scratch.control[:count], scratch.gain[:count]
     if settings.enveloped:
         fill_control(
-            voice.walk, settings.gain, settings.envelope, events.gate, settings.sample_rate, voice.sample,
-            control, scratch.unslewed[:count],
+            voice.walk,
+            settings.gain,
+            settings.envelope,
+            events.gate,
+            settings.sample_rate,
+            voice.sample,
+            control,
+            scratch.unslewed[:count],
         )
     else:
         _follow_gate(settings, voice, events.gate, scratch, count)
@@ -390,7 +400,9 @@ def voice_reset(settings: Any, voice: Any) -> None:
 
 @kernel
 def _quiet_by_walk(settings: Any, voice: Any, gates: Any, last: int, latest: int) -> int:
-    """The first sample after the last gate at which the enveloped gain is under `QUIET` and on its way down."""
+    """The first sample after the last gate at which the enveloped gain is under `QUIET` and on its way
+    down.
+    """
     quiet = amplifier_control(settings.amplifier, QUIET)
     sample = last
     while sample < latest:
@@ -468,7 +480,9 @@ class Voice:
         return float(self._state["peak"][0])
 
     def play(self, out: "NDArray[np.float32]", traces: Traces | None = None) -> None:
-        """Fill ``out`` (n,) with the next n samples, and the arrays (n,) of ``traces`` with the controls behind them."""
+        """Fill ``out`` (n,) with the next n samples, and the arrays (n,) of ``traces`` with the controls
+        behind them.
+        """
         if traces is None:
             traces = _NO_TRACES
         play(self._settings, self._state, self._events, self._tables, self._scratch, out, traces)

@@ -25,7 +25,7 @@ def process(*arguments: str, cache: str | None = None) -> None:
     subprocess.run([sys.executable, *arguments], check=True, env=environment, capture_output=True)
 
 
-def report(runs: int, scale: float) -> list[str]:  # noqa: ARG001 - a process has one size
+def report(runs: int, scale: float) -> list[str]:
     """Start, first-ever render and later render, each against an import that any such program needs."""
     with tempfile.TemporaryDirectory() as folder:
         phrase, output = Path(folder, "eight.toml"), Path(folder, "eight.wav")
@@ -40,7 +40,9 @@ def report(runs: int, scale: float) -> list[str]:  # noqa: ARG001 - a process ha
             lambda: process("-m", "glidesmith", "--version"), lambda: process("-c", "import numpy"), runs
         )
         lines.append(version.line("glidesmith --version / import numpy", "under 3"))
-        imported = paired(lambda: process("-c", "import glidesmith"), lambda: process("-c", "import numpy"), runs)
+        imported = paired(
+            lambda: process("-c", "import glidesmith"), lambda: process("-c", "import numpy"), runs
+        )
         lines.append(imported.line("import glidesmith / import numpy", "for information"))
         later = paired(render, lambda: process("-c", "import numba, soundfile"), runs)
         lines.append(later.line("later render of 8 s / import numba, soundfile", "at most 4"))

@@ -1,4 +1,6 @@
-"""`Slew(law="rc")` against `scipy.signal.lfilter`, which computes the same one-pole filter (but for one side only)."""
+"""`Slew(law="rc")` against `scipy.signal.lfilter`, which computes the same one-pole filter (but for one side
+only).
+"""
 
 import numpy as np
 from pairing import paired
@@ -28,7 +30,9 @@ def report(runs: int, scale: float) -> list[str]:
     for name, x in signals(max(60 * scale, 1)).items():
         for what, slew in (("equal sides", equal), ("unequal sides", unequal)):
             pair = paired(
-                lambda s=slew, x=x: s.run(x, SAMPLE_RATE), lambda x=x: lfilter([1 - factor], [1, -factor], x), runs
+                lambda s=slew, x=x: s.run(x, SAMPLE_RATE),
+                lambda x=x: lfilter([1 - factor], [1, -factor], x),
+                runs,
             )
             title = f"Slew(law='rc') / lfilter, {name}, {what}"
             lines.append(pair.line(title, "at most 1.2", x.size * 1e-9, "ns a sample"))

@@ -1,7 +1,9 @@
-"""The whole voice against a plain C loop: saw, rc pitch slew, linear gain slew, 60 s at 48 kHz, events included.
+"""The whole voice against a plain C loop: saw, rc pitch slew, linear gain slew, 60 s at 48 kHz, events
+included.
 
-The yardstick (plain_voice.c) is what one would write in an afternoon: its two-sample polynomial BLEP aliases at -41 to -53 dB
-while gliding, where the engine stays under -90 dB, and its events fall on whole samples, where the engine's fall between.
+The yardstick (plain_voice.c) is what one would write in an afternoon: its two-sample polynomial BLEP aliases
+at -41 to -53 dB while gliding, where the engine stays under -90 dB, and its events fall on whole samples,
+where the engine's fall between.
 """
 
 import ctypes
@@ -30,12 +32,16 @@ class Event(ctypes.Structure):
 
 
 def make_program(seconds: int) -> Program:
-    """Four notes a second over three octaves, one in three overlapping the next; every start between two samples."""
+    """Four notes a second over three octaves, one in three overlapping the next.
+
+    Every start between two samples.
+    """
     generator = np.random.default_rng(1)
     starts = [Fraction(i, 4) + Fraction(1, 700) for i in range(seconds * 4)]
     lasts = [Fraction(27 if i % 3 == 0 else 22, 100) for i in range(len(starts))]
     rows = [
-        (s, s + t, int(n)) for s, t, n in zip(starts, lasts, generator.integers(45, 81, len(starts)), strict=True)
+        (s, s + t, int(n))
+        for s, t, n in zip(starts, lasts, generator.integers(45, 81, len(starts)), strict=True)
     ]
     slew = {"law": "rc", "rise": TIME_CONSTANT, "fall": TIME_CONSTANT}
     preset = make_preset(pitch=slew, gain={"law": "linear", "rise": RISE, "fall": FALL})
@@ -76,7 +82,9 @@ def report(runs: int, scale: float) -> list[str]:
     compiler = shutil.which("gcc") or shutil.which("cc")
     if compiler is None:
         return ["voice: no C compiler here; install Debian's gcc to compare"]
-    version = subprocess.run([compiler, "--version"], capture_output=True, text=True, check=True).stdout.splitlines()[0]
+    version = subprocess.run(
+        [compiler, "--version"], capture_output=True, text=True, check=True
+    ).stdout.splitlines()[0]
     program = make_program(max(int(60 * scale), 2))
     out, plain = np.empty(program.length, np.float32), np.empty(program.length, np.float32)
     voice = Voice(program)
@@ -93,5 +101,7 @@ def report(runs: int, scale: float) -> list[str]:
             what = f"voice / C loop ({version}, {' '.join(flags)})"
             lines.append(pair.line(what, "at most 2.0, aim 1.0", program.length * 1e-9, "ns a sample"))
     likeness = np.corrcoef(np.abs(out), np.abs(plain))[0, 1]
-    lines.append(f"  (the two outputs' magnitudes correlate by {likeness:.3f}: the same phrase, not the same sound)")
+    lines.append(
+        f"  (the two outputs' magnitudes correlate by {likeness:.3f}: the same phrase, not the same sound)"
+    )
     return lines
