@@ -67,20 +67,24 @@ class PartFile(Outlet):
         From every method, one line, when the target can't be written; what was there is unchanged then.
     """
 
+    _part: Path | None = None
+    _owned = False
+
     def __init__(self, target: Path | BinaryIO, name: str | None = None) -> None:
         self.name = name or str(target if isinstance(target, Path) else getattr(target, "name", "the stream"))
         self.size = 0
-        self._part: Path | None = None
-        self._borrowed = not isinstance(target, Path)
-        if isinstance(target, Path):
-            try:
-                self._open(target)
-            except OSError as problem:
-                raise self._error(problem) from None
-            except ValueError:
-                raise self._refused("is not a name that a file can have; check it") from None
-        else:
+        if not isinstance(target, Path):
             self._file = target
+            return
+        try:
+            self._open(target)
+        except BaseException as problem:
+            self.abandon()
+            if isinstance(problem, OSError):
+                raise self._error(problem) from None
+            if isinstance(problem, ValueError):
+                raise self._refused("is not a name that a file can have; check it") from None
+            raise
 
     @property
     def whole(self) -> bool:
@@ -114,7 +118,7 @@ class PartFile(Outlet):
                 os.fsync(self._file.fileno())
                 self._part.replace(self._target)
                 self._part = None
-            if not self._borrowed:
+            if self._owned:
                 self._file.close()
         except BaseException as problem:
             self.abandon()
@@ -129,9 +133,12 @@ class PartFile(Outlet):
             if self._part is not None:
                 self._part.unlink()
         self._part = None
-        if not self._borrowed:
+        if self._owned:
             with contextlib.suppress(OSError):
                 self._file.close()
+
+    def __del__(self) -> None:
+        self.abandon()
 
     def _error(self, problem: OSError) -> OutputError:
         return output_error(self.name, problem)
@@ -146,14 +153,31 @@ class PartFile(Outlet):
             if stat.S_ISDIR(kind):
                 raise IsADirectoryError(errno.EISDIR, os.strerror(errno.EISDIR))
             self._file = self._target.open("wb")
+            self._owned = True
             return
         if kind is not None and not os.access(self._target, os.W_OK):
             raise self._refused("is read-only for you; choose another name or change its permissions")
-        part = self._target.with_name(f"{self._target.name}.part")
-        self._file = _locked(part, self.name)
-        self._part = part
+        self._claim(self._target.with_name(f"{self._target.name}.part"))
         if kind is not None and hasattr(os, "fchmod"):
             os.fchmod(self._file.fileno(), stat.S_IMODE(kind))
+
+    def _claim(self, part: Path) -> None:
+        """Open the part file, empty and locked.
+
+        Between opening and locking another writer may have given the file its final name: then once more.
+        """
+        flags = os.O_RDWR | os.O_CREAT | getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_BINARY", 0)
+        while True:
+            self._file = os.fdopen(os.open(part, flags, 0o666), "w+b")
+            self._owned = True
+            if fcntl is not None:
+                _lock(self._file, self.name)
+            facts = os.fstat(self._file.fileno())
+            if _identity(part) == (facts.st_dev, facts.st_ino):
+                self._part = part
+                self._file.truncate(0)
+                return
+            self._file.close()
 
     def _verify(self, check: Callable[[BinaryIO], None] | None) -> None:
         found = os.fstat(self._file.fileno()).st_size
@@ -167,7 +191,7 @@ class PartFile(Outlet):
 
     def _settle(self) -> None:
         """Force the new name to the disk, on systems where a folder can be opened."""
-        if self._borrowed or not hasattr(os, "O_DIRECTORY"):
+        if not self._owned or not hasattr(os, "O_DIRECTORY"):
             return
         with contextlib.suppress(OSError):
             folder = os.open(self._target.parent, os.O_RDONLY | os.O_DIRECTORY)
@@ -182,28 +206,6 @@ def _kind(path: Path) -> int | None:
         return path.stat().st_mode
     except FileNotFoundError:
         return None
-
-
-def _locked(part: Path, name: str) -> BinaryIO:
-    """The part file, empty and locked.
-
-    Between opening and locking another writer may have given the file its final name: then it is done again.
-    """
-    flags = os.O_RDWR | os.O_CREAT | getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_BINARY", 0)
-    while True:
-        file = os.fdopen(os.open(part, flags, 0o666), "w+b")
-        try:
-            if fcntl is not None:
-                _lock(file, name)
-            here = os.fstat(file.fileno())
-            there = _identity(part)
-            if there == (here.st_dev, here.st_ino):
-                file.truncate(0)
-                return file
-        except BaseException:
-            file.close()
-            raise
-        file.close()
 
 
 def _lock(file: BinaryIO, name: str) -> None:

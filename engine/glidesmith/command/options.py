@@ -1,0 +1,120 @@
+"""What commands share: the options that choose a phrase and a rate, and the loading of what they name."""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import click
+
+from glidesmith.errors import SettingError
+
+if TYPE_CHECKING:
+    from glidesmith.phrase import Phrase
+    from glidesmith.preset import Preset
+
+Function = TypeVar("Function", bound=Callable[..., Any])
+
+
+class FilePath(click.Path):
+    """A path as `pathlib.Path`; whether it is fit is for the reader or writer to say, in its own words."""
+
+    def __init__(self) -> None:
+        super().__init__(path_type=Path)
+
+
+def as_time(ctx: click.Context, param: click.Parameter, value: str | float) -> float:
+    """The callback of options that take a time: seconds, or with a unit as ``"500 ms"`` or ``"2 min"``."""
+    from glidesmith.units import parse_time
+
+    try:
+        return parse_time(_number(value))
+    except SettingError as problem:
+        raise click.BadParameter(str(problem), ctx, param) from None
+
+
+def _number(value: str | float) -> str | float:
+    """The number that a text is, for a time without a unit; otherwise the text."""
+    try:
+        return float(value)
+    except ValueError:
+        return value
+
+
+@dataclass(frozen=True, slots=True)
+class PhraseChoice:
+    """The phrase that the command line asks for, if any, in place of the one a preset names."""
+
+    file: Path | None = None
+    track: int | None = None
+    channel: int | None = None
+    longest_s: float = 7200.0
+
+    def load(self, preset: "Preset") -> "Phrase":
+        """The phrase to play with a preset.
+
+        Raises PhraseError where it can't be used, SettingError where neither names one.
+        """
+        from glidesmith.phrase import load_phrase
+        from glidesmith.text import printable
+
+        if self.file is not None:
+            return load_phrase(self.file, self.track, self.channel, self.longest_s)
+        named = preset.phrase
+        if named is None:
+            raise SettingError(
+                f"{printable(str(preset.path))}: names no phrase; give one with --phrase FILE, "
+                "or add [phrase] with file to the preset"
+            )
+        track = named.track if self.track is None else self.track
+        channel = named.channel if self.channel is None else self.channel
+        return load_phrase(named.file, track, channel, self.longest_s)
+
+
+def ignored_lines(phrase: "Phrase") -> tuple[str, ...]:
+    """What of a phrase has no effect, a line each."""
+    return tuple(f"ignored in the phrase: {line}" for line in phrase.ignored)
+
+
+def phrase_options(function: Function) -> Function:
+    """The options that `PhraseChoice` is made of: ``phrase``, ``track``, ``channel``, ``longest``."""
+    decorators = (
+        click.option(
+            "--phrase",
+            type=FilePath(),
+            metavar="FILE",
+            help="Play this phrase (TOML or Standard MIDI File) instead of the preset's own.",
+        ),
+        click.option("--track", type=click.IntRange(1), help="Of a MIDI file, only this track, from 1."),
+        click.option("--channel", type=click.IntRange(1, 16), help="Of a MIDI file, only this channel."),
+        click.option(
+            "--longest",
+            callback=as_time,
+            metavar="TIME",
+            default="120 min",
+            show_default=True,
+            help="How long a phrase may be.",
+        ),
+    )
+    for decorator in reversed(decorators):
+        function = decorator(function)
+    return function
+
+
+rate_option = click.option(
+    "--rate",
+    type=int,
+    default=48_000,
+    show_default=True,
+    metavar="HERTZ",
+    help="Sample rate, 8000 to 384000.",
+)
+
+json_option = click.option("--json", "as_json", is_flag=True, help="Print the facts as JSON.")
+
+
+def json_text(facts: object) -> str:
+    """Facts as JSON in plain ASCII, which no terminal or pipe can garble."""
+    import json
+
+    return json.dumps(facts, indent=2, allow_nan=False)
