@@ -19,7 +19,7 @@ from glidesmith.keyboard import LEGATO, PRESS, RETURN, key_changes
 from glidesmith.measure import Facts, measure
 from glidesmith.phrase import Phrase, load_phrase
 from glidesmith.preset import Preset, load_preset
-from glidesmith.render import Rendering, render
+from glidesmith.rendering import Rendering, render
 from glidesmith.settings import LAWS, TIMINGS, WAVES
 
 SAMPLE_RATE = 48_000

@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from glidesmith.measure import measure as measure
     from glidesmith.phrase import load_phrase as load_phrase
     from glidesmith.preset import load_preset as load_preset
-    from glidesmith.render import render as render
+    from glidesmith.rendering import render as render
     from glidesmith.slew import Slew as Slew
 
 _HOME = {
@@ -32,7 +32,7 @@ _HOME = {
     "load_phrase": "glidesmith.phrase",
     "load_preset": "glidesmith.preset",
     "measure": "glidesmith.measure",
-    "render": "glidesmith.render",
+    "render": "glidesmith.rendering",
 }
 
 __all__ = [

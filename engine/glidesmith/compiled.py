@@ -38,7 +38,7 @@ def _sources_digest() -> str:
     digest = hashlib.sha256(numba.__version__.encode())
     for source in sorted(Path(__file__).parent.rglob("*.py")):
         text = source.read_bytes()
-        if b"@kernel" in text or b"@vector_kernel" in text or source.name == "compiled.py":
+        if b"glidesmith.compiled" in text or source.name == "compiled.py":
             digest.update(source.name.encode() + b"\0" + text)
     return digest.hexdigest()[:16]
 
@@ -63,6 +63,11 @@ def _private_folder() -> str | None:
 
 
 CACHE_FOLDER = _private_folder()
+
+
+def compiles_first() -> bool:
+    """Whether the engine is still to be compiled, which a person at a terminal should be told."""
+    return CACHE_FOLDER is None or not any(Path(CACHE_FOLDER).rglob("voice.play-*.nbi"))
 
 
 def _compile(function: Function, **options: Any) -> Function:

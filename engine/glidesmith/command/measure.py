@@ -13,6 +13,7 @@ from glidesmith.command.options import (
     json_text,
     phrase_options,
     rate_option,
+    tell_of_compiling,
 )
 
 PICTURES = (".svg", ".png")
@@ -60,6 +61,7 @@ def command(
         raise click.BadParameter(f"{str(plot)!r}: name it .svg or .png", param_hint="--plot")
     loaded = load_preset(preset)
     played = PhraseChoice(phrase, track, channel, longest).load(loaded)
+    tell_of_compiling()
     facts = measure(loaded, played, tolerance_cents=tolerance_cents, sample_rate=rate)
     tell(*(f"glidesmith: {preset}: {line}" for line in ignored_lines(played)))
     if plot is not None:

@@ -101,6 +101,16 @@ def phrase_options(function: Function) -> Function:
     return function
 
 
+def tell_of_compiling() -> None:
+    """Say that there will be a wait, where the engine is still to be compiled for this processor."""
+    from glidesmith.command import tell
+    from glidesmith.compiled import CACHE_FOLDER, compiles_first
+
+    if compiles_first():
+        again = ", once" if CACHE_FOLDER else "; it can't be kept: set GLIDESMITH_CACHE to a folder of your own"
+        tell(f"glidesmith: compiling the engine for this processor{again} (up to a minute)")
+
+
 rate_option = click.option(
     "--rate",
     type=int,

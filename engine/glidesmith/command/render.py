@@ -21,6 +21,7 @@ from glidesmith.command.options import (
     json_text,
     phrase_options,
     rate_option,
+    tell_of_compiling,
 )
 from glidesmith.command.progress import Progress
 from glidesmith.errors import GlidesmithError, SettingError
@@ -29,7 +30,7 @@ if TYPE_CHECKING:
     from glidesmith.phrase import Phrase
     from glidesmith.preset import Preset
     from glidesmith.program import Program
-    from glidesmith.render import Report
+    from glidesmith.rendering import Report
     from glidesmith.voice import Traces
     from glidesmith.wav import CvWriter, Depth, WavSink
 
@@ -136,6 +137,7 @@ def command(
     from glidesmith.program import check_sample_rate
 
     check_sample_rate(choices.rate)
+    tell_of_compiling()
     _make_folder(jobs, output)
     done, failed = _render_all(jobs, choices, quiet or as_json)
     piped = any(job.to_standard_output for job in jobs)
@@ -289,7 +291,7 @@ def _check_inputs_kept(job: Job, choices: Choices, preset: "Preset") -> None:
 
 def _play(program: "Program", job: Job, choices: Choices, comment: str) -> "tuple[Report, tuple[str, ...]]":
     """Play a program into every file asked for; on an error those not finished are removed."""
-    from glidesmith.render import stream
+    from glidesmith.rendering import stream
     from glidesmith.text import shortened
     from glidesmith.trace import HeldSignals, TraceWriter
 

@@ -1,0 +1,500 @@
+"""The envelope: what a gate makes of itself before the gain slew, and the slewed control that follows it.
+
+    gate events ─► level × attack, decay, sustain, release ─► x ─► gain slew ─► y
+
+Attack goes from the present level to the gate's in exactly ``attack`` seconds, decay from there to
+``sustain`` times it in exactly ``decay``, release from the present level to 0 in exactly ``release``:
+straight, or as the curve law with k = 5 does (shape ``rc``). A stage of no length is a jump. The output
+starts from wherever it is, so a note played into the release of the one before makes no click.
+
+The *walk* is all that is carried through time: the stage and since when, the target it makes (`TARGET`) and
+the slewed output's pursuit of it (`PURSUIT`). Stages begin at events or at the end of the stage before them,
+never at samples; every value is computed from there.
+"""
+
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from glidesmith.compiled import inlined, kernel
+from glidesmith.errors import SettingError
+from glidesmith.pursuit import PIECE, PURSUIT, fill_pursuit, pursue, pursue_on, pursued_level
+from glidesmith.slew import FIXED, LAWS, LINEAR, SLEW, SOFT, TIMINGS
+from glidesmith.target import ARC, HOLD, RAMP, TARGET, target_begin, target_level, way_left
+
+if TYPE_CHECKING:
+    from numpy.typing import ArrayLike, NDArray
+
+    from glidesmith.preset import Envelope
+
+SHAPES = ("linear", "rc")
+LINEAR_SHAPE, RC_SHAPE = range(2)
+IDLE, ATTACK, DECAY, SUSTAIN, RELEASE = range(5)
+"""The stages of a walk."""
+
+_ALL_BUT_OVER = 1e-9
+"""A stage with less than this part of its way left is over when settings change."""
+
+_BORDERS_PER_EVENT = 40
+"""More than an event brings: three stages at most, of at most six stretches."""
+
+GATE_EVENT = np.dtype(
+    [("sample", np.int64), ("fraction", np.float64), ("level", np.float64), ("trigger", np.int64)], align=True
+)
+"""At ``sample`` + ``fraction`` (0 to under 1) the gate's level becomes ``level`` (0: closed).
+
+With ``trigger`` the envelope starts its attack; without, an open gate only scales its output to the new
+level. The event counts for the time after it: the value at its own instant is the value before it.
+"""
+
+ENVELOPE = np.dtype(
+    [
+        ("attack", np.float64),
+        ("decay", np.float64),
+        ("sustain", np.float64),
+        ("release", np.float64),
+        ("shape", np.int64),
+    ],
+    align=True,
+)
+"""The settings of an envelope: times in seconds, 0 to 60; sustain 0 to 1; shape an index into `SHAPES`."""
+
+WALK = np.dtype(
+    [
+        ("sample", np.int64),
+        ("fraction", np.float64),
+        ("x", np.float64),
+        ("y", np.float64),
+        ("event", np.int64),
+        ("stage", np.int64),
+        ("level", np.float64),
+        ("start_sample", np.int64),
+        ("start_fraction", np.float64),
+        ("target", TARGET),
+        ("pursuit", PURSUIT),
+    ],
+    align=True,
+)
+"""A walk: unslewed ``x`` and slewed ``y`` at ``sample`` + ``fraction``, the next ``event``, the stage."""
+
+
+@kernel
+def walk_reset(walk: Any) -> None:
+    """Back to sample 0: the gate closed, the output at 0, no event taken."""
+    walk.sample = 0
+    walk.fraction = 0.0
+    walk.x = 0.0
+    walk.y = 0.0
+    walk.event = 0
+    walk.stage = IDLE
+    walk.level = 0.0
+    walk.start_sample = 0
+    walk.start_fraction = 0.0
+    target_begin(walk.target, RAMP, 0.0, 0.0, np.inf)
+    pursuit = walk.pursuit
+    pursuit.mode = 0
+    pursuit.meets = 1
+    pursuit.since = 0.0
+    pursuit.until = np.inf
+    pursuit.before = 0.0
+
+
+@inlined
+def _elapsed(walk: Any, sample: int, fraction: float, step: float) -> float:
+    """Seconds from the stage's start to ``sample`` + ``fraction``."""
+    return float((float(sample - walk.start_sample) + (fraction - walk.start_fraction)) * step)
+
+
+@kernel
+def _begin_stage(walk: Any, slew: Any, envelope: Any, stage: int, x: float, y: float) -> None:
+    """Begin a stage at the walk's ``start``, from the level ``x`` and the output ``y``."""
+    end, duration = x, np.inf
+    if stage == ATTACK:
+        end, duration = walk.level, envelope.attack
+    elif stage == DECAY:
+        end, duration = walk.level * envelope.sustain, envelope.decay
+    elif stage == RELEASE:
+        end, duration = 0.0, envelope.release
+    walk.stage = stage
+    target_begin(walk.target, ARC if envelope.shape == RC_SHAPE else RAMP, x, end, duration)
+    pursue(walk.pursuit, slew, walk.target, 0.0, y)
+
+
+@kernel
+def _end_stage(walk: Any, slew: Any, envelope: Any, rate: float) -> None:
+    """Go on to the stage after the one that ends."""
+    target = walk.target
+    y = pursued_level(walk.pursuit, target, target.duration, target_level(target, target.duration))
+    samples = walk.start_fraction + target.duration * rate
+    whole = np.floor(samples)
+    walk.start_sample += np.int64(whole)
+    walk.start_fraction = samples - whole
+    stage = walk.stage + 1 if walk.stage != RELEASE else IDLE
+    _begin_stage(walk, slew, envelope, stage, target.end, y)
+
+
+@kernel
+def _scale(walk: Any, slew: Any, level: float, elapsed: float, y: float) -> None:
+    """Scale an open envelope to another level; an attack that came from above does not rise by it."""
+    target = walk.target
+    ratio = level / walk.level
+    begin = target.begin * ratio
+    if walk.stage == ATTACK:
+        begin = min(begin, max(target.begin, level))
+    walk.level = level
+    target_begin(target, target.motion, begin, target.end * ratio, target.duration)
+    pursue(walk.pursuit, slew, target, elapsed, y)
+
+
+@kernel
+def _take_event(walk: Any, slew: Any, envelope: Any, event: Any, elapsed: float) -> None:
+    """Let the next event happen, ``elapsed`` seconds into the stage; a late one happens at its start."""
+    walk.event += 1
+    closed = walk.stage == IDLE or walk.stage == RELEASE
+    if closed and event.level == 0.0:
+        return
+    x = target_level(walk.target, elapsed)
+    y = pursued_level(walk.pursuit, walk.target, elapsed, x)
+    if event.level > 0.0 and not closed and event.trigger == 0:
+        if event.level != walk.level:
+            _scale(walk, slew, event.level, max(elapsed, 0.0), y)
+        return
+    if elapsed > 0.0:
+        walk.start_sample = event.sample
+        walk.start_fraction = event.fraction
+    if event.level == 0.0:
+        _begin_stage(walk, slew, envelope, RELEASE, x, y)
+    else:
+        walk.level = event.level
+        _begin_stage(walk, slew, envelope, ATTACK, x, y)
+
+
+@kernel
+def _pass_border(walk: Any, slew: Any, envelope: Any, rate: float) -> None:
+    """Go on to the next stretch of the output, or to the next stage where this one has ended."""
+    if walk.pursuit.until < walk.target.duration:
+        pursue_on(walk.pursuit, slew, walk.target)
+    else:
+        _end_stage(walk, slew, envelope, rate)
+
+
+@kernel
+def _settle(
+    walk: Any, slew: Any, envelope: Any, events: Any, rate: float, sample: int, fraction: float
+) -> float:
+    """Take all events and borders before an instant; returns the seconds from its stage's start to it."""
+    step = 1.0 / rate
+    while True:
+        due = False
+        at = _elapsed(walk, sample, fraction, step)
+        if walk.event < events.size:
+            event = events[walk.event]
+            due = event.sample < sample or (event.sample == sample and event.fraction < fraction)
+            if due:
+                at = _elapsed(walk, event.sample, event.fraction, step)
+        if at > walk.pursuit.until:
+            _pass_border(walk, slew, envelope, rate)
+        elif due:
+            _take_event(walk, slew, envelope, events[walk.event], at)
+        else:
+            return at
+
+
+@kernel
+def walk_to(
+    walk: Any, slew: Any, envelope: Any, events: Any, sample_rate: float, sample: int, fraction: float
+) -> None:
+    """Walk on to ``sample`` + ``fraction``, taking the events on the way; sets ``walk.x`` and ``walk.y``.
+
+    ``slew``, ``envelope`` and ``walk`` are records (`SLEW`, `ENVELOPE`, `WALK`), ``events`` a `GATE_EVENT`
+    array in order of time. The result depends on the events alone, not on the instants at which the walk was
+    asked before. An instant before the stretch in hand gives the level at which that began: a walk does not
+    go back.
+    """
+    elapsed = _settle(walk, slew, envelope, events, sample_rate, sample, fraction)
+    walk.sample = sample
+    walk.fraction = fraction
+    walk.x = target_level(walk.target, elapsed)
+    walk.y = pursued_level(walk.pursuit, walk.target, elapsed, walk.x)
+
+
+@inlined
+def _run_length(walk: Any, events: Any, step: float, sample: int, most: int) -> int:
+    """How many instants from ``sample`` on, at most ``most``, lie in the stretch in hand and before events.
+
+    The division only guesses; each instant's own elapsed time decides, as it does in `walk_to`.
+    """
+    count = most
+    if walk.event < events.size:
+        count = min(count, events[walk.event].sample + 1 - sample)
+    until = walk.pursuit.until
+    if _elapsed(walk, sample + count - 1, 0.0, step) <= until:
+        return count
+    guess = np.int64(until / step + walk.start_fraction) + walk.start_sample + 1 - sample
+    count = min(max(guess, 1), count)
+    while count > 1 and _elapsed(walk, sample + count - 1, 0.0, step) > until:
+        count -= 1
+    while _elapsed(walk, sample + count, 0.0, step) <= until:
+        count += 1
+    return int(count)
+
+
+@kernel
+def fill_control(
+    walk: Any,
+    slew: Any,
+    envelope: Any,
+    events: Any,
+    sample_rate: float,
+    first_sample: int,
+    control: Any,
+    unslewed: Any,
+) -> None:
+    """Fill ``control`` and ``unslewed`` (n,) with slewed and unslewed level from ``first_sample`` on.
+
+    As `walk_to` at each of them, to the bit. What is carried is the walk; where one call ends and the next
+    one begins leaves no trace. Runs on the audio thread: no allocation, no Python, a bounded time a sample.
+    """
+    step = 1.0 / sample_rate
+    done = 0
+    while done < control.size:
+        sample = first_sample + done
+        _settle(walk, slew, envelope, events, sample_rate, sample, 0.0)
+        end = done + _run_length(walk, events, step, sample, control.size - done)
+        count, fraction = sample - walk.start_sample, walk.start_fraction
+        levels, outputs = unslewed[done:end], control[done:end]
+        fill_pursuit(walk.pursuit, walk.target, count, fraction, step, levels, outputs)
+        done = end
+    if control.size:
+        walk.sample = first_sample + control.size - 1
+        walk.fraction = 0.0
+        walk.x = unslewed[control.size - 1]
+        walk.y = control[control.size - 1]
+
+
+@kernel
+def walk_resettle(walk: Any, slew: Any, envelope: Any, sample_rate: float) -> None:
+    """Go on from where the walk stands under new settings, without a jump of either level.
+
+    Walk to the instant under the old settings first. A stage keeps the share of its duration that is left, of
+    its new duration; a changed sustain is gone to in ``decay``. Without this call a stage and a stretch in
+    hand go on as begun.
+    """
+    x, y, target = walk.x, walk.y, walk.target
+    elapsed = _elapsed(walk, walk.sample, walk.fraction, 1.0 / sample_rate)
+    share = min(max(elapsed / target.duration, 0.0), 1.0) if target.duration > 0.0 else 1.0
+    walk.start_sample = walk.sample
+    walk.start_fraction = walk.fraction
+    stage = walk.stage
+    if stage == SUSTAIN and x != walk.level * envelope.sustain:
+        stage, share = DECAY, 0.0
+    _begin_stage(walk, slew, envelope, stage, x, y)
+    since = share * target.duration
+    if target.motion == HOLD or since == 0.0:
+        return
+    end, duration, left = target.end, target.duration, way_left(target.motion, share)
+    if left < _ALL_BUT_OVER:
+        since, duration, left = 0.0, 0.0, 1.0
+    # The stage as a whole that would have come to x by now: it began earlier.
+    samples = walk.start_fraction - since * sample_rate
+    walk.start_sample += np.int64(np.floor(samples))
+    walk.start_fraction = samples - np.floor(samples)
+    target_begin(target, target.motion, end + (x - end) / left, end, duration)
+    pursue(walk.pursuit, slew, target, since, y)
+
+
+@kernel
+def _list_borders(
+    walk: Any, slew: Any, envelope: Any, events: Any, rate: float, every: bool, times: Any
+) -> int:
+    """Walk from border to border to the end of time; returns how many of ``times`` (s) were filled in."""
+    step = 1.0 / rate
+    count = 0
+    while count < times.size:
+        due = walk.event < events.size
+        at = np.inf
+        if due:
+            event = events[walk.event]
+            at = _elapsed(walk, event.sample, event.fraction, step)
+        pursuit = walk.pursuit
+        if at > pursuit.until:
+            goes_on = pursuit.mode == PIECE and pursuit.meets == 0
+            if pursuit.until >= walk.target.duration or (every and not goes_on):
+                samples = float(walk.start_sample) + (walk.start_fraction + pursuit.until * rate)
+                times[count] = samples / rate
+                count += 1
+            _pass_border(walk, slew, envelope, rate)
+        elif due:
+            times[count] = (float(events[walk.event].sample) + events[walk.event].fraction) / rate
+            count += 1
+            _take_event(walk, slew, envelope, events[walk.event], at)
+        else:
+            break
+    return count
+
+
+@kernel
+def _walk_through(
+    walk: Any, slew: Any, envelope: Any, events: Any, rate: float, instants: Any, levels: Any
+) -> None:
+    """Fill ``levels`` (n, 2) with x and y at ``instants``, of which sample and fraction count."""
+    for i in range(instants.size):
+        walk_to(walk, slew, envelope, events, rate, instants[i].sample, instants[i].fraction)
+        levels[i, 0] = walk.x
+        levels[i, 1] = walk.y
+
+
+def envelope_record(envelope: "Envelope") -> "NDArray[Any]":
+    """The settings of an envelope as an `ENVELOPE` array of shape (1,), as compiled code reads them.
+
+    Raises SettingError for a time outside 0 to 60 s, a sustain outside 0 to 1 or an unknown shape.
+    """
+    if envelope.shape not in SHAPES:
+        raise SettingError(f"shape = {envelope.shape!r}: choose one of {', '.join(SHAPES)}")
+    row = (
+        _in_range("attack", envelope.attack, 60.0, " s"),
+        _in_range("decay", envelope.decay, 60.0, " s"),
+        _in_range("sustain", envelope.sustain, 1.0, ""),
+        _in_range("release", envelope.release, 60.0, " s"),
+        SHAPES.index(envelope.shape),
+    )
+    return np.array([row], ENVELOPE)
+
+
+def _in_range(name: str, value: float, high: float, unit: str) -> float:
+    if not 0.0 <= value <= high:
+        raise SettingError(f"{name} = {value!r} is out of range: 0 to {high:g}{unit}")
+    return float(value)
+
+
+def _one_record(name: str, record: "ArrayLike", kind: "np.dtype[np.void]") -> Any:
+    rows = np.atleast_1d(np.asarray(record))
+    if rows.dtype != kind or rows.shape != (1,):
+        raise SettingError(
+            f"{name}: give one record as its settings class makes it, not {rows.dtype} {rows.shape}"
+        )
+    return rows[0]
+
+
+def _checked_slew(record: "ArrayLike") -> Any:
+    slew = _one_record("slew", record, SLEW)
+    if not LINEAR <= slew["law"] <= SOFT or (slew["law"] == LINEAR and slew["timing"] == FIXED):
+        raise SettingError(
+            f"slew law {LAWS[slew['law']]!r} with timing {TIMINGS[slew['timing']]!r} can't follow an "
+            "envelope: a glide with a duration of its own has no meaning for a target that keeps moving; "
+            "choose linear (rate), rc, log, exp or soft"
+        )
+    return slew
+
+
+def _checked_events(events: "NDArray[Any]", sample_rate: float) -> "NDArray[Any]":
+    if not 0.0 < sample_rate < np.inf:
+        raise SettingError(f"sample rate {sample_rate!r}: give a positive number of hertz")
+    if events.dtype != GATE_EVENT or events.ndim != 1:
+        raise SettingError(
+            f"events: give a GATE_EVENT array of one dimension, not {events.dtype} {events.shape}"
+        )
+    if not (
+        np.all((events["fraction"] >= 0.0) & (events["fraction"] < 1.0)) and np.all(events["sample"] >= 0)
+    ):
+        raise SettingError("events: samples must be 0 or later and fractions from 0 to under 1")
+    if not np.all((events["level"] >= 0.0) & (events["level"] <= 1.0)):
+        raise SettingError("events: levels must be from 0 to 1")
+    order = np.lexsort((events["fraction"], events["sample"]))
+    if not np.array_equal(order, np.arange(events.size)):
+        raise SettingError("events: they must be in order of time")
+    return np.ascontiguousarray(events)
+
+
+def _instants(times_s: "NDArray[np.float64]", events: "NDArray[Any]", sample_rate: float) -> "NDArray[Any]":
+    """Times as sample and fraction; the very double that an event's time gives is that event's instant."""
+    instants = np.zeros(times_s.size, GATE_EVENT)
+    samples = times_s * sample_rate
+    instants["sample"] = np.floor(samples)
+    instants["fraction"] = samples - np.floor(samples)
+    event_times = (events["sample"] + events["fraction"]) / sample_rate
+    if events.size:
+        nearest = np.minimum(np.searchsorted(event_times, times_s), events.size - 1)
+        same = event_times[nearest] == times_s
+        for part in ("sample", "fraction"):
+            instants[part][same] = events[part][nearest[same]]
+    return instants
+
+
+def _new_walk() -> Any:
+    walk = np.zeros(1, WALK)[0]
+    walk_reset(walk)
+    return walk
+
+
+def control_at(
+    slew: "ArrayLike",
+    envelope: "ArrayLike",
+    events: "NDArray[Any]",
+    sample_rate: float,
+    times_s: "ArrayLike",
+) -> "tuple[NDArray[np.float64], NDArray[np.float64]]":
+    """The envelope's level and the slewed control at any instants.
+
+    Parameters
+    ----------
+    slew, envelope
+        A `SLEW` (linear by rate, rc, log, exp or soft) and an `ENVELOPE` record, or arrays of shape (1,).
+    events : GATE_EVENT (m,)
+        In order of time; levels 0 to 1.
+    sample_rate : float
+        Hz, of the events' sample numbers.
+    times_s : float64 (n,)
+        Seconds from sample 0, 0 or later, in order. At an event's own time, (sample + fraction)/sample_rate
+        as a double, the levels are those before the event.
+
+    Returns
+    -------
+    unslewed, slewed : float64 (n,)
+        Levels, 0 to 1.
+
+    Raises
+    ------
+    SettingError
+        For records, events or times that break these rules.
+    """
+    times = np.asarray(times_s, np.float64)
+    if times.ndim != 1 or not np.all((times >= 0.0) & (times < np.inf)) or np.any(np.diff(times) < 0.0):
+        raise SettingError("times: give finite seconds from 0 on, in order, in one dimension")
+    events = _checked_events(events, sample_rate)
+    records = _checked_slew(slew), _one_record("envelope", envelope, ENVELOPE)
+    levels = np.zeros((times.size, 2))
+    _walk_through(
+        _new_walk(), *records, events, float(sample_rate), _instants(times, events, sample_rate), levels
+    )
+    return levels[:, 0].copy(), levels[:, 1].copy()
+
+
+def _borders(
+    slew: Any, envelope: Any, events: "NDArray[Any]", sample_rate: float, every: bool
+) -> "NDArray[np.float64]":
+    events = _checked_events(events, sample_rate)
+    times = np.zeros(_BORDERS_PER_EVENT * (events.size + 1))
+    count = _list_borders(_new_walk(), slew, envelope, events, float(sample_rate), every, times)
+    return np.unique(times[:count])
+
+
+def stage_times(envelope: "ArrayLike", events: "NDArray[Any]", sample_rate: float) -> "NDArray[np.float64]":
+    """The instants, in seconds and in order, at which events happen and at which stages begin or end.
+
+    Between two of them the unslewed level is monotonic. Parameters and errors as for `control_at`.
+    """
+    at_once = np.zeros(1, SLEW)[0]
+    return _borders(at_once, _one_record("envelope", envelope, ENVELOPE), events, sample_rate, every=False)
+
+
+def turning_times(
+    slew: "ArrayLike", envelope: "ArrayLike", events: "NDArray[Any]", sample_rate: float
+) -> "NDArray[np.float64]":
+    """`stage_times`, and the instants at which the slewed control meets the envelope or falls behind it.
+
+    Between two of them the slewed control is monotonic as well: all its peaks and dips are at these instants.
+    Right after one of them it may have jumped, where a side of the slew is immediate and the envelope jumps.
+    """
+    records = _checked_slew(slew), _one_record("envelope", envelope, ENVELOPE)
+    return _borders(*records, events, sample_rate, every=True)
