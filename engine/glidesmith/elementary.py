@@ -40,7 +40,7 @@ def exp2(exponent: float) -> float:
     held = max(exponent, _LOWEST)
     whole = np.floor(held + 0.5)
     r = held - whole
-    series = fma(r, 4.4549605981865186e-10, 7.072585949269223e-09)
+    series: float = fma(r, 4.4549605981865186e-10, 7.072585949269223e-09)
     series = fma(r, series, 1.0178062445845774e-07)
     series = fma(r, series, 1.321544258792169e-06)
     series = fma(r, series, 1.525273382983612e-05)

@@ -35,7 +35,7 @@ _SHORTEST = 1e-9
 @inlined
 def phase_units(cycles: float) -> int:
     """Cycles as whole phase units; at most `FASTEST` cycles."""
-    return np.int64(min(cycles, FASTEST) * CYCLE)
+    return int(min(cycles, FASTEST) * CYCLE)
 
 
 @inlined
@@ -149,5 +149,5 @@ def smooth_increments(settings: Any, volts: Any, rates: Any, cycles: Any, bends:
         whole = min(0.5 * (cycles[i] + cycles[i + 1]) + correction, FASTEST)
         is_rough = not abs(correction) <= _SMOOTH
         increments[i] = np.int64(-1) if is_rough else np.int64(whole * CYCLE)
-        rough += np.int64(is_rough)
+        rough += int(is_rough)
     return rough

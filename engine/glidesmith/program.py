@@ -213,7 +213,8 @@ def _lowest_hz(preset: "Preset", volts: "Sequence[float]", octaves_per_volt: flo
     lowest = min(volts)
     if preset.pitch.steps_per_octave:
         lowest -= 1.0 / preset.pitch.steps_per_octave
-    return note_hz(preset.tuning.zero_volts, preset.tuning.a4_hz) * 2.0 ** (lowest * octaves_per_volt)
+    zero_hz = note_hz(preset.tuning.zero_volts, preset.tuning.a4_hz)
+    return float(zero_hz * 2.0 ** (lowest * octaves_per_volt))
 
 
 def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchChange]") -> tuple[str, ...]:

@@ -27,8 +27,8 @@ from typing import Any
 
 import numpy as np
 
-from glidesmith.compiled import inlined, kernel, vector_kernel
 from glidesmith.collocation import piece_at, take_piece
+from glidesmith.compiled import inlined, kernel, vector_kernel
 from glidesmith.slew import EXP, GLIDE, HELD, LOG, RC, SETTLED, SOFT, glide_begin, glide_volts
 from glidesmith.target import (
     ARC,

@@ -37,7 +37,7 @@ CHUNK = 512
 QUIET = 10.0 ** (-90.0 / 20.0)
 """A render is over when the gain stays under this: -90 dB."""
 
-_NEVER = np.int64(1) << 62
+_NEVER = 1 << 62
 _PHASE_MASK = (1 << 62) - 1
 _RADIANS_PER_UNIT = 2.0 * np.pi / 2.0**62
 _DRONE_FADE_S = 0.02
@@ -146,7 +146,7 @@ def _gliding_samples(settings: Any, glide: Any, since: int, fraction: float, sam
     the same from wherever it is asked.
     """
     left = glide.lasts / settings.step_s - (float(sample - since) - fraction)
-    count = np.int64(min(max(np.ceil(left), 0.0), float(most)))
+    count = int(min(max(np.ceil(left), 0.0), float(most)))
     while count > 0 and _elapsed(settings, since, fraction, sample + count - 1, 0.0) >= glide.lasts:
         count -= 1
     while count < most and _elapsed(settings, since, fraction, sample + count, 0.0) < glide.lasts:
@@ -213,7 +213,7 @@ def _glide_pitch(settings: Any, voice: Any, scratch: Any, at: int, sample: int, 
 @kernel
 def _follow_pitch(settings: Any, voice: Any, events: Any, scratch: Any, count: int) -> None:
     """Fill pitch voltages (before steps) and phase increments for the next ``count`` samples."""
-    at = np.int64(0)  # as a literal it would have every callee compiled for 0 too
+    at: Any = np.int64(0)  # as a literal it would have every callee compiled for 0 too
     while at < count:
         sample = voice.sample + at
         glide = voice.pitch
@@ -424,7 +424,7 @@ def _quiet_sample(settings: Any, voice: Any, gates: Any, latest: int) -> int:
     quiet = amplifier_control(settings.amplifier, QUIET)
     glide = voice.gain
     after = glide_quiet_time(glide, quiet) / settings.step_s
-    return min(np.int64(min(float(voice.gain_sample) + voice.gain_fraction + after, 1e15)) + 1, latest)
+    return int(min(float(voice.gain_sample) + voice.gain_fraction + after + 1.0, float(latest)))
 
 
 @inlined

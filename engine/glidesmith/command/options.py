@@ -1,5 +1,6 @@
 """What commands share: the options that choose a phrase and a rate, and the loading of what they name."""
 
+import sys
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -102,13 +103,13 @@ def phrase_options(function: Function) -> Function:
 
 
 def tell_of_compiling() -> None:
-    """Say that there will be a wait, where the engine is still to be compiled for this processor."""
+    """Say at a terminal that there will be a wait while the engine is compiled for this processor."""
     from glidesmith.command import tell
     from glidesmith.compiled import CACHE_FOLDER, compiles_first
 
-    if compiles_first():
-        again = ", once" if CACHE_FOLDER else "; it can't be kept: set GLIDESMITH_CACHE to a folder of your own"
-        tell(f"glidesmith: compiling the engine for this processor{again} (up to a minute)")
+    if sys.stderr.isatty() and compiles_first():
+        again = ", once" if CACHE_FOLDER else " (not kept: GLIDESMITH_CACHE can name a folder of your own)"
+        tell(f"glidesmith: compiling the engine for this processor{again}: up to a minute")
 
 
 rate_option = click.option(
