@@ -6,7 +6,7 @@ import pytest
 
 from commands import ENVIRONMENT, PRESET, complaint, process, run, write_midi, write_preset
 from glidesmith import load_phrase, load_preset, measure
-from glidesmith.measure import table
+from glidesmith.measuring import table
 
 
 @pytest.fixture

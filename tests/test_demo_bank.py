@@ -16,7 +16,7 @@ from commands import run
 from compose_phrases import STATEMENT, bend, compositions, controller, track, variable_length
 from conftest import PHRASES, PRESETS
 from glidesmith.keyboard import LEGATO, PRESS, RETURN, key_changes
-from glidesmith.measure import Facts, measure
+from glidesmith.measuring import Facts, measure
 from glidesmith.phrase import Phrase, load_phrase
 from glidesmith.preset import Preset, load_preset
 from glidesmith.rendering import Rendering, render

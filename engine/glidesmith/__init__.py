@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from glidesmith.errors import PhraseError as PhraseError
     from glidesmith.errors import PresetError as PresetError
     from glidesmith.errors import SettingError as SettingError
-    from glidesmith.measure import measure as measure
+    from glidesmith.measuring import measure as measure
     from glidesmith.phrase import load_phrase as load_phrase
     from glidesmith.preset import load_preset as load_preset
     from glidesmith.rendering import render as render
@@ -31,7 +31,7 @@ _HOME = {
     "Slew": "glidesmith.slew",
     "load_phrase": "glidesmith.phrase",
     "load_preset": "glidesmith.preset",
-    "measure": "glidesmith.measure",
+    "measure": "glidesmith.measuring",
     "render": "glidesmith.rendering",
 }
 

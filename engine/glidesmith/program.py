@@ -190,16 +190,17 @@ def sample_position(time: Fraction, sample_rate: int) -> tuple[int, float]:
     return (sample + 1, 0.0) if fraction == 1.0 else (sample, fraction)
 
 
-def _pitch_events(changes: "Sequence[PitchChange]", sample_rate: int) -> "NDArray[Any]":
-    """The converter's output as events.
+def changes_let_through(changes: "Sequence[PitchChange]") -> "list[PitchChange]":
+    """The changes after the first note that come through the converter: of several at one tick, the last."""
+    later = {change.held_time: change for change in changes[1:]}
+    return list(later.values())
 
-    Of several changes that one tick lets through, the last one counts.
-    """
-    rows: list[tuple[int, float, float, bool]] = []
-    for index, change in enumerate(changes[1:], start=1):
-        if index + 1 < len(changes) and changes[index + 1].held_time == change.held_time:
-            continue
-        rows.append((*sample_position(change.held_time, sample_rate), change.held_volts, change.jump))
+
+def _pitch_events(changes: "Sequence[PitchChange]", sample_rate: int) -> "NDArray[Any]":
+    rows = [
+        (*sample_position(change.held_time, sample_rate), change.held_volts, change.jump)
+        for change in changes_let_through(changes)
+    ]
     return np.array(rows, PITCH_EVENT)
 
 

@@ -54,7 +54,8 @@ def command(
       glidesmith measure lead.toml --phrase line.mid --channel 2 --plot lead.svg
       glidesmith measure lead.toml --json > facts.json
     """
-    from glidesmith.measure import measure, table
+    from glidesmith.facts import table
+    from glidesmith.measuring import measure
     from glidesmith.preset import load_preset
 
     if plot is not None and plot.suffix.lower() not in PICTURES:
