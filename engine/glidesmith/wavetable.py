@@ -1,0 +1,323 @@
+"""The oscillator's waves as Fourier series, and the tables it reads them from.
+
+A wave is a function of the phase p, 0 to 1 over a cycle, and spans -1 to 1 before it is band-limited:
+
+========  ==============================================================================================
+sine      sin(2πp)
+triangle  from 0 up to 1 at p = 1/4, down to -1 at 3/4, back to 0
+saw       2p - 1
+pulse     1 for p < width, else -1; its mean is removed and the rest not stretched: 0.05 reaches 1.9
+file      one cycle of a recording, its mean removed and stretched to a peak of 1, through its own samples
+========  ==============================================================================================
+
+The series of the first four stand in any handbook (Bronshtein and Semendyayev, table of Fourier expansions;
+from memory); the last is the discrete Fourier transform of the cycle.
+"""
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+from itertools import pairwise
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from glidesmith.errors import SettingError
+from glidesmith.oscillator import FADE_SHARE, HIGHEST_SHARE, LEVEL, LEVELS_PER_OCTAVE
+from glidesmith.text import printable
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+WAVES = ("sine", "triangle", "saw", "pulse", "file")
+NARROWEST, WIDEST = 0.05, 0.95
+SHORTEST_CYCLE, LONGEST_CYCLE = 8, 65_536
+
+MOST_PARTIALS = 16_384
+"""Of the lowest table: enough for all partials under 0.45 of the rate down to 8 Hz at 192 kHz."""
+
+IMAGES_DB = -115.0
+"""At most the power of the images that interpolation makes of the partials, against the wave's power."""
+
+_LOWEST_LEVEL = LEVELS_PER_OCTAVE * int(math.log2(MOST_PARTIALS))
+_LEVELS_TOGETHER = 3
+_SMALLEST_BITS = 8
+_NO_PARTIAL = 1e-12
+_SILENT = 1e-6
+_WAV_MARKS = (b"RIFF", b"RIFX", b"RF64")
+
+
+@dataclass(frozen=True, eq=False)
+class Wavetables:
+    """One wave's tables, to be read by `glidesmith.oscillator`. They are shared: never write to them.
+
+    Parameters
+    ----------
+    wave : str
+        The wave's name.
+    lowest_level : int
+        The last level that is there; frequencies under it are served by it.
+    levels : LEVEL (lowest_level + 2,)
+        The levels, after one record of silence.
+    cells : int64 (2 · cells,)
+        Each cell of each table as two words, which hold four float32: the coefficients c0 to c3 of the cubic.
+    """
+
+    wave: str
+    lowest_level: int
+    levels: "NDArray[Any]"
+    cells: "NDArray[np.int64]"
+
+
+def level_partials(level: int) -> int:
+    """How many partials a level's table holds: as many as stay under height 0 at the level's upper border."""
+    return int(2.0 ** (level / LEVELS_PER_OCTAVE) + 1e-9)
+
+
+def check_cycle(cycle: "NDArray[np.float64]", where: str = "cycle") -> "NDArray[np.float64]":
+    """One cycle with its mean removed and stretched to a peak of 1; SettingError where it is no cycle."""
+    if cycle.ndim != 1 or not SHORTEST_CYCLE <= cycle.size <= LONGEST_CYCLE:
+        raise SettingError(
+            f"{where}: {'×'.join(map(str, cycle.shape))} samples; one cycle has {SHORTEST_CYCLE} to "
+            f"{LONGEST_CYCLE}: cut the recording to a single cycle"
+        )
+    if not np.isfinite(cycle).all():
+        raise SettingError(f"{where}: holds a NaN or an infinity; export the cycle again as finite samples")
+    with np.errstate(over="ignore"):
+        centred = cycle - cycle.mean()
+    peak = float(np.abs(centred).max())
+    if not math.isfinite(peak):
+        raise SettingError(
+            f"{where}: samples up to {np.abs(cycle).max():g}; export the cycle again at -1 to 1"
+        )
+    if peak < _SILENT:
+        raise SettingError(
+            f"{where}: silent (peak {peak:g} without its mean); choose a cycle with a sound in it"
+        )
+    return np.asarray(centred / peak, dtype=np.float64)
+
+
+def read_cycle(path: str | Path) -> "NDArray[np.float64]":
+    """Read one cycle from a WAV file.
+
+    Parameters
+    ----------
+    path : str or Path
+        A WAV file of 8 to 65,536 samples; several channels are averaged. Its sample rate has no meaning here.
+
+    Returns
+    -------
+    float64 (n,)
+        The cycle, its mean removed, peak 1.
+
+    Raises
+    ------
+    SettingError
+        One line: no such file, no WAV file, too short, too long, silent or not finite.
+    """
+    import soundfile
+
+    place = Path(path)
+    where = f"oscillator.file {printable(str(place))}"
+    _check_wav(place, where)
+    try:
+        with soundfile.SoundFile(str(place)) as wav:
+            if not SHORTEST_CYCLE <= wav.frames <= LONGEST_CYCLE:
+                raise SettingError(
+                    f"{where}: {wav.frames} samples; one cycle has {SHORTEST_CYCLE} to {LONGEST_CYCLE}: "
+                    "cut the recording to a single cycle"
+                )
+            samples = wav.read(dtype="float64", always_2d=True)
+    except (soundfile.SoundFileError, OSError) as error:
+        raise SettingError(
+            f"{where}: can't be read as WAV ({printable(str(error))}); export it again as WAV"
+        ) from None
+    with np.errstate(invalid="ignore", over="ignore"):
+        cycle = samples.mean(axis=1)
+    return check_cycle(cycle, where)
+
+
+def _check_wav(path: Path, where: str) -> None:
+    """Refuse what is no WAV file before the library for sound files guesses from the name."""
+    try:
+        if not path.exists():
+            raise SettingError(f"{where}: no such file; give a WAV file that holds one cycle")
+        if not path.is_file():
+            raise SettingError(f"{where}: not a file; give a WAV file that holds one cycle")
+        with path.open("rb") as file:
+            head = file.read(12)
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise SettingError(f"{where}: {printable(reason)}; give a WAV file that can be read") from None
+    if head[:4] not in _WAV_MARKS or head[8:12] != b"WAVE":
+        raise SettingError(f"{where}: not a WAV file; export the cycle as WAV")
+
+
+def partials(
+    wave: str, width: float, cycle: "NDArray[np.float64] | None", count: int
+) -> "NDArray[np.complex128]":
+    """The Fourier series of a wave.
+
+    Parameters
+    ----------
+    wave : str
+        One of `WAVES`.
+    width : float
+        Share of the cycle for which a pulse is up, 0.05 to 0.95; other waves ignore it.
+    cycle : float64 (n,) or None
+        The cycle of the wave ``file``, 8 to 65,536 samples; other waves ignore it.
+    count : int
+        How many partials.
+
+    Returns
+    -------
+    complex128 (count,)
+        c with wave(p) = Σ Re(c[k - 1] · exp(2πikp)), k from 1.
+
+    Raises
+    ------
+    SettingError
+        For a wave, width or cycle that can't be.
+    """
+    k = np.arange(1, count + 1).astype(np.complex128)
+    if wave == "sine":
+        return np.where(k == 1, -1j, 0j)
+    if wave == "triangle":
+        sign = np.array([0.0, 1.0, 0.0, -1.0])[np.arange(1, count + 1) % 4]
+        return -8j / math.pi**2 * sign / k**2
+    if wave == "saw":
+        return 2j / (math.pi * k)
+    if wave == "pulse":
+        if not NARROWEST <= width <= WIDEST:
+            raise SettingError(f"oscillator.width: {width!r}; give {NARROWEST} to {WIDEST}")
+        return 2.0 / (1j * math.pi * k) * (1.0 - np.exp(-2j * math.pi * k * width))
+    if wave != "file":
+        raise SettingError(f"oscillator.wave: {wave!r}; choose one of {', '.join(WAVES)}")
+    if cycle is None:
+        raise SettingError('oscillator.file: missing; the wave "file" needs a WAV file that holds one cycle')
+    return _cycle_partials(check_cycle(np.asarray(cycle, dtype=np.float64)), count)
+
+
+def _cycle_partials(cycle: "NDArray[np.float64]", count: int) -> "NDArray[np.complex128]":
+    """The discrete Fourier transform; the last partial of an even length is a cosine, counted once."""
+    spectrum = np.fft.rfft(cycle) * (2.0 / cycle.size)
+    if cycle.size % 2 == 0:
+        spectrum[-1] = spectrum[-1].real / 2.0
+    found = np.zeros(count, dtype=np.complex128)
+    kept = min(count, spectrum.size - 1)
+    found[:kept] = spectrum[1 : kept + 1]
+    return found
+
+
+def build_wavetables(
+    wave: str, width: float, cycle: "NDArray[np.float64] | None", lowest_hz: float, sample_rate: float
+) -> Wavetables:
+    """A wave's tables for all frequencies from ``lowest_hz`` up.
+
+    The tables don't depend on the sample rate, and no table on which others are there: ``lowest_hz`` and
+    ``sample_rate`` only settle how far down they go. The tables for the highest frequencies are small and
+    always there. What was built lately is kept.
+
+    Parameters
+    ----------
+    wave, width, cycle
+        As for `partials`.
+    lowest_hz : float
+        The lowest frequency to be sounded with all its partials, over 0. Still lower ones sound, with fewer.
+    sample_rate : float
+        Hz.
+
+    Raises
+    ------
+    SettingError
+        As `partials`.
+    """
+    if not (0.0 < lowest_hz < math.inf and 0.0 < sample_rate < math.inf):
+        raise SettingError(
+            f"lowest frequency {lowest_hz!r} Hz at {sample_rate!r} Hz: give finite ones over 0"
+        )
+    depth = LEVELS_PER_OCTAVE * math.log2(HIGHEST_SHARE * sample_rate / lowest_hz)
+    together = math.ceil(max(depth, 1.0) / _LEVELS_TOGETHER) * _LEVELS_TOGETHER
+    key = None
+    if wave == "file" and cycle is not None:
+        key = check_cycle(np.asarray(cycle, dtype=np.float64)).tobytes()
+    return _wavetables(wave, float(width) if wave == "pulse" else 0.5, key, min(together, _LOWEST_LEVEL))
+
+
+@lru_cache(maxsize=8)
+def _wavetables(wave: str, width: float, cycle: bytes | None, lowest_level: int) -> Wavetables:
+    counts = [level_partials(level) for level in range(lowest_level + 1)]
+    series = partials(wave, width, None if cycle is None else np.frombuffer(cycle), counts[-1])
+    tables = _table_numbers(series, counts)
+    sizes = _table_bits(series, [counts[tables.index(table)] for table in range(tables[-1] + 1)])
+    levels = np.zeros(lowest_level + 2, LEVEL)
+    starts = np.concatenate([[1], 1 + np.cumsum([1 << bits for bits in sizes])])
+    _describe_levels(levels, tables, starts, sizes)
+    coefficients = np.zeros((starts[-1], 4), dtype=np.float32)
+    for table, bits in enumerate(sizes):
+        count = counts[tables.index(table)]
+        _fill_table(coefficients[starts[table] : starts[table + 1]], series[:count], 1 << bits)
+    return Wavetables(wave, lowest_level, levels, coefficients.view(np.int64).reshape(-1))
+
+
+def _table_numbers(series: "NDArray[np.complex128]", counts: list[int]) -> list[int]:
+    """The number of each level's table, from 0. A level that adds no partial shares the table above it."""
+    sounding = np.abs(series) > _NO_PARTIAL * np.abs(series).max()
+    numbers = [0]
+    for fewer, count in pairwise(counts):
+        numbers.append(numbers[-1] + int(sounding[fewer:count].any()))
+    return numbers
+
+
+def _table_bits(series: "NDArray[np.complex128]", counts: list[int]) -> list[int]:
+    """log2 of the size that each table needs to keep its images under `IMAGES_DB`.
+
+    Between two points a step apart, the error of cubic Hermite interpolation is f''''/24 · t²(1 - t)² (Davis,
+    Interpolation and Approximation, 1963, theorem 3.5.1; from memory). For a partial of x radians a step that
+    is x⁴/24 of it, times a pulse train of mean 1/30, which only changes the partial's level, and variance
+    1/630 - 1/900: the images.
+    """
+    power = np.abs(series) ** 2
+    radians = 2.0 * math.pi * np.arange(1, series.size + 1)
+    images = np.cumsum(power * radians**8) * ((1.0 / 630.0 - 1.0 / 900.0) / 24.0**2)
+    allowed = np.cumsum(power) * 10.0 ** (IMAGES_DB / 10.0)
+    sizes = []
+    for count in counts:
+        needed = (images[count - 1] / allowed[count - 1]) ** 0.125 if allowed[count - 1] > 0.0 else 0.0
+        sizes.append(math.ceil(math.log2(max(needed, 4.0 * count, 2.0**_SMALLEST_BITS))))
+    return sizes
+
+
+def _describe_levels(
+    levels: "NDArray[Any]", tables: list[int], starts: "NDArray[np.int64]", sizes: list[int]
+) -> None:
+    """Fill the records: each level's table, the one it fades into, and where one table is enough."""
+    levels[0] = (-math.inf, 0.0, 0, 62, 0, 62)
+    for level, table in enumerate(tables):
+        row = levels[level + 1]
+        row["start"], row["shift"] = starts[table], 62 - sizes[table]
+        upper = levels[level]
+        shared = level > 0 and tables[level - 1] == table
+        row["plain_from"] = upper["plain_from"] if shared else level + FADE_SHARE
+        row["upper_start"], row["upper_shift"] = upper["start"], upper["shift"]
+    row["plain_to"] = math.inf
+    for level in range(len(tables) - 1, 0, -1):
+        shared = tables[level - 1] == tables[level]
+        levels[level]["plain_to"] = levels[level + 1]["plain_to"] if shared else level
+
+
+def _fill_table(coefficients: "NDArray[np.float32]", series: "NDArray[np.complex128]", size: int) -> None:
+    """Every cell's cubic Hermite coefficients, from the series' exact values and slopes at its borders."""
+    spectrum = np.zeros(size // 2 + 1, dtype=np.complex128)
+    spectrum[1 : series.size + 1] = series * (size / 2.0)
+    values = np.fft.irfft(spectrum, size)
+    slopes = np.fft.irfft(spectrum * (2j * math.pi / size * np.arange(spectrum.size)), size)
+    rise = np.roll(values, -1) - values
+    bend = slopes + np.roll(slopes, -1) - 2.0 * rise
+    coefficients[:, 0] = values
+    coefficients[:, 1] = slopes
+    coefficients[:, 2] = rise - slopes - bend
+    coefficients[:, 3] = bend
+    # Adding 0 turns -0 into 0, lest a table read alone differ in a bit from one under a fade of weight 0.
+    coefficients[:, 0] += np.float32(0.0)
