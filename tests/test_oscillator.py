@@ -48,8 +48,10 @@ def sound(
     phases: NDArray[np.int64], heights: NDArray[np.float64], tables: Wavetables, block: int = 1 << 30
 ) -> Samples:
     out = np.full(phases.size, np.nan, np.float32)
-    for part in blocks(phases.size, block):
-        oscillate(phases[part], heights[part], tables.levels, tables.cells, out[part])
+    # Compiled code says nothing about overflow; with the compiler off numpy would.
+    with np.errstate(over="ignore", invalid="ignore"):
+        for part in blocks(phases.size, block):
+            oscillate(phases[part], heights[part], tables.levels, tables.cells, out[part])
     return out
 
 

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 __version__ = "0.1.0"
 
 if TYPE_CHECKING:
+    from glidesmith.comparison import compare as compare
     from glidesmith.errors import GlidesmithError as GlidesmithError
     from glidesmith.errors import OutputError as OutputError
     from glidesmith.errors import PhraseError as PhraseError
@@ -29,6 +30,7 @@ _HOME = {
     "PresetError": "glidesmith.errors",
     "SettingError": "glidesmith.errors",
     "Slew": "glidesmith.slew",
+    "compare": "glidesmith.comparison",
     "load_phrase": "glidesmith.phrase",
     "load_preset": "glidesmith.preset",
     "measure": "glidesmith.measuring",
@@ -43,6 +45,7 @@ __all__ = [
     "SettingError",
     "Slew",
     "__version__",
+    "compare",
     "load_phrase",
     "load_preset",
     "measure",

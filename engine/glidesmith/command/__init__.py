@@ -17,7 +17,7 @@ import click
 from glidesmith import __version__
 from glidesmith.errors import GlidesmithError
 
-COMMANDS = ("render", "measure", "check", "completion")
+COMMANDS = ("render", "measure", "compare", "tally", "check", "completion")
 
 BAD_INPUT = 2
 INTERRUPTED = 130
