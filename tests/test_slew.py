@@ -306,6 +306,7 @@ def test_inverse_and_rate_agree_with_the_output(law):
         elapsed = generator.uniform(0.05, 0.9) * reach
         volts = glide_volts(glide, elapsed)
         assert glide_volts(glide, glide_time(glide, volts)) == pytest.approx(volts, abs=1e-11)
+        assert glide_rate(glide, float(glide["lasts"])) == 0.0
         tick = 1e-5 * reach
         slope = (glide_volts(glide, elapsed + tick) - glide_volts(glide, elapsed - tick)) / (2 * tick)
         assert glide_rate(glide, elapsed) == pytest.approx(slope, rel=1e-5, abs=1e-7 / reach)

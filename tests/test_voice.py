@@ -279,6 +279,18 @@ def test_a_render_ends_when_the_gain_stays_under_90_db_or_at_the_tail():
     )
 
 
+def test_a_render_does_not_end_while_a_slow_slew_still_rises_towards_a_long_release():
+    """The gate closes after 1 ms with the gain under -90 dB, and the control goes on rising for seconds."""
+    preset = make_preset(
+        gain={"law": "linear", "rise": 60.0, "fall": 1.0},
+        envelope={"attack": 0.0, "decay": 0.0, "sustain": 1.0, "release": 5.0},
+    )
+    rendering = render(preset, make_phrase((0, "1/1000", 60)), 8000, trace=True)
+    assert rendering.gain[:10].max() < 10**-4.5
+    assert rendering.gain.max() == pytest.approx(5.0 / 65.0, rel=1e-3)
+    assert rendering.audio.size > 8000 * 4.9
+
+
 def test_clipped_samples_are_counted_held_at_the_ceiling_and_reported():
     loud = make_preset(oscillator={"wave": "pulse", "width": 0.05, "level_db": 0.0})
     rendering = render(loud, make_phrase((0, 1, 48)))
