@@ -65,5 +65,14 @@ def test_the_listing_need_not_be_in_order_of_time():
     assert changes((4, 6), (0, 2)) == [(0, 1, "press"), (2, 1, "release"), (4, 0, "press"), (6, 0, "release")]
 
 
+def test_ten_thousand_keys_held_at_once_are_let_go_in_order_of_pressing():
+    count = 10_000
+    notes = [Note(Fraction(i), Fraction(count + i), 60, 1.0) for i in range(count)]
+    found = list(key_changes(notes))
+    assert [c.note for c in found[:count]] == list(range(count))
+    assert len(found) == count + 1
+    assert found[-1] == KeyChange(Fraction(2 * count - 1), count - 1, "release")
+
+
 def test_a_change_is_a_plain_record():
     assert next(key_changes([Note(Fraction(1), Fraction(2), 60, 1.0)])) == KeyChange(Fraction(1), 0, "press")

@@ -99,6 +99,42 @@ def test_phase_stays_with_the_integral_over_many_fast_and_slow_glides(law):
     assert worst < WITHIN_CYCLES
 
 
+@pytest.mark.parametrize(
+    ("side", "knee", "low", "high", "rate"),
+    [(1e-5, 0.001, 60, 84, 48_000), (5e-6, 0.001, 36, 108, 44_100), (4.2e-6, 0.001, 48, 108, 48_000)],
+)
+def test_a_knee_too_short_for_the_quadrature_to_see_is_still_counted(side, knee, low, high, rate):
+    """2,400 `soft` glides up and down, whose landing takes 10 ns; the same bound as for mixed glides."""
+    count, step = 2400, Fraction(1, 40)
+    starts = [i * step + (Fraction(i * 37 % 999, 1_000_003) if i else 0) for i in range(count)]
+    numbers = [high if i % 2 else low for i in range(count)]
+    rows = [(s, s + step * 4, n) for s, n in zip(starts, numbers, strict=True)]
+    zero_hz, low_v, high_v = 440 * 2 ** (-9 / 12), (low - 60) / 12, (high - 60) / 12
+    excess = {}
+    for origin, target in ((low_v, high_v), (high_v, low_v)):
+        course, _ = output("soft", side, origin, target, 0.0, 1.0, np.longdouble(knee))
+        landed = side * (abs(target - origin) + 60 * knee)
+        cuts = side * (abs(target - origin) + knee * np.arange(-60.0, 60.0, 0.5))
+        gone = quadrature(lambda t, c=course: zero_hz * 2.0 ** c(t), 0.0, landed, cuts)
+        excess[target] = float(gone - zero_hz * 2.0**target * landed)
+    cycles = 0.0
+    for i, start in enumerate(starts):
+        lasts = (starts[i + 1] if i + 1 < count else count * step) - start
+        volts = high_v if i % 2 else low_v
+        cycles += zero_hz * 2.0**volts * float(lasts) + (excess[volts] if i else 0.0)
+    slew = {"law": "soft", "rise": side, "fall": side, "knee": knee}
+    phase = played_phase(make_preset(pitch=slew), make_phrase(*rows), rate, int(count * step * rate))
+    assert abs((phase - cycles + 0.5) % 1.0 - 0.5) < WITHIN_CYCLES
+
+
+def test_the_phase_goes_on_right_where_a_note_is_too_high_to_sound():
+    """Note 127 with 0 V at C-1 and 100 cents an octave too wide: 23.1 kHz, 2.9 cycles a sample at 8 kHz."""
+    preset = make_preset(tuning={"zero_volts": "C-1", "scale_error_cents_per_octave": 100.0})
+    hz = 440 * 2 ** (-69 / 12) * 2 ** (127 / 12 * (1 + 100 / 1200))
+    phase = played_phase(preset, make_phrase((0, 1, 127)), 8000, 4000)
+    assert abs((phase - hz / 2 + 0.5) % 1.0 - 0.5) < 1e-6
+
+
 @pytest.mark.parametrize("steps", [12, 5])
 def test_a_glissando_steps_between_samples(steps):
     """A linear glide of an octave in 1 s spends 1/steps s on each step (the first and last half as long)."""

@@ -164,9 +164,9 @@ def test_a_minute_long_glide_gathers_no_error(slew, rate):
 
 
 def test_rc_is_a_one_pole_filter_at_audio_rate():
-    """Reference.
+    """The reference delays by the sample that run's timing counts.
 
-    `scipy.signal.lfilter` with a = exp(−dt/T), which delays by the sample that run's timing counts.
+    Reference: `scipy.signal.lfilter` with a = exp(−dt/T).
     """
     x = np.random.default_rng(23).standard_normal(48_000)
     for time_constant in (1e-6, 1e-4, 0.01, 3.0):
@@ -421,7 +421,7 @@ def test_empty_and_single_signals():
         ({"rise": 61.0}, "out of range"),
         ({"fall": 1e-7}, "1e-6"),
         ({"fall": float("nan")}, "fall"),
-        ({"rise": "80 ms"}, "give a number"),
+        ({"rise": "80 mm"}, "80 mm"),
         ({"rise": True}, "give a number"),
         ({"bend": 0.0}, "bend"),
         ({"knee": 3.0}, "knee"),
@@ -441,7 +441,10 @@ def test_settings_without_meaning_are_refused_in_one_line(settings, words):
     [
         (([[1.0]], 48_000), "one row"),
         (([1.0, np.nan], 48_000), r"x\[1\]"),
-        (([1.0, np.inf], 48_000), "finite"),
+        (([1.0, np.inf], 48_000), r"within ±1e\+06"),
+        (([0.0, 1e308], 48_000), "within"),
+        (("abc", 48_000), "no row of numbers"),
+        (([1j], 48_000), "no row of numbers"),
         (([1.0], 0), "sample_rate"),
         (([1.0], np.nan), "sample_rate"),
         (([1.0], 48_000, np.inf), "start"),
@@ -450,6 +453,10 @@ def test_settings_without_meaning_are_refused_in_one_line(settings, words):
 def test_signals_without_meaning_are_refused(arguments, words):
     with pytest.raises(SettingError, match=words):
         Slew("rc", 0.1, 0.1).run(*arguments)
+
+
+def test_times_may_have_units():
+    assert Slew("rc", "80 ms", "1.2 s") == Slew("rc", 0.08, 1.2)
 
 
 def test_a_held_glide_says_so():

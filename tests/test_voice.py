@@ -11,7 +11,7 @@ import pytest
 from scipy.integrate import solve_ivp
 
 from conftest import LONG
-from glidesmith import render
+from glidesmith import SettingError, render
 from glidesmith.program import compile_program
 from glidesmith.slew import LAWS
 from glidesmith.voice import Traces, Voice
@@ -291,6 +291,35 @@ def test_a_render_does_not_end_while_a_slow_slew_still_rises_towards_a_long_rele
     assert rendering.audio.size > 8000 * 4.9
 
 
+def test_nothing_is_said_to_be_cut_off_where_the_sound_ends_by_itself():
+    preset = make_preset(gain={"law": "linear", "rise": 0, "fall": 0})
+    assert not render(preset, make_phrase((0, 1, 60)), 8000, tail_s=0).warnings
+    enveloped = make_preset(gain={"law": "linear", "rise": 0, "fall": 0}, envelope={**ENVELOPE, "release": 0})
+    assert not render(enveloped, make_phrase((0, 1, 60)), 8000, tail_s=0).warnings
+    assert render(make_preset(), make_phrase((0, 1, 60)), 8000, tail_s=0.01).warnings
+
+
+def test_a_gate_that_closes_just_as_the_attack_ends_is_the_same_at_every_rate():
+    """Both at 59 ms, which is no exact number; with no decay the level after the attack is another."""
+    preset = make_preset(
+        gain={"law": "linear", "rise": 0, "fall": 0},
+        envelope={"attack": 0.059, "decay": 0.0, "sustain": 0.2, "release": 0.5},
+    )
+    phrase = make_phrase(("3659/1000", "3718/1000", 60))
+    after = []
+    for rate in (22_050, 44_100, 48_000, 96_000, 192_000):
+        control = render(preset, phrase, rate, trace=True).gain_control
+        after.append(np.interp(3.768, np.arange(control.size) / rate, control))
+    assert after == pytest.approx([0.9] * 5, abs=1e-6)
+
+
+def test_whatever_is_no_preset_or_phrase_is_refused_by_name():
+    with pytest.raises(SettingError, match="load_preset"):
+        render("lead.toml", make_phrase((0, 1, 60)))
+    with pytest.raises(SettingError, match="load_phrase"):
+        render(make_preset(), None)
+
+
 def test_clipped_samples_are_counted_held_at_the_ceiling_and_reported():
     loud = make_preset(oscillator={"wave": "pulse", "width": 0.05, "level_db": 0.0})
     rendering = render(loud, make_phrase((0, 1, 48)))
@@ -301,10 +330,7 @@ def test_clipped_samples_are_counted_held_at_the_ceiling_and_reported():
 
 @pytest.mark.parametrize("law", LAWS)
 def test_extremes_are_finite_and_under_the_ceiling(law):
-    """Denormals, silence, T from 0 to 60 s, pitch from -5 to +7 V (MIDI notes 0 to 127 reach -5 to +5.6 V.
-
-    0 V moved for the rest).
-    """
+    """Denormals, silence, T from 0 to 60 s, pitch from -5 V (MIDI note 0) to +7 V (note 127, 0 V at G2)."""
     generator = np.random.default_rng(LAWS.index(law))
     sides = (0.0, 1e-6, 1e-3, 60.0)
     for case in range(24 if LONG else 8):
@@ -320,8 +346,16 @@ def test_extremes_are_finite_and_under_the_ceiling(law):
                 "knee": float(generator.choice([0.001, 2.0])),
                 "curvature": float(generator.choice([-20.0, 0.0, 20.0])),
             },
-            gain={"law": law, "rise": gain_rise, "fall": gain_fall},
-            tuning={"zero_volts": "G3" if case % 2 else "C4"},
+            gain={
+                "law": law,
+                "rise": gain_rise,
+                "fall": gain_fall,
+                "bend": float(generator.choice([0.01, 10.0])),
+                "knee": float(generator.choice([0.001, 2.0])),
+                "curvature": float(generator.choice([-20.0, 20.0])),
+            },
+            tuning={"zero_volts": "G2" if case % 2 else "C4"},
+            **({"envelope": ENVELOPE} if case % 3 and law not in ("curve", "cosine") else {}),
         )
         phrase = make_phrase(
             (0, "1/10", 0), ("1/10", "2/10", 127), ("2/10", "3/10", 1), ("5/10", "6/10", 115)
@@ -333,6 +367,7 @@ def test_extremes_are_finite_and_under_the_ceiling(law):
         assert np.abs(rendering.audio).max() <= 1.0
         assert rendering.pitch_volts.min() >= -5.0
         assert rendering.pitch_volts.max() <= 7.0
+        assert rendering.gain.max() <= 1.0
         for signal in (rendering.gain_control, rendering.gain):
             assert not ((signal != 0) & (np.abs(signal) < 1e-300)).any()
 

@@ -26,7 +26,7 @@ def amplifier_gain(amplifier: Any, control: float) -> float:
     The level itself, or (10^(r u/20) − 1)/(10^(r/20) − 1) with r in decibels.
     """
     if amplifier.decibel:
-        return (exp2(amplifier.octaves * control) - 1.0) * amplifier.scale
+        return min((exp2(amplifier.octaves * control) - 1.0) * amplifier.scale, 1.0)
     return control
 
 
@@ -44,7 +44,7 @@ def fill_gain(amplifier: Any, control: Any, gain: Any) -> None:
     if amplifier.decibel:
         octaves, scale = amplifier.octaves, amplifier.scale
         for i in range(gain.size):
-            gain[i] = (exp2(octaves * control[i]) - 1.0) * scale
+            gain[i] = min((exp2(octaves * control[i]) - 1.0) * scale, 1.0)
     else:
         for i in range(gain.size):
             gain[i] = control[i]

@@ -36,6 +36,7 @@ _ALL_BUT_OVER = 1e-9
 """A stage with less than this part of its way left is over when settings change."""
 
 _BORDERS_PER_EVENT = 40
+_TIE_SAMPLES = 1e-8
 """More than an event brings: three stages at most, of at most six stretches."""
 
 GATE_EVENT = np.dtype(
@@ -103,6 +104,15 @@ def walk_reset(walk: Any) -> None:
 def _elapsed(walk: Any, sample: int, fraction: float, step: float) -> float:
     """Seconds from the stage's start to ``sample`` + ``fraction``."""
     return float((float(sample - walk.start_sample) + (fraction - walk.start_fraction)) * step)
+
+
+@inlined
+def _is_beyond(at: float, until: float, step: float) -> bool:
+    """Whether an instant lies beyond a border, by more than rounding can have put it there.
+
+    An event or a sample exactly at a stage's end thus comes before that end, whatever the sample rate.
+    """
+    return at > until + _TIE_SAMPLES * step
 
 
 @kernel
@@ -192,7 +202,7 @@ def _settle(
             due = event.sample < sample or (event.sample == sample and event.fraction < fraction)
             if due:
                 at = _elapsed(walk, event.sample, event.fraction, step)
-        if at > walk.pursuit.until:
+        if _is_beyond(at, walk.pursuit.until, step):
             _pass_border(walk, slew, envelope, rate)
         elif due:
             _take_event(walk, slew, envelope, events[walk.event], at)
@@ -228,13 +238,13 @@ def _run_length(walk: Any, events: Any, step: float, sample: int, most: int) -> 
     if walk.event < events.size:
         count = min(count, events[walk.event].sample + 1 - sample)
     until = walk.pursuit.until
-    if _elapsed(walk, sample + count - 1, 0.0, step) <= until:
+    if not _is_beyond(_elapsed(walk, sample + count - 1, 0.0, step), until, step):
         return count
     guess = np.int64(until / step + walk.start_fraction) + walk.start_sample + 1 - sample
     count = min(max(guess, 1), count)
-    while count > 1 and _elapsed(walk, sample + count - 1, 0.0, step) > until:
+    while count > 1 and _is_beyond(_elapsed(walk, sample + count - 1, 0.0, step), until, step):
         count -= 1
-    while _elapsed(walk, sample + count, 0.0, step) <= until:
+    while not _is_beyond(_elapsed(walk, sample + count, 0.0, step), until, step):
         count += 1
     return int(count)
 
@@ -317,7 +327,7 @@ def _list_borders(
             event = events[walk.event]
             at = _elapsed(walk, event.sample, event.fraction, step)
         pursuit = walk.pursuit
-        if at > pursuit.until:
+        if _is_beyond(at, pursuit.until, step):
             goes_on = pursuit.mode == PIECE and pursuit.meets == 0
             if pursuit.until >= walk.target.duration or (every and not goes_on):
                 samples = float(walk.start_sample) + (walk.start_fraction + pursuit.until * rate)

@@ -43,7 +43,8 @@ def _edges(notes: "Iterable[Note]") -> list[tuple[Fraction, bool, int]]:
 
 def key_changes(notes: "Iterable[Note]") -> Iterator[KeyChange]:
     """The changes of the sounding key through ``notes``, in order of time; at most one at a moment."""
-    held: list[int] = []
+    held: list[int] = []  # in order of pressing; the released ones among them go once they are the latest
+    released: set[int] = set()
     for time, edges in groupby(_edges(notes), key=lambda edge: edge[0]):
         before = held[-1] if held else None
         pressed = []
@@ -51,7 +52,9 @@ def key_changes(notes: "Iterable[Note]") -> Iterator[KeyChange]:
             if is_press:
                 pressed.append(index)
             else:
-                held.remove(index)
+                released.add(index)
+        while held and held[-1] in released:
+            released.remove(held.pop())
         still_held = bool(held)
         held.extend(pressed)
         if pressed:

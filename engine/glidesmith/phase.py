@@ -18,15 +18,11 @@ import numpy as np
 
 from glidesmith.compiled import inlined, kernel, vector_kernel
 from glidesmith.elementary import exp2
-from glidesmith.slew import HELD, glide_time, glide_volts
-
-CYCLE = 4611686018427387904.0
-"""2^62: one cycle in units of the whole-number phase."""
-
-FASTEST = 1.75
-"""Cycles a sample, far over the highest that sounds (0.45); beyond it increments would leave 64 bits."""
+from glidesmith.oscillator import CYCLE
+from glidesmith.slew import HELD, SOFT, glide_time, glide_volts
 
 _LN_2 = 0.6931471805599453
+_UNITS_PER_CYCLE = float(CYCLE)
 _SMOOTH = 3e-9
 _TOLERANCE = 1e-10
 _SHORTEST = 1e-9
@@ -34,8 +30,8 @@ _SHORTEST = 1e-9
 
 @inlined
 def phase_units(cycles: float) -> int:
-    """Cycles as whole phase units; at most `FASTEST` cycles."""
-    return int(min(cycles, FASTEST) * CYCLE)
+    """The part of a cycle beyond whole cycles, in phase units."""
+    return int((cycles - np.floor(cycles)) * _UNITS_PER_CYCLE)
 
 
 @inlined
@@ -97,6 +93,17 @@ def _smooth_cycles(settings: Any, glide: Any, begin: float, end: float) -> float
 
 
 @kernel
+def _soft_cycles(settings: Any, glide: Any, begin: float, end: float) -> float:
+    """The same for `soft`, cut about its knee, which may be so short that no node of the quadrature sees it."""
+    total = 0.0
+    for place in (-30.0, -8.0, -2.0, 0.0, 2.0, 8.0, 30.0):
+        cut = min(max((glide.depth + place) / glide.pace, begin), end)
+        total += _smooth_cycles(settings, glide, begin, cut)
+        begin = cut
+    return total + _smooth_cycles(settings, glide, begin, end)
+
+
+@kernel
 def _stepped_cycles(settings: Any, glide: Any, begin: float, end: float) -> float:
     """The same for a glissando: each step's frequency for as long as the glide is nearest to it."""
     steps = settings.steps_per_octave
@@ -123,7 +130,10 @@ def glide_cycles(settings: Any, glide: Any, begin: float, end: float) -> float:
     held = min(max(glide.lasts, begin), end)
     total = 0.0
     if held > begin and glide.law != HELD:
-        total = _smooth_cycles(settings, glide, begin, held)
+        if glide.law == SOFT:
+            total = _soft_cycles(settings, glide, begin, held)
+        else:
+            total = _smooth_cycles(settings, glide, begin, held)
     if end > held:
         total += (end - held) / settings.step_s * cycles_per_sample(settings, glide.target)
     return total
@@ -131,11 +141,10 @@ def glide_cycles(settings: Any, glide: Any, begin: float, end: float) -> float:
 
 @vector_kernel
 def smooth_increments(settings: Any, volts: Any, rates: Any, cycles: Any, bends: Any, increments: Any) -> int:
-    """Increments of the samples between the instants of one glide; returns how many need `glide_cycles`
-    instead.
+    """Increments of the samples between the instants of one glide; returns how many need more than this.
 
     ``volts``, ``rates``, and the scratch ``cycles`` and ``bends`` are (n + 1,), ``increments`` (n,) in phase
-    units. A sample whose correction is not small gets a negative increment: its size is then unknown.
+    units. A sample whose correction is not small gets a negative increment: it is for `glide_cycles` to find.
     """
     per_volt, at_zero, bend = settings.octaves_per_volt, settings.octaves_at_zero, 0.0
     bend = settings.octaves_per_volt * settings.step_s * (_LN_2 / 12.0)
@@ -146,8 +155,8 @@ def smooth_increments(settings: Any, volts: Any, rates: Any, cycles: Any, bends:
     rough = 0
     for i in range(increments.size):
         correction = bends[i] - bends[i + 1]
-        whole = min(0.5 * (cycles[i] + cycles[i + 1]) + correction, FASTEST)
+        passed = 0.5 * (cycles[i] + cycles[i + 1]) + correction
         is_rough = not abs(correction) <= _SMOOTH
-        increments[i] = np.int64(-1) if is_rough else np.int64(whole * CYCLE)
+        increments[i] = np.int64(-1) if is_rough else np.int64((passed - np.floor(passed)) * _UNITS_PER_CYCLE)
         rough += int(is_rough)
     return rough

@@ -17,6 +17,7 @@ from glidesmith.converter import converted_volts, held_time
 from glidesmith.envelope import ENVELOPE, GATE_EVENT, envelope_record
 from glidesmith.errors import SettingError
 from glidesmith.keyboard import LEGATO, PRESS, RELEASE, KeyChange, key_changes
+from glidesmith.oscillator import CYCLE, HIGHEST_SHARE
 from glidesmith.slew import SLEW, Slew
 from glidesmith.units import note_hz
 from glidesmith.voice import quiet_sample
@@ -31,9 +32,6 @@ if TYPE_CHECKING:
     from glidesmith.preset import Preset, SlewSettings
 
 LOWEST_RATE, HIGHEST_RATE = 8_000, 384_000
-PHASE_CYCLE = 1 << 62
-"""One cycle of the oscillator in units of its whole-number phase."""
-
 SETTINGS = np.dtype(
     [
         ("pitch", SLEW),
@@ -87,9 +85,9 @@ class PitchChange:
 
 @dataclass(frozen=True, slots=True)
 class GateChange:
-    """A new level of the gate, 0 to 1 (0.
+    """A new level of the gate, from 0, which is closed, to 1.
 
-    Closed). ``opens``: no key was held; ``trigger``: the envelope starts.
+    ``opens``: no key was held; ``trigger``: the envelope starts.
     """
 
     time: Fraction
@@ -226,8 +224,9 @@ def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchC
         return ()
     first = min(clipped)
     volts = note_volts(preset, phrase.notes[first].number)
+    low, high = (converted_volts(preset.converter, end)[0] for end in (-100.0, 100.0))
     return (
-        f"converter: {len(clipped)} of the phrase's notes lie outside ±{preset.converter.span_volts / 2:g} V "
+        f"converter: {len(clipped)} of the phrase's notes are nearest to no code from {low:+g} to {high:+g} V "
         f"and are clipped (the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move "
         "tuning.zero_volts",
     )
@@ -251,8 +250,8 @@ def _settings(preset: "Preset", sample_rate: int, first_volts: float) -> "NDArra
     row["first_volts"] = first_volts
     if preset.drone is not None:
         hz = note_hz(preset.drone.note, preset.tuning.a4_hz)
-        if hz < 0.45 * sample_rate:
-            row["drone_increment"] = round(hz / sample_rate * PHASE_CYCLE)
+        if hz < HIGHEST_SHARE * sample_rate:
+            row["drone_increment"] = round(hz / sample_rate * CYCLE)
             row["drone_level"] = 10.0 ** (preset.drone.level_db / 20.0)
     return settings
 
@@ -269,6 +268,18 @@ def check_sample_rate(sample_rate: int) -> int:
             "(48000 is usual)"
         )
     return int(sample_rate)
+
+
+def _check_kinds(preset: object, phrase: object) -> None:
+    from glidesmith.phrase import Phrase
+    from glidesmith.preset import Preset
+
+    if not isinstance(preset, Preset):
+        raise SettingError(f"preset is of type {type(preset).__name__}: give what load_preset returns")
+    if not isinstance(phrase, Phrase):
+        raise SettingError(f"phrase is of type {type(phrase).__name__}: give what load_phrase returns")
+    if not phrase.notes:
+        raise SettingError("the phrase has no notes: give it at least one")
 
 
 def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s: float = 30.0) -> Program:
@@ -288,6 +299,7 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
     SettingError
         For a rate or a tail out of range, and for an oscillator file that can't be used.
     """
+    _check_kinds(preset, phrase)
     rate = check_sample_rate(sample_rate)
     if not 0.0 <= tail_s <= 3600.0:
         raise SettingError(f"tail {tail_s!r}: give 0 to 3600 seconds")
@@ -302,8 +314,8 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
     tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, lowest_hz, rate)
     pitch_events, gate_events = _pitch_events(pitch, rate), _gate_events(gate, rate)
     latest = int(gate_events["sample"][-1]) + 1 + math.ceil(tail_s * rate)
-    length = quiet_sample(settings, gate_events, latest)
-    settings["length"] = length
+    quiet = quiet_sample(settings, gate_events, latest)
+    settings["length"] = min(quiet, latest)
     warnings = _clip_warnings(preset, phrase, pitch)
     return Program(
         preset,
@@ -315,6 +327,6 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
         tables,
         pitch,
         gate,
-        length == latest,
+        quiet > latest,
         warnings,
     )

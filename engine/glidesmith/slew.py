@@ -30,6 +30,7 @@ import numpy as np
 from glidesmith.compiled import inlined, kernel, vector_kernel
 from glidesmith.elementary import exp2
 from glidesmith.errors import SettingError
+from glidesmith.units import parse_time
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
@@ -48,6 +49,7 @@ Under the resolution of a double near 5 V, and far from denormal numbers.
 """
 
 _STRETCH = 64
+_HIGHEST_VOLTS = 1e6
 _LOG2_E = 1.4426950408889634
 _LN_2 = 0.6931471805599453
 _HALF_PI = 1.5707963267948966
@@ -408,6 +410,8 @@ def _check_number(name: str, value: object, low: float, high: float, unit: str) 
 
 
 def _check_time(name: str, value: object) -> float:
+    if isinstance(value, str):
+        value = parse_time(value)
     seconds = _check_number(name, value, 0.0, 60.0, " s")
     if 0.0 < seconds < 1e-6:
         raise SettingError(f"{name} = {value!r} is out of range: 0, or 1e-6 to 60 s")
@@ -423,9 +427,10 @@ class Slew:
     law : {"linear", "rc", "log", "exp", "soft", "curve", "cosine"}
         The law; the table at the top of this module gives its formula.
     rise, fall : float
-        Seconds, 0 (immediate) or 1e-6 to 60: the side's T. Seconds per volt for ``linear``; the time
-        constant, in which 63.2 % of the way is done, for ``rc``; seconds per volt at 0 V for ``log`` and
-        ``exp``, per volt far off for ``soft``; for ``curve`` and ``cosine`` as ``timing`` says.
+        Seconds, or strings with a unit ("80 ms"), 0 (immediate) or 1e-6 to 60 s: the side's T. Seconds per
+        volt for ``linear``; the time constant, in which 63.2 % of the way is done, for ``rc``; seconds per volt
+        at 0 V for ``log`` and ``exp``, per volt far off for ``soft``; for ``curve`` and ``cosine`` as ``timing``
+        says.
     bend : float
         Per volt, 0.01 to 10: how much the rate of ``log`` and ``exp`` depends on the output.
     knee : float
@@ -513,19 +518,23 @@ class Slew:
         Raises
         ------
         SettingError
-            Where ``x`` is not a row of finite numbers, and where a timed law meets a target that moves: one
+            Where ``x`` is not a row of numbers within ±1e6, and where a timed law meets a target that moves: one
             that changes on two samples in a row.
         """
-        signal = np.ascontiguousarray(x, dtype=np.float64)
+        try:
+            signal = np.ascontiguousarray(x, dtype=np.float64)
+        except (TypeError, ValueError):
+            raise SettingError(f"x is no row of numbers ({type(x).__name__}): give target volts") from None
         if signal.ndim != 1:
             raise SettingError(f"x has the shape {signal.shape}: give one row of target volts")
         if not (np.isfinite(sample_rate) and sample_rate > 0):
             raise SettingError(f"sample_rate = {sample_rate!r}: give samples a second, above 0")
-        if not np.isfinite(start):
-            raise SettingError(f"start = {start!r}: give finite volts")
-        if not np.isfinite(signal).all():
-            at = int(np.flatnonzero(~np.isfinite(signal))[0])
-            raise SettingError(f"x[{at}] = {signal[at]!r}: targets are finite volts")
+        if not abs(start) <= _HIGHEST_VOLTS:
+            raise SettingError(f"start = {start!r}: give volts within ±{_HIGHEST_VOLTS:g}")
+        outside = np.flatnonzero(~(np.abs(signal) <= _HIGHEST_VOLTS))
+        if outside.size:
+            at = int(outside[0])
+            raise SettingError(f"x[{at}] = {float(signal[at])!r}: give volts within ±{_HIGHEST_VOLTS:g}")
         y = np.empty_like(signal)
         if signal.size:
             self._fill(signal, y, float(sample_rate), float(start))

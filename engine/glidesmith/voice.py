@@ -8,6 +8,7 @@ value is computed from the event before it or summed in whole numbers, so that w
 trace in the samples.
 """
 
+import math
 from collections import namedtuple
 from typing import TYPE_CHECKING, Any
 
@@ -15,8 +16,8 @@ import numpy as np
 
 from glidesmith.amplifier import amplifier_control, fill_gain
 from glidesmith.compiled import inlined, kernel, vector_kernel
-from glidesmith.envelope import WALK, fill_control, walk_reset, walk_to
-from glidesmith.oscillator import advance_phase, oscillate
+from glidesmith.envelope import WALK, fill_control, walk_reset
+from glidesmith.oscillator import CYCLE, HIGHEST_SHARE, advance_phase, oscillate
 from glidesmith.phase import (
     cycles_per_sample,
     glide_cycles,
@@ -38,8 +39,9 @@ QUIET = 10.0 ** (-90.0 / 20.0)
 """A render is over when the gain stays under this: -90 dB."""
 
 _NEVER = 1 << 62
-_PHASE_MASK = (1 << 62) - 1
-_RADIANS_PER_UNIT = 2.0 * np.pi / 2.0**62
+_PHASE_MASK = CYCLE - 1
+_RADIANS_PER_UNIT = 2.0 * np.pi / CYCLE
+_OCTAVES_TO_TOP = -math.log2(HIGHEST_SHARE)
 _DRONE_FADE_S = 0.02
 _LARGEST_FLOAT32 = 3.4028234663852886e38
 
@@ -265,7 +267,7 @@ def _follow_gate(settings: Any, voice: Any, events: Any, scratch: Any, count: in
 def _fill_heights(settings: Any, volts: Any, heights: Any) -> None:
     """Octaves of each sample's frequency above 0.45 of the sample rate, and the pitch as stepped."""
     per_volt = settings.octaves_per_volt
-    above = settings.octaves_at_zero + 1.1520030934450502
+    above = settings.octaves_at_zero + _OCTAVES_TO_TOP
     steps = settings.steps_per_octave
     if steps > 0.0:
         for i in range(heights.size):
@@ -399,32 +401,39 @@ def voice_reset(settings: Any, voice: Any) -> None:
 
 
 @kernel
-def _quiet_by_walk(settings: Any, voice: Any, gates: Any, last: int, latest: int) -> int:
-    """The first sample after the last gate at which the enveloped gain is under `QUIET` and on its way
-    down.
-    """
+def _quiet_by_walk(settings: Any, voice: Any, gates: Any, latest: int, control: Any, unslewed: Any) -> int:
+    """The first sample after the last gate at which the enveloped gain is under `QUIET` and on its way down."""
     quiet = amplifier_control(settings.amplifier, QUIET)
-    sample = last
-    while sample < latest:
-        sample += 1
-        walk_to(voice.walk, settings.gain, settings.envelope, gates, settings.sample_rate, sample, 0.0)
-        if voice.walk.y < quiet and voice.walk.x <= max(voice.walk.y, 0.0):
-            break
-    return sample
+    first = gates[gates.size - 1].sample + 1
+    while first <= latest:
+        fill_control(
+            voice.walk,
+            settings.gain,
+            settings.envelope,
+            gates,
+            settings.sample_rate,
+            first,
+            control,
+            unslewed,
+        )
+        for i in range(control.size):
+            if control[i] < quiet and unslewed[i] <= control[i]:
+                return int(first + i)
+        first += control.size
+    return latest + 1
 
 
 @kernel
-def _quiet_sample(settings: Any, voice: Any, gates: Any, latest: int) -> int:
+def _quiet_sample(settings: Any, voice: Any, gates: Any, latest: int, control: Any, unslewed: Any) -> int:
     settings, voice = settings[0], voice[0]
-    last = gates[gates.size - 1]
     if settings.enveloped:
-        return _quiet_by_walk(settings, voice, gates, last.sample, latest)
+        return _quiet_by_walk(settings, voice, gates, latest, control, unslewed)
     for index in range(gates.size):
         _gate_event(settings, voice, gates[index])
     quiet = amplifier_control(settings.amplifier, QUIET)
     glide = voice.gain
     after = glide_quiet_time(glide, quiet) / settings.step_s
-    return int(min(float(voice.gain_sample) + voice.gain_fraction + after + 1.0, float(latest)))
+    return int(min(float(voice.gain_sample) + voice.gain_fraction + after, float(latest))) + 1
 
 
 @inlined
@@ -435,10 +444,11 @@ def glide_quiet_time(glide: Any, quiet: float) -> float:
 
 
 def quiet_sample(settings: "NDArray[Any]", gates: "NDArray[Any]", latest: int) -> int:
-    """The number of samples after which the gain stays under -90 dB, at most ``latest``."""
+    """The number of samples after which the gain stays under -90 dB; more than ``latest`` if it is beyond."""
     voice = np.zeros(1, VOICE)
     voice_reset(settings, voice)
-    return max(int(_quiet_sample(settings, voice, gates, latest)), 1)
+    levels = np.empty((2, 4096))
+    return int(_quiet_sample(settings, voice, gates, latest, levels[0], levels[1]))
 
 
 def make_scratch() -> Scratch:
