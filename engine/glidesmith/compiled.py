@@ -24,14 +24,24 @@ Function = TypeVar("Function", bound=Callable[..., Any])
 
 
 def _cache_root() -> Path:
+    """Where caches belong on this system; on Linux by the XDG Base Directory Specification.
+
+    That says to ignore a relative XDG_CACHE_HOME; a relative home is no home either.
+    """
     named = os.environ.get("GLIDESMITH_CACHE")
     if named:
-        return Path(named)
+        return Path(named).expanduser().absolute()
     if sys.platform == "win32":
-        return Path(os.environ.get("LOCALAPPDATA", str(Path.home() / "AppData" / "Local"))) / "glidesmith"
-    if sys.platform == "darwin":
-        return Path.home() / "Library" / "Caches" / "glidesmith"
-    return Path(os.environ.get("XDG_CACHE_HOME", str(Path.home() / ".cache"))) / "glidesmith"
+        root = Path(os.environ.get("LOCALAPPDATA") or Path.home() / "AppData" / "Local")
+    elif sys.platform == "darwin":
+        root = Path.home() / "Library" / "Caches"
+    else:
+        root = Path(os.environ.get("XDG_CACHE_HOME", ""))
+        if not root.is_absolute():
+            root = Path(os.environ.get("HOME", str(Path.home()))) / ".cache"
+    if not root.is_absolute():
+        raise OSError(f"{root} is no place for a cache: it is relative")
+    return root / "glidesmith"
 
 
 def _sources_digest() -> str:

@@ -94,7 +94,7 @@ def _smooth_cycles(settings: Any, glide: Any, begin: float, end: float) -> float
 
 @kernel
 def _soft_cycles(settings: Any, glide: Any, begin: float, end: float) -> float:
-    """The same for `soft`, cut about its knee, which may be so short that no node of the quadrature sees it."""
+    """The same for `soft`, cut about its knee, which may be too short for any node to see."""
     total = 0.0
     for place in (-30.0, -8.0, -2.0, 0.0, 2.0, 8.0, 30.0):
         cut = min(max((glide.depth + place) / glide.pace, begin), end)

@@ -226,7 +226,7 @@ def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchC
     volts = note_volts(preset, phrase.notes[first].number)
     low, high = (converted_volts(preset.converter, end)[0] for end in (-100.0, 100.0))
     return (
-        f"converter: {len(clipped)} of the phrase's notes are nearest to no code from {low:+g} to {high:+g} V "
+        f"converter: {len(clipped)} of the phrase's notes lie beyond its codes, {low:+g} to {high:+g} V, "
         f"and are clipped (the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move "
         "tuning.zero_volts",
     )

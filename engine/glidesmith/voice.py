@@ -402,7 +402,7 @@ def voice_reset(settings: Any, voice: Any) -> None:
 
 @kernel
 def _quiet_by_walk(settings: Any, voice: Any, gates: Any, latest: int, control: Any, unslewed: Any) -> int:
-    """The first sample after the last gate at which the enveloped gain is under `QUIET` and on its way down."""
+    """The first sample after the last gate at which the enveloped gain is under `QUIET` and falls."""
     quiet = amplifier_control(settings.amplifier, QUIET)
     first = gates[gates.size - 1].sample + 1
     while first <= latest:
