@@ -426,11 +426,11 @@ class Slew:
     ----------
     law : {"linear", "rc", "log", "exp", "soft", "curve", "cosine"}
         The law; the table at the top of this module gives its formula.
-    rise, fall : float
-        Seconds, or strings with a unit ("80 ms"), 0 (immediate) or 1e-6 to 60 s: the side's T. Seconds per
-        volt for ``linear``; the time constant, in which 63.2 % of the way is done, for ``rc``; seconds per volt
-        at 0 V for ``log`` and ``exp``, per volt far off for ``soft``; for ``curve`` and ``cosine`` as ``timing``
-        says.
+    rise, fall : float or str
+        The side's T: seconds, or a string with a unit ("80 ms"); 0 (immediate), or 1e-6 to 60 s. Seconds per
+        volt for ``linear``; the time constant, in which 63.2 % of the way is done, for ``rc``; seconds per
+        volt at 0 V for ``log`` and ``exp``, per volt far off for ``soft``; for ``curve`` and ``cosine`` as
+        ``timing`` says.
     bend : float
         Per volt, 0.01 to 10: how much the rate of ``log`` and ``exp`` depends on the output.
     knee : float
@@ -533,8 +533,8 @@ class Slew:
             raise SettingError(f"start = {start!r}: give volts within ±{_HIGHEST_VOLTS:g}")
         outside = np.flatnonzero(~(np.abs(signal) <= _HIGHEST_VOLTS))
         if outside.size:
-            at = int(outside[0])
-            raise SettingError(f"x[{at}] = {float(signal[at])!r}: give volts within ±{_HIGHEST_VOLTS:g}")
+            at, value = int(outside[0]), float(signal[outside[0]])
+            raise SettingError(f"x[{at}] = {value!r}: give volts within ±{_HIGHEST_VOLTS:g}")
         y = np.empty_like(signal)
         if signal.size:
             self._fill(signal, y, float(sample_rate), float(start))
