@@ -518,8 +518,8 @@ class Slew:
         Raises
         ------
         SettingError
-            Where ``x`` is not a row of numbers within ±1e6, and where a timed law meets a target that moves: one
-            that changes on two samples in a row.
+            Where ``x`` is not a row of numbers within ±1e6, and where a timed law meets a target that moves,
+            that is, changes on two samples in a row.
         """
         try:
             signal = np.ascontiguousarray(x, dtype=np.float64)

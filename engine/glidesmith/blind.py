@@ -1,0 +1,344 @@
+"""What blind listening adds up to: A/B/X trials and preferences of any number of listeners.
+
+    tally = tally_sheets([Path("ann.json"), Path("ben.json")])
+    print(tally_text(tally))
+
+Trials of several listeners, and rounds of one, are added up pair by pair; that each listener is shown beside
+the sum matters, because a sum hides who heard what, and trials of one listener are not independent of each
+other. Where the figures show nothing, the verdict says so.
+"""
+
+from collections.abc import Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from itertools import combinations
+from pathlib import Path
+from typing import Any
+
+from glidesmith.binomial import (
+    CONFIDENCE,
+    Trials,
+    confidence_interval,
+    critical_correct,
+    guessing_probability,
+    holm,
+    sign_test,
+    trials_needed,
+)
+from glidesmith.sheets import AbxSheet, PreferenceSheet, Sheet, SheetError, accepted_sheets
+from glidesmith.text import shortened
+
+__all__ = [
+    "Trials",
+    "confidence_interval",
+    "critical_correct",
+    "guessing_probability",
+    "holm",
+    "sign_test",
+    "tally_sheets",
+    "tally_text",
+    "trials_needed",
+]
+
+SIGNIFICANCE = 0.05
+"""A probability under this counts as evidence: a chance result in twenty (common practice)."""
+
+PREFERENCE_TEST = "exact two-sided sign test, corrected by Holm's method for the number of pairs"
+ABX_TEST = "exact one-sided binomial test, corrected by Holm's method for the number of pairs"
+
+DEPENDENT = (
+    "pooled trials are not independent: those of one listener resemble each other, so the pooled "
+    "probability may be too small; look at each listener"
+)
+REPEATED = (
+    "more than one round of a listener is counted; rounds repeated until one turns out well prove nothing, "
+    "so decide beforehand how many there are"
+)
+NO_PROOF_OF_SAMENESS = "this is no evidence that they sound the same"
+
+
+@dataclass(frozen=True, slots=True)
+class Score:
+    """Correct answers of trials: of one listener, in ``rounds`` rounds, or pooled."""
+
+    listener: str
+    rounds: int
+    correct: int
+    trials: int
+
+    @property
+    def probability(self) -> float:
+        """How often guessing does as well or better."""
+        return guessing_probability(self.correct, self.trials)
+
+    def as_dict(self, corrected: float) -> dict[str, object]:
+        """Fit for JSON; ``corrected`` is the probability after correction for several tests."""
+        return {
+            "listener": self.listener,
+            "rounds": self.rounds,
+            "correct": self.correct,
+            "trials": self.trials,
+            "probability": self.probability,
+            "probability_corrected": corrected,
+            "confidence_interval": list(confidence_interval(self.correct, self.trials)),
+        }
+
+
+@dataclass(frozen=True, slots=True)
+class Tally:
+    """What sheets add up to. ``facts``: what `tally --json` prints; ``refused``: why others don't count."""
+
+    facts: Mapping[str, object]
+    refused: tuple[str, ...]
+
+
+def tally_sheets(paths: Sequence[Path]) -> Tally:
+    """Add up listening sheets of one set.
+
+    Sheets that are damaged, inconsistent, of another set than the first good one, or there twice are refused
+    and named, a line each; the others are added up all the same.
+
+    Raises SheetError, with all those lines, where no sheet is left.
+    """
+    sheets, errors = accepted_sheets(paths)
+    refused = tuple(line for error in errors for line in error.lines)
+    if not sheets:
+        raise SheetError(*(refused or ("no listening sheets: give the files that the page saved",)))
+    rounds = [sheet for sheet in sheets if isinstance(sheet, AbxSheet) and sheet.finished]
+    preferences = [sheet for sheet in sheets if isinstance(sheet, PreferenceSheet) and sheet.finished]
+    facts: dict[str, object] = {
+        "kind": "glidesmith tally",
+        "version": 1,
+        "set": sheets[0].set,
+        "sheets": len(sheets),
+        "abx": _abx(rounds),
+        "preference": _preference(preferences),
+        "unfinished": [_unfinished(sheet) for sheet in sheets if not sheet.finished],
+        "refused": list(refused),
+    }
+    return Tally(facts, refused)
+
+
+def _names(sheets: Sequence[Sheet]) -> list[str]:
+    """Each sheet's listener; names that differ in capitals only are one, nameless sheets are one each."""
+    first: dict[str, str] = {}
+    return [
+        first.setdefault(sheet.listener.casefold(), sheet.listener)
+        if sheet.listener
+        else f"no name ({shortened(sheet.path.name)})"
+        for sheet in sheets
+    ]
+
+
+def _abx(sheets: Sequence[AbxSheet]) -> dict[str, object] | None:
+    """Every pair of candidates that was listened to, with its listeners."""
+    if not sheets:
+        return None
+    names = _names(sheets)
+    pairs: dict[frozenset[str], list[tuple[str, AbxSheet]]] = {}
+    for name, sheet in zip(names, sheets, strict=True):
+        pairs.setdefault(frozenset(sheet.pair), []).append((name, sheet))
+    pooled = [_score("", (sheet for _, sheet in members)) for members in pairs.values()]
+    corrected = holm([score.probability for score in pooled])
+    entries = [
+        _abx_pair(members, score, probability)
+        for members, score, probability in zip(pairs.values(), pooled, corrected, strict=True)
+    ]
+    return {"test": ABX_TEST, "confidence": CONFIDENCE, "pairs": entries}
+
+
+def _score(name: str, sheets: Iterable[AbxSheet]) -> Score:
+    rounds = list(sheets)
+    return Score(name, len(rounds), sum(s.correct for s in rounds), sum(s.trials for s in rounds))
+
+
+def _abx_pair(members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected: float) -> dict[str, object]:
+    first = members[0][1]
+    listeners = [
+        _score(name, (sheet for member, sheet in members if member == name))
+        for name in dict.fromkeys(name for name, _ in members)
+    ]
+    own = holm([score.probability for score in listeners])
+    total = pooled.as_dict(corrected)
+    del total["listener"]
+    warnings = [DEPENDENT] if len(listeners) > 1 else []
+    if any(score.rounds > 1 for score in listeners):
+        warnings.append(REPEATED)
+    return {
+        "pair": list(first.pair),
+        "labels": list(first.labels),
+        **total,
+        "evidence": corrected < SIGNIFICANCE,
+        "verdict": _abx_verdict(pooled, corrected),
+        "listeners": [score.as_dict(value) for score, value in zip(listeners, own, strict=True)],
+        "warnings": warnings,
+    }
+
+
+def _abx_verdict(score: Score, corrected: float) -> str:
+    if corrected < SIGNIFICANCE:
+        return f"evidence that the two can be told apart: {_by_guessing(corrected)}"
+    if critical_correct(score.trials, 1.0 - SIGNIFICANCE) is None:
+        fewest = next(n for n in range(score.trials, 100) if critical_correct(n, 1.0 - SIGNIFICANCE))
+        return (
+            f"no evidence, and there could be none: {score.trials} trials are too few to show anything, "
+            f"{fewest} are the fewest"
+        )
+    return f"no evidence that the two can be told apart: {_by_guessing(corrected)}; {NO_PROOF_OF_SAMENESS}"
+
+
+def _by_guessing(probability: float) -> str:
+    return f"guessing does as well with a probability of {_rounded(probability)}"
+
+
+def _rounded(probability: float) -> str:
+    return f"{probability:.3f}" if probability >= 0.001 else f"{probability:.1e}"
+
+
+def _preference(sheets: Sequence[PreferenceSheet]) -> dict[str, object] | None:
+    """Every pair of candidates, with who won how often, and each listener's choices."""
+    if not sheets:
+        return None
+    names = _names(sheets)
+    labels: dict[str, str] = {}
+    for sheet in sheets:
+        for digest, label in sheet.labels.items():
+            labels.setdefault(digest, label)
+    choices: dict[frozenset[str], list[tuple[str, str | None]]] = {}
+    for name, sheet in zip(names, sheets, strict=True):
+        for judgement in sheet.judgements:
+            choices.setdefault(frozenset(judgement.pair), []).append((name, judgement.preferred))
+    pairs = [pair for pair in combinations(labels, 2) if frozenset(pair) in choices]
+    wins = [[_count(choices[frozenset(pair)], digest) for digest in pair] for pair in pairs]
+    probabilities = [sign_test(*counts) for counts in wins]
+    corrected = holm(probabilities)
+    entries = []
+    for pair, counts, raw, probability in zip(pairs, wins, probabilities, corrected, strict=True):
+        judged = choices[frozenset(pair)]
+        both = [labels[digest] for digest in pair]
+        entries.append(
+            {
+                "pair": list(pair),
+                "labels": both,
+                "wins": counts,
+                "no_preference": _count(judged, None),
+                "probability": raw,
+                "probability_corrected": probability,
+                "evidence": probability < SIGNIFICANCE,
+                "verdict": _preference_verdict(both, counts, probability),
+                "listeners": [
+                    {"listener": name, "preferred": None if chosen is None else labels[chosen]}
+                    for name, chosen in judged
+                ],
+            }
+        )
+    totals = [
+        {"label": label, "settings_sha256": digest, "wins": _total_wins(digest, pairs, wins)}
+        for digest, label in labels.items()
+    ]
+    totals.sort(key=lambda total: -int(str(total["wins"])))
+    warnings = [REPEATED] if len(set(names)) < len(names) else []
+    return {
+        "test": PREFERENCE_TEST,
+        "rounds": len(sheets),
+        "candidates": totals,
+        "pairs": entries,
+        "warnings": warnings,
+    }
+
+
+def _count(judged: Sequence[tuple[str, str | None]], chosen: str | None) -> int:
+    return sum(choice == chosen for _, choice in judged)
+
+
+def _total_wins(digest: str, pairs: Sequence[tuple[str, str]], wins: Sequence[Sequence[int]]) -> int:
+    return sum(counts[pair.index(digest)] for pair, counts in zip(pairs, wins, strict=True) if digest in pair)
+
+
+def _preference_verdict(labels: Sequence[str], wins: Sequence[int], probability: float) -> str:
+    if probability >= SIGNIFICANCE:
+        return f"no evidence of a preference (probability {_rounded(probability)})"
+    better = labels[0] if wins[0] > wins[1] else labels[1]
+    return f"{better} is preferred (probability {_rounded(probability)})"
+
+
+def _unfinished(sheet: Sheet) -> dict[str, object]:
+    """A round that was given up: told, and not counted."""
+    told: dict[str, object] = {"file": str(sheet.path), "listener": sheet.listener}
+    if isinstance(sheet, AbxSheet):
+        counts = {"correct": sheet.correct, "trials": sheet.trials, "trials_planned": sheet.planned}
+        return {**told, "test": "abx", "labels": list(sheet.labels), **counts}
+    planned = len(sheet.labels) * (len(sheet.labels) - 1) // 2
+    return {**told, "test": "preference", "pairs": len(sheet.judgements), "pairs_planned": planned}
+
+
+def tally_text(tally: Tally) -> str:
+    """The tally for a terminal: plain text, one pair of candidates after the other."""
+    facts: Mapping[str, Any] = tally.facts
+    lines = [f"{_counted(facts['sheets'], 'listening sheet')} of the set {facts['set'][:12]}"]
+    if facts["abx"]:
+        lines += ["", f"A/B/X ({facts['abx']['test']})"]
+        for pair in facts["abx"]["pairs"]:
+            lines += _abx_lines(pair)
+    if facts["preference"]:
+        lines += ["", f"Preference ({facts['preference']['test']})"]
+        lines += _preference_lines(facts["preference"])
+    if facts["unfinished"]:
+        lines += ["", "Not finished, and not counted:"]
+        lines += [f"  {_unfinished_line(told)}" for told in facts["unfinished"]]
+    if not facts["abx"] and not facts["preference"]:
+        lines += ["", "No finished rounds: there is nothing to add up."]
+    return "\n".join(lines)
+
+
+def _counted(count: int, noun: str) -> str:
+    return f"{count:,} {noun}" if count == 1 else f"{count:,} {noun}s"
+
+
+def _abx_lines(pair: Mapping[str, Any]) -> Iterator[str]:
+    yield f"  {pair['labels'][0]}  or  {pair['labels'][1]}"
+    for score in pair["listeners"]:
+        yield f"    {score['listener']}: {_score_text(score)}"
+    if len(pair["listeners"]) > 1:
+        yield f"    all together: {_score_text(pair)}"
+    yield f"    {pair['verdict']}"
+    yield from (f"    note: {warning}" for warning in pair["warnings"])
+
+
+def _score_text(score: Mapping[str, Any]) -> str:
+    low, high = (100.0 * share for share in score["confidence_interval"])
+    rounds = f" in {score['rounds']} rounds" if score["rounds"] > 1 else ""
+    corrected = ""
+    if score["probability_corrected"] != score["probability"]:
+        corrected = f" ({_rounded(score['probability_corrected'])} corrected)"
+    return (
+        f"{score['correct']} of {score['trials']} correct{rounds}, probability by guessing "
+        f"{_rounded(score['probability'])}{corrected}, {100.0 * CONFIDENCE:g} % interval of the share "
+        f"{low:.0f} to {high:.0f} %"
+    )
+
+
+def _preference_lines(preference: Mapping[str, Any]) -> Iterator[str]:
+    for pair in preference["pairs"]:
+        wins = pair["wins"]
+        neither = f", no preference {pair['no_preference']}" if pair["no_preference"] else ""
+        yield f"  {pair['labels'][0]} {wins[0]} : {wins[1]} {pair['labels'][1]}{neither}: {pair['verdict']}"
+    totals = ", ".join(f"{total['label']} {total['wins']}" for total in preference["candidates"])
+    yield f"  wins in all: {totals}"
+    chosen: dict[str, list[str]] = {}
+    for pair in preference["pairs"]:
+        for row in pair["listeners"]:
+            chosen.setdefault(row["listener"], []).append(row["preferred"] or "neither")
+    yield from (f"  {listener} chose {', '.join(choices)}" for listener, choices in chosen.items())
+    if not any(pair["evidence"] for pair in preference["pairs"]):
+        yield f"  no pair shows a preference; {NO_PROOF_OF_SAMENESS}"
+    yield from (f"  note: {warning}" for warning in preference["warnings"])
+
+
+def _unfinished_line(told: Mapping[str, Any]) -> str:
+    who = f"{told['file']}, {told['listener'] or 'no name'}"
+    if told["test"] == "abx":
+        return (
+            f"{who}: {told['labels'][0]} or {told['labels'][1]}, {told['correct']} of {told['trials']} "
+            f"correct, {told['trials_planned']} planned"
+        )
+    return f"{who}: preference, {told['pairs']} of {told['pairs_planned']} pairs"

@@ -1,0 +1,217 @@
+"""One candidate on its way into a comparison set: rendered, measured, brought to the common loudness.
+
+Loudness and true peak are those of ITU-R BS.1770, target and ceiling those of EBU R 128.
+"""
+
+import hashlib
+import math
+from collections.abc import Iterator, Sequence
+from io import BytesIO
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from glidesmith.candidates import Candidate, heard_settings
+from glidesmith.errors import SettingError
+from glidesmith.rendering import render_program
+from glidesmith.setfolder import Earlier, Rendered, SetFolder, codes_digest
+from glidesmith.text import shortened, shown
+from glidesmith.wav import quantise
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from glidesmith.facts import Facts
+    from glidesmith.program import Program
+
+    Audio = NDArray[np.float32]
+
+TARGET_LUFS = -23.0
+"""The loudness that all candidates get where their peaks allow it."""
+
+CEILING_DBTP = -1.0
+"""Every true peak stays under this."""
+
+_HEADROOM_DB = 0.01
+_CLOSE_LU = 0.005
+_MOST_PASSES = 6
+_FAINT = 0.01
+_NO_RENDER = Rendered(-math.inf, -math.inf, True, "")
+_NO_CODES = np.zeros(0, np.int32)
+
+
+class Take:
+    """One candidate, its WAV's name, and what is known of it; `measure` and `finish` fill in the rest.
+
+    ``rendered`` is the audio's own loudness and peak; ``gain_db``, ``lufs`` and ``true_peak_dbtp`` are of the
+    WAV, ``codes`` int32 (n,) its samples as 24-bit numbers and ``flac`` the same compressed. ``kept`` is the
+    earlier run's entry where its samples were still good.
+    """
+
+    def __init__(
+        self,
+        candidate: Candidate,
+        file: str,
+        program: "Program",
+        facts: "Facts",
+        differs: Sequence[str],
+        lines: dict[str, Any],
+    ) -> None:
+        self.candidate, self.label, self.digest = candidate, candidate.label, candidate.digest
+        self.file = file
+        self.sample_rate = program.sample_rate
+        self.facts, self.differs, self.lines = facts, list(differs), lines
+        self.rendered = _NO_RENDER
+        self.gain_db = 0.0
+        self.lufs = self.true_peak_dbtp = -math.inf
+        self.codes = _NO_CODES
+        self.flac = b""
+        self.kept: Earlier | None = None
+        self.warnings: tuple[str, ...] = ()
+        self._program = program
+        self._audio: Audio | None = None
+
+    def measure(self, earlier: Earlier | None) -> None:
+        """Settle the loudness and peak as rendered: from an earlier run, else by rendering.
+
+        Raises SettingError for silence.
+        """
+        if earlier is not None:
+            self.rendered = earlier.rendered
+        else:
+            self.rendered = _measured(self._rendered_audio(), self.sample_rate, self.label)
+
+    def finish(self, common_lufs: float, earlier: Earlier | None, place: SetFolder) -> None:
+        """Bring the candidate to a loudness, by what stands in ``place`` if ``earlier`` says that it may be
+        used."""
+        codes = None if earlier is None else place.untouched_codes(earlier)
+        if earlier is not None and codes is not None:
+            self.kept, self.codes, entry = earlier, codes, earlier.entry
+            self.gain_db, self.lufs = entry["gain_db"], entry["lufs"]
+            self.true_peak_dbtp, self.warnings = entry["true_peak_dbtp"], tuple(entry["warnings"])
+        else:
+            self._apply_gain(common_lufs)
+        self.flac = _flac(self.codes, self.sample_rate)
+
+    def _rendered_audio(self) -> "Audio":
+        if self._audio is None:
+            rendering = render_program(self._program)
+            self._audio, self.warnings = rendering.audio, rendering.warnings
+        return self._audio
+
+    def _apply_gain(self, common_lufs: float) -> None:
+        """One gain, on the samples as rendered, and what is measured afterwards."""
+        from glidesmith.loudness import measure_loudness
+
+        audio = self._rendered_audio()
+        self.gain_db = common_lufs - self.rendered.lufs
+        louder = _scaled(audio, self.gain_db)
+        found = measure_loudness(louder, self.sample_rate)
+        # Far under the target the meter's gate may decide otherwise than near it: then once more.
+        if abs(found.integrated_lufs - common_lufs) > _CLOSE_LU:
+            room = CEILING_DBTP - _HEADROOM_DB - found.true_peak_dbtp
+            self.gain_db += min(common_lufs - found.integrated_lufs, room)
+            louder = _scaled(audio, self.gain_db)
+            found = measure_loudness(louder, self.sample_rate)
+        self.lufs, self.true_peak_dbtp = float(found.integrated_lufs), float(found.true_peak_dbtp)
+        self.codes = quantise(louder, 24)[0].astype(np.int32)
+        self._audio = None
+
+    def entry(self, number: int) -> dict[str, Any]:
+        """The candidate as ``comparison.json`` has it."""
+        return {
+            "number": number,
+            "label": self.label,
+            "file": self.file,
+            "settings_sha256": self.digest,
+            "varied": dict(self.candidate.varied),
+            "settings": heard_settings(self.candidate.preset),
+            "gain_db": self.gain_db,
+            "lufs": self.lufs,
+            "true_peak_dbtp": self.true_peak_dbtp,
+            "frames": self.codes.size,
+            "facts": self.facts.as_dict(),
+            "differs": self.differs,
+            "warnings": list(self.warnings),
+            "rendered": self.rendered.as_dict(),
+            "audio_sha256": codes_digest(self.codes),
+        }
+
+
+def _scaled(audio: "Audio", gain_db: float) -> "Audio":
+    scaled: Audio = (audio * np.float64(10.0 ** (gain_db / 20.0))).astype(np.float32)
+    return scaled
+
+
+def _measured(audio: "Audio", sample_rate: int, label: str) -> Rendered:
+    """Loudness and true peak of audio at its own level.
+
+    The meter's gate has an absolute threshold, so that loudness does not quite move with the level: it is
+    taken near the target, where the audio will be heard, and told back to the level as rendered.
+    """
+    from glidesmith.loudness import measure_loudness
+
+    peak = float(np.abs(audio).max(initial=0.0))
+    if peak == 0.0:
+        raise _silent(label)
+    gain_db = 0.0 if peak > _FAINT else -20.0 * math.log10(peak) - 6.0
+    for _ in range(_MOST_PASSES):
+        found = measure_loudness(_scaled(audio, gain_db), sample_rate)
+        if not math.isfinite(found.integrated_lufs):
+            raise _silent(label)
+        off = TARGET_LUFS - found.integrated_lufs
+        if abs(off) < _CLOSE_LU:
+            break
+        gain_db += off
+    digest = hashlib.sha256(audio.astype("<f4").tobytes()).hexdigest()
+    lufs, peak_dbtp = found.integrated_lufs - gain_db, found.true_peak_dbtp - gain_db
+    return Rendered(float(lufs), float(peak_dbtp), bool(found.gated), digest)
+
+
+def _silent(label: str) -> SettingError:
+    return SettingError(
+        f"candidate {shown(label)} is silent, so its loudness can't be matched; look at its gain settings "
+        "and levels, or leave it out"
+    )
+
+
+def common_loudness(takes: Sequence[Take]) -> tuple[float, str | None]:
+    """The loudness that all get, in LUFS, and whose peaks keep it under the target, if any do."""
+    highest = TARGET_LUFS
+    limit: str | None = None
+    for take in takes:
+        reachable = take.rendered.lufs - take.rendered.true_peak_dbtp + CEILING_DBTP - _HEADROOM_DB
+        if reachable < highest:
+            highest, limit = reachable, take.label
+    return highest, limit
+
+
+def _flac(codes: "NDArray[np.int32]", sample_rate: int) -> bytes:
+    """The samples of a 24-bit WAV as FLAC, bit for bit."""
+    import soundfile
+
+    file = BytesIO()
+    soundfile.write(file, codes << 8, sample_rate, subtype="PCM_24", format="FLAC")
+    return file.getvalue()
+
+
+def warnings_of(takes: Sequence[Take]) -> Iterator[str]:
+    """What the listener should know: each line once, with whom it is about; and who sounds the same."""
+    whose: dict[str, list[str]] = {}
+    same: dict[str, list[str]] = {}
+    for take in takes:
+        same.setdefault(take.rendered.sha256, []).append(take.label)
+        for line in take.warnings:
+            whose.setdefault(line, []).append(take.label)
+    for line, labels in whose.items():
+        yield line if len(labels) == len(takes) else f"{_listed(labels)}: {line}"
+    for labels in same.values():
+        if len(labels) > 1:
+            yield (
+                f"{_listed(labels)}: sound the same on this phrase, sample for sample; what sets them apart "
+                "has no effect here"
+            )
+
+
+def _listed(labels: Sequence[str]) -> str:
+    return " and ".join(shown(shortened(label)) for label in labels)

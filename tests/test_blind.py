@@ -1,0 +1,300 @@
+"""Blind listening: exact figures against scipy and published tables, and sheets that are refused.
+
+`scipy.stats.binomtest` is the reference for every probability and interval, to 1e-12.
+"""
+
+import csv
+import json
+
+import pytest
+from scipy.stats import binom, binomtest, false_discovery_control
+
+from conftest import REFERENCE
+from glidesmith.binomial import upper_tail
+from glidesmith.blind import (
+    confidence_interval,
+    critical_correct,
+    guessing_probability,
+    holm,
+    sign_test,
+    tally_sheets,
+    tally_text,
+    trials_needed,
+)
+from glidesmith.errors import SettingError
+from glidesmith.sheets import SheetError
+from listening import COSINE, EXP, RC, SET, abx, preference, save
+
+EXACT = 1e-12
+COUNTS = [(n, k) for n in (1, 2, 5, 16, 25, 100, 1000) for k in {0, n // 3, n // 2, (2 * n) // 3, n}]
+
+
+@pytest.mark.parametrize(("trials", "correct"), COUNTS)
+def test_guessing_is_scipys_binomial_test(trials, correct):
+    expected = binomtest(correct, trials, 0.5, alternative="greater").pvalue
+    assert guessing_probability(correct, trials) == pytest.approx(expected, rel=EXACT)
+
+
+@pytest.mark.parametrize(("trials", "correct"), COUNTS)
+@pytest.mark.parametrize("confidence", [0.9, 0.95, 0.999])
+def test_the_interval_is_that_of_clopper_and_pearson(trials, correct, confidence):
+    expected = binomtest(correct, trials).proportion_ci(confidence, method="exact")
+    found = confidence_interval(correct, trials, confidence)
+    assert found == pytest.approx((expected.low, expected.high), abs=1e-10)
+
+
+@pytest.mark.parametrize(("wins", "losses"), [(0, 0), (1, 0), (3, 3), (9, 1), (1, 9), (14, 6), (70, 30)])
+def test_the_sign_test_is_the_two_sided_binomial_test(wins, losses):
+    expected = binomtest(wins, wins + losses).pvalue if wins + losses else 1.0
+    assert sign_test(wins, losses) == pytest.approx(expected, rel=EXACT)
+
+
+@pytest.mark.parametrize("share", [0.0, 1e-9, 0.1, 0.5, 0.77, 1.0 - 1e-9, 1.0])
+@pytest.mark.parametrize(("trials", "correct"), COUNTS)
+def test_the_upper_tail_is_scipys(trials, correct, share):
+    assert upper_tail(correct, trials, share) == pytest.approx(
+        binom.sf(correct - 1, trials, share), abs=1e-12
+    )
+
+
+def test_published_critical_values_are_reproduced():
+    """Tables for the duo-trio and the one-sided paired test; see the file for their source."""
+    lines = (REFERENCE / "abx-critical-values.csv").read_text().splitlines()
+    rows = list(csv.DictReader(line for line in lines if not line.startswith("#")))
+    assert len(rows) > 25
+    for row in rows:
+        for column, confidence in (("percent_5", 0.95), ("percent_1", 0.99), ("percent_0_1", 0.999)):
+            expected = None if row[column] == "-" else int(row[column])
+            assert critical_correct(int(row["trials"]), confidence) == expected, (row["trials"], column)
+
+
+@pytest.mark.parametrize("confidence", [0.9, 0.95, 0.99])
+@pytest.mark.parametrize("ability", [0.6, 0.75, 0.9, 1.0])
+def test_the_trials_needed_are_the_fewest_that_serve(confidence, ability):
+    needed = trials_needed(confidence, ability, power=0.8)
+
+    def power(n):
+        correct = next((k for k in range(n + 1) if binom.sf(k - 1, n, 0.5) <= 1.0 - confidence), n + 1)
+        return binom.sf(correct - 1, n, ability), correct
+
+    assert power(needed.trials)[0] >= 0.8
+    assert power(needed.trials)[1] == needed.correct
+    assert all(power(n)[0] < 0.8 for n in range(1, needed.trials))
+
+
+@pytest.mark.parametrize(
+    ("arguments", "word"),
+    [
+        ((1.0, 0.8), "confidence"),
+        ((float("nan"), 0.8), "confidence"),
+        ((0.95, 0.5), "ability"),
+        ((0.95, 1.1), "ability"),
+        ((0.95, 0.501), "more than 1,000 trials"),
+        ((0.95, 0.8, 1.0), "power"),
+    ],
+)
+def test_what_no_number_of_trials_can_show_is_refused(arguments, word):
+    with pytest.raises(SettingError, match=word):
+        trials_needed(*arguments)
+
+
+def test_holms_correction():
+    """The example of Holm's procedure by hand: sorted, times what is left of the tests, never falling."""
+    assert holm([0.01, 0.04, 0.03, 0.005]) == pytest.approx([0.03, 0.06, 0.06, 0.02])
+    assert holm([0.9, 0.8]) == [1.0, 1.0]
+    assert holm([]) == []
+    # Never under what the less strict procedure of Benjamini and Hochberg gives, never over Bonferroni's.
+    raw = [0.001, 0.02, 0.02, 0.3, 0.7]
+    for value, least, most in zip(holm(raw), false_discovery_control(raw), raw, strict=True):
+        assert least <= value <= 5 * most
+
+
+def tally(folder, *sheets):
+    return tally_sheets(save(folder, *sheets)).facts
+
+
+def test_listeners_are_shown_and_pooled(tmp_path):
+    facts = tally(tmp_path, abx(14), abx(11, listener="Ben"), abx(9, 12, listener="Cleo"))
+    (pair,) = facts["abx"]["pairs"]
+    assert (pair["correct"], pair["trials"]) == (34, 44)
+    assert pair["probability"] == pytest.approx(binomtest(34, 44, alternative="greater").pvalue, rel=EXACT)
+    expected = binomtest(34, 44).proportion_ci(0.95, method="exact")
+    assert pair["confidence_interval"] == pytest.approx([expected.low, expected.high], abs=1e-10)
+    shown = [(row["listener"], row["correct"], row["trials"]) for row in pair["listeners"]]
+    assert shown == [("Ada", 14, 16), ("Ben", 11, 16), ("Cleo", 9, 12)]
+    raw = [binomtest(k, n, alternative="greater").pvalue for _, k, n in shown]
+    assert [row["probability"] for row in pair["listeners"]] == pytest.approx(raw, rel=EXACT)
+    assert pair["listeners"][0]["probability_corrected"] == pytest.approx(3 * raw[0])
+    assert "not independent" in pair["warnings"][0]
+    assert pair["evidence"]
+    assert pair["verdict"].startswith("evidence that the two can be told apart")
+
+
+def test_what_shows_nothing_is_said_plainly(tmp_path):
+    (pair,) = tally(tmp_path, abx(9))["abx"]["pairs"]
+    assert not pair["evidence"]
+    assert pair["verdict"].startswith("no evidence that the two can be told apart")
+    assert "no evidence that they sound the same" in pair["verdict"]
+    assert pair["warnings"] == []
+
+
+def test_too_few_trials_to_show_anything_are_said_so(tmp_path):
+    (pair,) = tally(tmp_path, abx(4, 4))["abx"]["pairs"]
+    assert "4 trials are too few to show anything, 5 are the fewest" in pair["verdict"]
+
+
+def test_pairs_are_kept_apart_and_corrected_for_their_number(tmp_path):
+    sheets = abx(12), abx(12, pair=(EXP, COSINE)), abx(13, pair=(EXP, RC), listener="Ben")
+    first, second = tally(tmp_path, *sheets)["abx"]["pairs"]
+    assert (first["labels"], first["correct"], first["trials"]) == (["rc", "exp"], 25, 32)
+    assert (second["labels"], second["correct"]) == (["exp", "cosine"], 12)
+    # 12 of 16 alone would be evidence, at 3.8 %; as the weaker of two results it stays so under Holm.
+    assert first["probability_corrected"] == pytest.approx(2 * first["probability"])
+    assert second["probability_corrected"] == pytest.approx(second["probability"])
+
+
+def test_one_name_in_other_letters_is_one_listener_and_no_name_is_none(tmp_path):
+    sheets = (
+        abx(9),
+        abx(10, listener=" ADA ", made="2031-05-05T10:00:00"),
+        abx(8, listener=""),
+        abx(7, listener=" "),
+    )
+    (pair,) = tally(tmp_path, *sheets)["abx"]["pairs"]
+    names = [(row["listener"], row["rounds"]) for row in pair["listeners"]]
+    assert names == [("Ada", 2), ("no name (sheet-3.json)", 1), ("no name (sheet-4.json)", 1)]
+    assert any("more than one round" in warning for warning in pair["warnings"])
+
+
+def test_rounds_that_were_given_up_are_listed_apart(tmp_path):
+    facts = tally(
+        tmp_path,
+        abx(12),
+        abx(6, 16, 7, listener="Ben"),
+        preference([RC, EXP, COSINE], finished=False, pairs=[]),
+    )
+    (pair,) = facts["abx"]["pairs"]
+    assert (pair["correct"], pair["trials"]) == (12, 16)
+    told = [(row["listener"], row["test"]) for row in facts["unfinished"]]
+    assert told == [("Ben", "abx"), ("Ada", "preference")]
+    assert facts["unfinished"][0]["trials"] == 7
+    assert facts["preference"] is None
+    assert "Not finished, and not counted" in tally_text(tally_sheets(sorted(tmp_path.glob("*.json"))))
+
+
+def test_preferences_are_counted_by_pair(tmp_path):
+    sheets = [preference([EXP, RC, COSINE], listener=f"listener {n}") for n in range(9)]
+    sheets.append(preference([COSINE, RC, EXP], listener="Ada", undecided=[frozenset((RC, EXP))]))
+    facts = tally(tmp_path, *sheets)["preference"]
+    assert "sign test" in facts["test"]
+    assert "Holm" in facts["test"]
+    found = {tuple(pair["labels"]): pair for pair in facts["pairs"]}
+    assert found["rc", "exp"]["wins"] == [0, 9]
+    assert found["rc", "exp"]["no_preference"] == 1
+    assert found["rc", "cosine"]["wins"] == [9, 1]
+    raw = binomtest(0, 9).pvalue, binomtest(9, 10).pvalue
+    assert found["rc", "exp"]["probability"] == pytest.approx(raw[0], rel=EXACT)
+    assert found["rc", "exp"]["probability_corrected"] == pytest.approx(3 * raw[0], rel=EXACT)
+    assert found["rc", "cosine"]["probability_corrected"] == pytest.approx(2 * raw[1], rel=EXACT)
+    assert found["rc", "exp"]["verdict"].startswith("exp is preferred")
+    assert {total["label"]: total["wins"] for total in facts["candidates"]} == {
+        "exp": 18,
+        "rc": 9,
+        "cosine": 2,
+    }
+    assert found["rc", "exp"]["listeners"][-1] == {"listener": "Ada", "preferred": None}
+
+
+def test_a_single_round_of_preferences_shows_nothing(tmp_path):
+    save(tmp_path, preference([RC, EXP, COSINE]))
+    found = tally_sheets([tmp_path / "sheet-1.json"])
+    assert not any(pair["evidence"] for pair in found.facts["preference"]["pairs"])
+    assert "no pair shows a preference" in tally_text(found)
+
+
+@pytest.mark.parametrize("sheet", [abx(14), abx(9), preference([RC, EXP, COSINE])])
+def test_the_text_tells_what_the_facts_hold(tmp_path, sheet):
+    found = tally_sheets(save(tmp_path, sheet))
+    text = tally_text(found)
+    for pair in (found.facts["abx"] or found.facts["preference"])["pairs"]:
+        assert pair["verdict"] in text
+        assert all(label in text for label in pair["labels"])
+    json.dumps(found.facts, allow_nan=False)
+
+
+DAMAGED = [
+    ("", "no JSON"),
+    ("{", "no JSON"),
+    ("[1, 2]", "no listening sheet"),
+    ("{}", "no listening sheet"),
+    ('{"kind": "glidesmith comparison", "version": 1}', "no listening sheet"),
+    ("[" * 100_000, "nested"),
+    ('{"kind": NaN}', "NaN"),
+    (abx(9, version=2), "version 2"),
+    (abx(9, version=True), "version true"),
+    (abx(9, set="abc"), "64 hexadecimal digits"),
+    (abx(9, set=SET.upper()), "64 hexadecimal digits"),
+    (abx(9, test="triangle"), "triangle"),
+    (abx(9, made="yesterday"), "made"),
+    (abx(9, listener=7), "listener"),
+    (abx(9, finished="yes"), "finished"),
+    (abx(9, finished=False), "not finished, with 16 of 16"),
+    (abx(9, 16, 12, finished=True), "finished, with 12 of 16"),
+    (abx(9, correct=10), "10 correct, and its trials have 9"),
+    (abx(9, probability=0.05), "probability of 0.05"),
+    (abx(9, probability=-1), "probability"),
+    (abx(9, pair=(RC, RC)), "the same"),
+    (abx(9, pair=[RC]) | {"labels": ["rc"]}, "not two candidates"),
+    (abx(9, trials_planned=0), "outside 1 to 1,000"),
+    (abx(9, trials_planned=10**30), "outside 1 to 1,000"),
+    (abx(9, trials="none"), "trials"),
+    (abx(9, trials=[{"x": 2, "answer": 0, "seconds": 1}]), "trial 1: x"),
+    (abx(9, trials=[{"x": True, "answer": 0, "seconds": 1}]), "trial 1: x"),
+    (abx(9, trials=[{"x": 1, "seconds": 1}]), "trial 1: answer is missing"),
+    (abx(9, trials=[{"x": 1, "answer": 0, "seconds": -1}]), "seconds"),
+    (abx(9, trials=[7]), "trial 1 is 7"),
+    (preference([RC, EXP, COSINE], candidates=[RC]), "two or more"),
+    (preference([RC, EXP, COSINE]) | {"candidates": []}, "two or more"),
+    (preference([RC, EXP, COSINE], pairs=[{"first": 0, "second": 0, "preferred": 0}]), "with itself"),
+    (preference([RC, EXP, COSINE], pairs=[{"first": 0, "second": 3, "preferred": 0}]), "outside 0 to 2"),
+    (preference([RC, EXP, COSINE], pairs=[{"first": 0, "second": 1, "preferred": 2}]), "only 0 and 1"),
+    (preference([RC, EXP, COSINE], pairs=[{"first": 0, "second": 1, "preferred": 1}] * 3), "twice"),
+    (preference([RC, EXP, COSINE], pairs=[{"first": 0, "second": 1}]), "preferred is missing"),
+    (preference([RC, EXP, COSINE], finished=False) | {"finished": True}, "2 of 3 pairs"),
+    ('{"kind": "glidesmith listening sheet", "version": "\\u001b[31m"}', "version"),
+    ("1" * 10_000, "no JSON"),
+]
+
+
+@pytest.mark.parametrize(("sheet", "words"), DAMAGED)
+def test_damaged_and_inconsistent_sheets_are_refused_in_a_line(tmp_path, sheet, words):
+    (path,) = save(tmp_path, sheet)
+    with pytest.raises(SheetError) as caught:
+        tally_sheets([path])
+    (line,) = caught.value.lines
+    assert line.startswith(f"{path}: ")
+    assert words in line
+    assert line.isprintable()
+
+
+def test_the_others_are_added_up_all_the_same(tmp_path):
+    other = "f" * 64
+    paths = save(tmp_path, abx(12), abx(9, set=other), "{", abx(12), abx(8, listener="Ben"))
+    found = tally_sheets([*paths, tmp_path / "missing.json", tmp_path])
+    assert found.facts["sheets"] == 2
+    assert found.facts["abx"]["pairs"][0]["correct"] == 20
+    words = ["another set", "damaged", "the same round", "no such file", "is a folder"]
+    assert len(found.refused) == len(words)
+    assert all(word in line for word, line in zip(words, found.refused, strict=True))
+    assert found.facts["refused"] == list(found.refused)
+
+
+def test_a_sheet_over_the_limit_is_not_read(tmp_path):
+    (path,) = save(tmp_path, json.dumps(abx(9)) + " " * 1_000_000)
+    with pytest.raises(SheetError, match="1,000,000 bytes"):
+        tally_sheets([path])
+
+
+def test_no_sheets_at_all_are_an_error():
+    with pytest.raises(SheetError, match="no listening sheets"):
+        tally_sheets([])
