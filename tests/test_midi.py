@@ -168,8 +168,15 @@ def test_notes_without_length_are_dropped_and_listed() -> None:
     assert [note.number for note in phrase.notes] == [62]
     assert phrase.ignored == ("2 notes without length",)
     line = refusal(midi(f"00 90 3C 40 00 3C 00 {END}"))
-    assert "has no notes with a length" in line
-    assert "track 1 (1 on channel 1)" in line
+    assert line == (
+        "a.mid: has no notes with a length: its only note ends where it starts; "
+        "lengthen them and export it again"
+    )
+    two = midi(f"00 91 3C 40 00 3C 00 00 3E 40 00 3E 00 {END}", f"00 90 3C 40 60 3C 00 {END}")
+    assert refusal(two, track=1, channel=2) == (
+        "a.mid: has no notes with a length on track 1 and channel 2: all 2 end where they start; "
+        "lengthen them and export it again"
+    )
 
 
 def test_notes_come_by_tick_then_by_place_in_the_file() -> None:
@@ -240,7 +247,8 @@ def test_smpte_divisions(division: int, tick_s: Fraction) -> None:
 @pytest.mark.parametrize("division", [0, 0xE700, 0xE628, 0x8028, 0xFF01])
 def test_impossible_divisions(division: int) -> None:
     line = refusal(midi(f"00 90 3C 40 60 3C 00 {END}", division=division))
-    assert "ticks" in line
+    assert ("of 1 tick, " if division == 0xFF01 else "ticks") in line
+    assert ("1 frame a" if division == 0xFF01 else "s") in line
 
 
 def test_channel_10_is_left_out_unless_asked_for() -> None:
@@ -268,8 +276,10 @@ def test_tracks_and_channels_are_chosen_counting_from_1() -> None:
     assert refusal(data, channel=17) == "a.mid: channel 17 was asked for; channels are 1 to 16"
     assert refusal(data, track=1, channel=2) == (
         "a.mid: has no notes with a length on track 1 and channel 2; the notes are in "
-        'track 1 "Lead" (1 on channel 1); track 2 (1 on channel 2, 1 on channel 16)'
+        'track 1 "Lead" (1 on channel 1); track 2 (1 on channel 2, 1 on channel 16); choose among these'
     )
+    alone = midi(f"00 90 3C 40 60 3C 00 {END}")
+    assert refusal(alone, track=2) == "a.mid: track 2 was asked for; the file has only track 1"
 
 
 def test_percussion_alone_says_how_to_hear_it() -> None:
@@ -375,11 +385,13 @@ def test_format_2_is_refused_with_the_reason() -> None:
         (b"title = 'x'", "is not a Standard MIDI File"),
         (b"RIFF\0\0\0\0RMIDdata", "is MIDI wrapped in RIFF; export it as a plain Standard MIDI File"),
         (b"MThd\0\0\0\x04\0\x01\0\x01\0\x60", "has a damaged header of 4 bytes"),
-        (b"MThd\xff\xff\xff\xff\0\x01\0\x01\0\x60MTrk", "is truncated: it announces 1 tracks and holds 0"),
+        (b"MThd\xff\xff\xff\xff\0\x01\0\x01\0\x60MTrk", "is truncated: it announces 1 track and holds 0"),
         (midi(count=0), "announces no tracks"),
         (midi(END, count=3), "is truncated: it announces 3 tracks and holds 1"),
         (midi(END), "has no notes; export it with the notes in it"),
-        (FORMAT_1[:-1], "is truncated: track 4 claims 21 bytes and 20 are there"),
+        (FORMAT_1[:-1], "is truncated: track 4 claims 21 bytes and the file has 20 left"),
+        (b"MThd\0\0\0\x01\0\x01\0\x01\0\x60", "has a damaged header of 1 byte where"),
+        (midi("00 F0 01"), "is damaged in track 1, byte 24 of the file: an event that claims 1 byte, more"),
         (midi("00"), "is damaged in track 1, byte 23 of the file: a delta time without an event"),
         (midi("00 3C 40"), "is damaged in track 1, byte 23 of the file: data before any status"),
         (midi("00 90 3C"), "is damaged in track 1, byte 24 of the file: a message with missing"),
@@ -391,7 +403,7 @@ def test_format_2_is_refused_with_the_reason() -> None:
         (midi("00 F0 FF FF FF 7F"), "is damaged in track 1, byte 24 of the file: an event that claims 268"),
         (midi("00 FF 01 80 80 80 80 80"), "is damaged in track 1"),
     ],
-    ids=range(21),
+    ids=range(23),
 )
 def test_damage_gets_one_line(data: bytes, said: str) -> None:
     assert refusal(data).startswith("a.mid: " + said)

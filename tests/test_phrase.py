@@ -1,6 +1,7 @@
 """Phrases in TOML: exact beats, and every mistake named with its note."""
 
 import hashlib
+import math
 from dataclasses import replace
 from fractions import Fraction
 from itertools import pairwise
@@ -12,8 +13,9 @@ from hypothesis import strategies as st
 
 from conftest import LONG
 from glidesmith import phrase as phrase_module
-from glidesmith.errors import PhraseError
-from glidesmith.phrase import MOST_NOTES, Note, Phrase, load_phrase, parse_phrase
+from glidesmith.errors import PhraseError, SettingError
+from glidesmith.phrase import MOST_NOTES, Note, Phrase, load_phrase, load_preset_phrase, parse_phrase
+from glidesmith.preset import Preset, parse_preset
 
 seeded = settings(derandomize=True, deadline=None, database=None, max_examples=200)
 
@@ -230,12 +232,75 @@ def test_load_phrase_goes_by_content(tmp_path: Path) -> None:
     assert "wrapped in RIFF" in refusal(tmp_path / "line.rmi")
 
 
+def test_a_byte_order_mark_before_a_phrase_changes_nothing(tmp_path: Path) -> None:
+    (tmp_path / "bom.toml").write_bytes(b"\xef\xbb\xbf" + LINE.encode())
+    assert load_phrase(tmp_path / "bom.toml").notes == parse_phrase(LINE).notes
+
+
+@pytest.mark.parametrize("number", ["-0.0", "-0", "1" + "0" * 400, "-1e400", "true"])
+def test_odd_numbers_are_exact_or_refused_in_one_line(number: str) -> None:
+    for key in ("tempo_bpm", "at", "lasts", "velocity"):
+        note = {"at": "0", "lasts": "1", "note": "60", key: number}
+        note.pop("tempo_bpm", None)
+        tempo = f"tempo_bpm = {number}\n" if key == "tempo_bpm" else ""
+        text = tempo + "notes = [{ " + ", ".join(f"{name} = {value}" for name, value in note.items()) + " }]"
+        if number.startswith("-0") and key in ("at", "velocity"):
+            (read,) = parse_phrase(text).notes
+            assert math.copysign(1.0, read.velocity) == 1.0
+            continue
+        with pytest.raises(PhraseError) as caught:
+            parse_phrase(text)
+        (line,) = caught.value.lines
+        assert key in line or "longest allowed" in line
+        assert len(line) < 160
+
+
+def preset_of(tmp_path: Path, phrase: str) -> Preset:
+    slews = "[pitch]\nrise = 0\nfall = 0\n[gain]\nrise = 0\nfall = 0\n"
+    return parse_preset(slews + phrase, tmp_path / "lead.toml")
+
+
+def test_a_preset_s_phrase_is_found_with_its_choice_and_that_of_the_caller(tmp_path: Path) -> None:
+    tracks = (
+        "4D54726B 0000000C 00 90 3C 40 60 90 3C 00 00 FF 2F 00",
+        "4D54726B 0000000C 00 91 3E 40 60 91 3E 00 00 FF 2F 00",
+    )
+    header = "4D546864 00000006 0001 0002 0060"
+    (tmp_path / "song.mid").write_bytes(bytes.fromhex(header + tracks[0] + tracks[1]))
+    preset = preset_of(tmp_path, '[phrase]\nfile = "song.mid"\ntrack = 2\n')
+    assert [note.number for note in load_preset_phrase(preset).notes] == [62]
+    assert [note.number for note in load_preset_phrase(preset, track=1, channel=1).notes] == [60]
+    with pytest.raises(PhraseError, match="the longest allowed is 100 ms"):
+        load_preset_phrase(preset, longest_s=0.1)
+    bare = preset_of(tmp_path, "")
+    with pytest.raises(SettingError, match=r"lead\.toml: names no phrase; add \[phrase\] with file to it"):
+        load_preset_phrase(bare)
+
+
+def test_a_preset_s_phrase_is_refused_in_lines_that_name_preset_key_and_file(tmp_path: Path) -> None:
+    begin = f"{tmp_path / 'lead.toml'}: phrase.file: "
+
+    def refused(file: str) -> tuple[str, ...]:
+        with pytest.raises(PhraseError) as caught:
+            load_preset_phrase(preset_of(tmp_path, f"[phrase]\nfile = '{file}'\n"))
+        assert all(line.startswith(begin) for line in caught.value.lines)
+        return caught.value.lines
+
+    assert refused("gone.toml") == (
+        f"{begin}{tmp_path / 'gone.toml'}: there is no such file; check its name and folder",
+    )
+    (tmp_path / "wrong.toml").write_text("notes = []\nfoo = 1\n")
+    assert len(refused("wrong.toml")) == 2
+    (line,) = refused("long" * 10_000)
+    assert len(line) < 500
+
+
 def test_load_phrase_refuses_what_it_cannot_use(tmp_path: Path) -> None:
     assert "no such file" in refusal(tmp_path / "gone.toml")
     assert "is a folder" in refusal(tmp_path)
     for name, data, reason in (
         ("latin.toml", b"title = '\xe9'", "not UTF-8"),
-        ("bom.toml", b"\xef\xbb\xbf" + LINE.encode(), "byte-order mark"),
+        ("two boms.toml", b"\xef\xbb\xbf" * 2 + LINE.encode(), "not valid TOML"),
         ("nul.toml", b"\0" * 100, "NUL"),
         ("empty.toml", b"", "notes is missing"),
         ("big.toml", b"#" * 8_000_001, "8,000,000 bytes of text"),

@@ -284,7 +284,7 @@ def test_load_preset_names_the_file_in_every_refusal(tmp_path: Path) -> None:
     assert "no such file" in refusal("gone.toml")
     assert "is a folder" in refusal("")
     assert "UTF-8" in refusal("latin.toml", b"title = '\xe9'")
-    assert "byte-order mark" in refusal("bom.toml", b"\xef\xbb\xbf" + LEAST.encode())
+    assert "not valid TOML" in refusal("boms.toml", b"\xef\xbb\xbf" * 2 + LEAST.encode())
     assert "NUL" in refusal("nul.toml", b"title = '\0'")
     assert "not valid TOML" in refusal("bad.toml", b"title = ")
     assert "nested far too deeply" in refusal("deep.toml", b"a = " + b"[" * 5000)
@@ -292,6 +292,67 @@ def test_load_preset_names_the_file_in_every_refusal(tmp_path: Path) -> None:
     assert "\\x1b" in refusal("esc\x1b.toml", b"x = ")
     (tmp_path / "good.toml").write_text(FULL)
     assert load_preset(str(tmp_path / "good.toml")).title == "Night ferry lead"
+
+
+def test_a_byte_order_mark_is_passed_over_and_written_back(tmp_path: Path) -> None:
+    file = tmp_path / "marked.toml"
+    file.write_bytes(b"\xef\xbb\xbf" + FULL.encode())
+    assert load_preset(file) == replace(parse_preset(FULL, file), path=file)
+    save_preset(file, {"title": "Ferry"})
+    written = FULL.replace('"Night ferry lead"', '"Ferry"').encode()
+    assert file.read_bytes() == b"\xef\xbb\xbf" + written
+    copy = tmp_path / "below" / "copy.toml"
+    copy.parent.mkdir()
+    save_preset(copy, {}, file)
+    assert copy.read_bytes().startswith(b"\xef\xbb\xbf# The lead")
+
+
+LAW_LINES = {
+    "bend": "pitch.bend has no effect with law {law}; it counts for log and exp",
+    "knee": "pitch.knee has no effect with law {law}; it counts for soft",
+    "curvature": "pitch.curvature has no effect with law {law}; it counts for curve",
+}
+LAW_KEYS = {"log": "bend", "exp": "bend", "soft": "knee", "curve": "curvature"}
+
+
+@pytest.mark.parametrize("law", ["linear", "rc", "log", "exp", "soft", "curve", "cosine"])
+def test_settings_without_effect_are_told_by_law(law: str) -> None:
+    given = f'[pitch]\nlaw = "{law}"\nbend = 2\nknee = 0.1\ncurvature = 3\n'
+    preset = parse_preset(LEAST.replace("[pitch]\n", given))
+    told = [line.format(law=law) for leaf, line in LAW_LINES.items() if leaf != LAW_KEYS.get(law)]
+    assert list(preset.unused()) == told
+
+
+def test_settings_without_effect_are_told_of_every_table_and_follow_changes() -> None:
+    text = LEAST.replace("[gain]\n", "[gain]\nknee = 0.2\n")
+    preset = parse_preset(text + "[oscillator]\nwidth = 0.3\n[amplifier]\nrange_db = 40\n")
+    assert preset.unused() == (
+        "oscillator.width has no effect with wave saw; it counts for pulse",
+        "gain.knee has no effect with law linear; it counts for soft",
+        "amplifier.range_db has no effect with law linear; it counts for decibel",
+    )
+    used = {"oscillator.wave": "pulse", "gain.law": "soft", "amplifier.law": "decibel"}
+    assert preset.changed(used).unused() == ()
+
+
+def test_defaults_are_not_told_as_without_effect() -> None:
+    for text in (LEAST, FULL):
+        preset = parse_preset(text)
+        assert preset.unused() == ()
+        bare = replace(preset, given=None, path=Path("lead.toml"))
+        assert bare.unused() == ()
+        assert bare.changed({"pitch.rise": 0.5}).unused() == ()
+
+
+def test_a_preset_says_where_it_is_from() -> None:
+    assert parse_preset(LEAST, Path("bank/a\x1b.toml")).where == "bank/a\\x1b.toml"
+    assert parse_preset(LEAST).where == ""
+    assert len(parse_preset(LEAST, Path("x" * 5000)).where) <= 200
+
+
+def test_an_unknown_key_of_a_table_gets_its_keys() -> None:
+    line = line_of(LEAST + '[phrase]\nfile = "a.mid"\nfrob = 3\n')
+    assert line == "lead.toml: phrase.frob = 3: there is no such key; [phrase] has file, track, channel"
 
 
 def test_presets_made_of_mappings_name_no_file() -> None:

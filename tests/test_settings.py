@@ -12,6 +12,7 @@ from glidesmith.settings import (
     KEYS,
     LAWS,
     TABLES,
+    Key,
     find_key,
     is_timed,
     keys_as_markdown,
@@ -181,12 +182,58 @@ def test_a_mistyped_choice_names_the_nearest() -> None:
         ("gain.knie", "gain.knee"),
         ("range_db", "amplifier.range_db"),
         ("envelope.sustian", "envelope.sustain"),
+        ("tuning.scale_error", "tuning.scale_error_cents_per_octave"),
+        ("pitch.rise_time", "pitch.rise"),
+        ("ptich.rize", "pitch.rise"),
     ],
 )
 def test_an_unknown_key_names_the_nearest(name: str, near: str) -> None:
     with pytest.raises(SettingError) as caught:
         find_key(name)
     assert f'did you mean "{near}"?' in str(caught.value)
+
+
+def test_an_unknown_key_of_a_table_far_from_its_keys_gets_their_list() -> None:
+    with pytest.raises(SettingError) as caught:
+        find_key("phrase.frob")
+    assert str(caught.value) == '"phrase.frob" is no preset key; [phrase] has file, track, channel'
+
+
+@pytest.mark.parametrize("wave", ["plse", "pusle", "puls"])
+def test_a_wave_two_letters_off_is_understood(wave: str) -> None:
+    with pytest.raises(SettingError, match=r'must be one of "sine", .* \(did you mean "pulse"\?\)$'):
+        KEY["oscillator.wave"].check(wave)
+
+
+def test_a_wave_far_from_all_gets_the_list() -> None:
+    with pytest.raises(SettingError, match=r'must be one of "sine", "triangle", "saw", "pulse", "file"$'):
+        KEY["oscillator.wave"].check("sqaure")
+
+
+@pytest.mark.parametrize("key", [key for key in KEYS if key.kind in ("time", "number", "whole")], ids=str)
+@pytest.mark.parametrize("value", [10**400, -(10**400), True, False, -1e308, math.inf, math.nan])
+def test_no_number_is_too_odd_for_one_line(key: Key, value: object) -> None:
+    with pytest.raises(SettingError) as caught:
+        key.check(value)
+    (line,) = caught.value.lines
+    assert line.startswith(f"{key.name} = ")
+    assert len(line) < 160
+
+
+@pytest.mark.parametrize("key", [key for key in KEYS if key.kind in ("time", "number")], ids=str)
+def test_negative_zero_is_zero(key: Key) -> None:
+    if key.or_zero or key.lowest <= 0.0 <= key.highest:
+        value = key.check(-0.0)
+        assert isinstance(value, float)
+        assert math.copysign(1.0, value) == 1.0
+
+
+def test_what_a_key_counts_for_are_choices_of_another_key_of_its_table() -> None:
+    for key in KEYS:
+        if key.counts_for is not None:
+            other, useful = key.counts_for
+            assert KEY[other].table == key.table
+            assert set(useful) < set(KEY[other].choices)
 
 
 def test_an_unknown_key_far_from_all_names_none() -> None:

@@ -75,6 +75,46 @@ def test_nearest_finds_the_key_that_was_meant() -> None:
     assert text.nearest("attack" * 100_000, choices) is None
 
 
+@pytest.mark.parametrize(
+    ("typed", "meant"),
+    [
+        ("plse", "pulse"),
+        ("pusle", "pulse"),
+        ("plus", "pulse"),
+        ("sqaure", None),
+        ("sien", "sine"),
+        ("trangel", "triangle"),
+        ("fil", "file"),
+        ("frob", None),
+        ("sawtooth", "saw"),
+        ("tri", "triangle"),
+        ("s", None),
+        ("x", None),
+        ("", None),
+    ],
+)
+def test_nearest_takes_up_to_two_slips_or_a_beginning(typed: str, meant: str | None) -> None:
+    assert text.nearest(typed, ("sine", "triangle", "saw", "pulse", "file")) == meant
+
+
+def test_nearest_does_not_choose_between_two_beginnings() -> None:
+    assert text.nearest("level", ("level_db", "level_range")) is None
+    assert text.nearest("level", ("level_db", "range_db")) == "level_db"
+
+
+def test_file_names_are_printable_and_cut_in_the_middle() -> None:
+    assert text.file_name(Path("bank/a\x1b.toml")) == "bank/a\\x1b.toml"
+    long = text.file_name("x" * 5000 + "/lead.toml")
+    assert len(long) <= 200
+    assert long.startswith("xxx")
+    assert long.endswith("…" + "x" * 89 + "/lead.toml")
+
+
+def test_what_is_counted_goes_by_its_number() -> None:
+    counts = [text.counted(number, "track", "tracks") for number in (0, 1, 1200)]
+    assert counts == ["0 tracks", "1 track", "1,200 tracks"]
+
+
 def test_mistakes_tells_twenty_and_counts_the_rest() -> None:
     mistakes = text.Mistakes("lead.toml")
     for number in range(25):
@@ -84,6 +124,15 @@ def test_mistakes_tells_twenty_and_counts_the_rest() -> None:
     assert len(caught.value.lines) == 21
     assert caught.value.lines[0] == "lead.toml: mistake 0"
     assert caught.value.lines[-1] == "lead.toml: and 5 more mistakes like these"
+
+
+def test_one_more_mistake_is_one() -> None:
+    mistakes = text.Mistakes()
+    for number in range(21):
+        mistakes.add(f"mistake {number}")
+    with pytest.raises(PresetError) as caught:
+        mistakes.raise_as(PresetError)
+    assert caught.value.lines[-1] == "and 1 more mistake like these"
 
 
 def test_no_mistakes_raise_nothing() -> None:
@@ -137,7 +186,6 @@ def test_read_bytes_says_why_the_system_refused(tmp_path: Path, monkeypatch: pyt
 @pytest.mark.parametrize(
     ("data", "reason"),
     [
-        (b"\xef\xbb\xbftitle", "byte-order mark"),
         ("title".encode("utf-16"), "UTF-16"),
         (b"title\0", "NUL bytes"),
         (b"a = 1\nb = '\xe9'", "byte 0xE9 in line 2"),
@@ -149,6 +197,48 @@ def test_decoded_takes_plain_utf8_only(data: bytes, reason: str) -> None:
     (line,) = caught.value.lines
     assert line.startswith("lead.toml: ")
     assert reason in line
+
+
+def test_a_byte_order_mark_is_kept_by_the_decoder_and_passed_over_by_the_parser() -> None:
+    marked = text.decoded(b"\xef\xbb\xbfa = 1\n", "", PresetError)
+    assert marked == "\ufeffa = 1\n"
+    assert text.toml_mapping(marked, "", PresetError) == {"a": 1}
+    assert text.edited_toml(marked, {"a": 2}) == "\ufeffa = 2\n"
+    with pytest.raises(PresetError, match="not valid TOML"):
+        text.toml_mapping("\ufeff" + marked, "", PresetError)
+    with pytest.raises(PresetError, match="nested far too deeply"):
+        text.toml_mapping("\ufeff" + ".".join("a" * 200_000) + " = 1", "", PresetError)
+
+
+@pytest.mark.parametrize(
+    ("toml", "mending"),
+    [
+        ("[pitch]\n[pitch]\n", "; keep one of the two, with the keys of both"),
+        ("[a.'b c']\n[a.'b c']\n", "; keep one of the two, with the keys of both"),
+        ("a = 1\na = 2\n", "; a key or table is there twice; keep one of the two"),
+        ("a = {x = 1}\na.y = 2\n", "; a table is there twice; keep one of the two, with the keys of both"),
+        ("rise = 80 ms\n", '; write one key = value to a line, with text in quotes, as rise = "80 ms"'),
+        ("law = rc\n", '; write text in quotes, as "80 ms", and numbers without units, as 0.08'),
+        ('law = "rc\n', "; close the text with the quote that began it, in the same line"),
+        ("law = 'rc", "; close the text with the quote that began it"),
+        ('law = "rc', "; close the text with the quote that began it"),
+        ('file = "a\\q"', "; write \\\\ for a backslash, or put the text in single quotes"),
+        ("a = [1\n", "; close it with ]"),
+        ("[pitch\n", "; close the name with ], as in [pitch]"),
+        ("a = 'x\x01'\n", "; take this character out"),
+        ("= 3\n", "; write every line as [table] or key = value"),
+        ("a\n", "; write every line as [table] or key = value"),
+    ],
+    ids=range(15),
+)
+def test_what_the_parser_finds_is_followed_by_how_to_mend_it(toml: str, mending: str) -> None:
+    with pytest.raises(PresetError) as caught:
+        text.toml_mapping(toml, "lead.toml", PresetError)
+    (line,) = caught.value.lines
+    assert line.startswith("lead.toml: is not valid TOML: ")
+    assert line.endswith(mending)
+    assert "('" not in line
+    assert line.isprintable()
 
 
 def test_decoded_keeps_line_ends() -> None:

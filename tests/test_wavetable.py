@@ -3,6 +3,7 @@
 import math
 import os
 import random
+import struct
 from itertools import pairwise
 from pathlib import Path
 
@@ -20,6 +21,7 @@ from glidesmith.wavetable import (
     MOST_PARTIALS,
     _fill_table,
     build_wavetables,
+    check_cycle,
     level_partials,
     partials,
     read_cycle,
@@ -231,7 +233,7 @@ def test_tables_hold_no_negative_zero() -> None:
         ("pulse", 0.04, None, "width: 0.04; give 0.05 to 0.95"),
         ("pulse", math.nan, None, "width: nan; give 0.05 to 0.95"),
         ("file", 0.5, None, "oscillator.file: missing"),
-        ("file", 0.5, np.zeros(7), "7 samples; one cycle has 8 to 65536"),
+        ("file", 0.5, np.zeros(7), "7 samples; one cycle has 8 to 65,536"),
         ("file", 0.5, np.zeros((8, 2)), "8×2 samples"),
         ("file", 0.5, np.full(8, 0.5), "silent"),
         ("file", 0.5, np.array([1.0, math.nan] * 4), "NaN or an infinity"),
@@ -292,16 +294,18 @@ def _refusal(path: Path | str) -> str:
         read_cycle(path)
     message = str(caught.value)
     assert message.isprintable()
-    assert message.startswith("oscillator.file ")
+    assert message.startswith("oscillator.file: ")
+    assert message.count("oscillator.file") == 1
+    assert message.count("; ") == 1
     return message
 
 
 @pytest.mark.parametrize(
     ("samples", "subtype", "reason"),
     [
-        (np.zeros(7), "FLOAT", "7 samples; one cycle has 8 to 65536"),
+        (np.zeros(7), "FLOAT", "7 samples; one cycle has 8 to 65,536"),
         (np.zeros(0), "FLOAT", "0 samples"),
-        (seeded_cycle(65_537), "PCM_16", "65537 samples"),
+        (seeded_cycle(65_537), "PCM_16", "65,537 samples"),
         (np.zeros(100), "PCM_16", "silent"),
         (np.full(100, 0.5), "PCM_16", "silent"),
         (np.stack([seeded_cycle(64), -seeded_cycle(64)], axis=1), "DOUBLE", "silent"),
@@ -328,7 +332,8 @@ def test_longest_and_shortest_cycle_are_read(tmp_path: Path) -> None:
 
 def test_files_that_are_no_wav(tmp_path: Path) -> None:
     assert "no such file" in _refusal(tmp_path / "missing.wav")
-    assert "not a file" in _refusal(tmp_path)
+    assert "is a folder" in _refusal(tmp_path)
+    assert "device or a pipe" in _refusal("/dev/zero")
     assert "cycle.wav" in _refusal(str(tmp_path / "cycle.wav"))
     for name, content in {
         "empty.wav": b"",
@@ -352,7 +357,77 @@ def test_names_are_printed_safely(tmp_path: Path) -> None:
 
 def test_a_named_pipe_is_not_waited_for(tmp_path: Path) -> None:
     os.mkfifo(tmp_path / "pipe.wav")
-    assert "not a file" in _refusal(tmp_path / "pipe.wav")
+    assert "device or a pipe" in _refusal(tmp_path / "pipe.wav")
+
+
+def test_a_missing_cycle_is_told_in_one_clean_line_that_names_the_preset(tmp_path: Path) -> None:
+    with pytest.raises(SettingError) as caught:
+        read_cycle("nope.wav", "lead.toml")
+    assert caught.value.lines == (
+        "lead.toml: oscillator.file: nope.wav: there is no such file; check its name and folder",
+    )
+    (tmp_path / "text.wav").write_text("no sound")
+    with pytest.raises(SettingError) as caught:
+        read_cycle(tmp_path / "text.wav", "lead.toml")
+    assert str(caught.value) == (
+        f"lead.toml: oscillator.file: {tmp_path / 'text.wav'}: is not a WAV file; export the cycle as WAV"
+    )
+
+
+@pytest.mark.parametrize("kind", ["WAV", "WAVEX", "RF64", "RIFX"])
+@pytest.mark.parametrize("missing", [1, 2, 200, 400])
+def test_a_wav_with_less_than_its_header_claims_is_refused(tmp_path: Path, kind: str, missing: int) -> None:
+    path = tmp_path / "cycle.wav"
+    options = {"format": "WAV", "endian": "BIG"} if kind == "RIFX" else {"format": kind}
+    soundfile.write(path, seeded_cycle(100), 48_000, "FLOAT", **options)
+    whole = path.read_bytes()
+    end = whole.index(b"data") + 8 + 400
+    path.write_bytes(whole[:end])
+    assert read_cycle(path).size == 100
+    path.write_bytes(whole[: end - missing])
+    assert f"is cut off: it claims 400 bytes of samples and has {400 - missing}; copy" in _refusal(path)
+
+
+def test_an_enormous_size_in_the_64_bit_header_is_refused(tmp_path: Path) -> None:
+    path = tmp_path / "cycle.wav"
+    ds64 = b"ds64" + struct.pack("<IQQQI", 28, 500, 2**63, 2**61, 0)
+    pcm = b"fmt " + struct.pack("<IHHIIHH", 16, 1, 1, 48_000, 96_000, 2, 16)
+    samples = b"data\xff\xff\xff\xff" + bytes(range(200))
+    path.write_bytes(b"RF64\xff\xff\xff\xffWAVE" + ds64 + pcm + samples)
+    assert "claims 9,223,372,036,854,775,808 bytes of samples and has 200" in _refusal(path)
+
+
+def test_a_wav_of_open_length_goes_to_its_end(tmp_path: Path) -> None:
+    """What is written into a pipe can't say its length: 0xFFFFFFFF, by common practice."""
+    path = tmp_path / "cycle.wav"
+    soundfile.write(path, seeded_cycle(100), 48_000, "PCM_16")
+    whole = bytearray(path.read_bytes())
+    at = whole.index(b"data") + 4
+    whole[4:8] = whole[at : at + 4] = b"\xff" * 4
+    path.write_bytes(whole)
+    assert read_cycle(path).size == 100
+
+
+def test_a_wav_is_known_by_its_content_whatever_its_name(tmp_path: Path) -> None:
+    path = tmp_path / "cycle.raw"
+    soundfile.write(path, seeded_cycle(100), 48_000, "FLOAT", format="WAV")
+    assert read_cycle(path).size == 100
+
+
+def test_a_recording_of_minutes_is_not_read(tmp_path: Path) -> None:
+    path = tmp_path / "long.wav"
+    path.write_bytes(bytes(16_000_001))
+    assert "over 16,000,000 bytes, the most that is read; cut the recording" in _refusal(path)
+
+
+def test_one_sample_is_one(tmp_path: Path) -> None:
+    path = tmp_path / "cycle.wav"
+    soundfile.write(path, np.zeros(1), 48_000, "FLOAT")
+    assert ": 1 sample; one cycle has 8 to 65,536: cut" in _refusal(path)
+    with pytest.raises(SettingError, match="cycle: 1 sample; one cycle"):
+        check_cycle(np.zeros(1))
+    with pytest.raises(SettingError, match="cycle: 2×9 samples; one cycle"):
+        check_cycle(np.zeros((2, 9)))
 
 
 def test_damaged_wav_files(tmp_path: Path) -> None:

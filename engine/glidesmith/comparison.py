@@ -291,11 +291,11 @@ def _candidates(
 
 
 def _phrase_of(preset: Preset) -> "Phrase":
-    from glidesmith.phrase import load_phrase
+    from glidesmith.phrase import load_preset_phrase
 
     if preset.phrase is None:
         raise SettingError(f"{shown(title_of(preset))} names no phrase; give one")
-    return load_phrase(preset.phrase.file, preset.phrase.track, preset.phrase.channel)
+    return load_preset_phrase(preset)
 
 
 def _require_inputs_kept(plan: _Plan, folder: Path) -> None:

@@ -26,7 +26,7 @@ from typing import Any
 
 from glidesmith.errors import PhraseError
 from glidesmith.phrase import LONGEST_S, MOST_NOTES, Note, Phrase, require_length
-from glidesmith.text import printable, shortened
+from glidesmith.text import counted, file_name, shortened
 
 MOST_EVENTS = 1_000_000
 """The most events that are read of one file."""
@@ -63,7 +63,7 @@ def read_midi(
 
     Raises PhraseError with one line.
     """
-    prefix = f"{printable(str(path))}: " if path else ""
+    prefix = f"{file_name(path)}: " if path else ""
 
     def fail(line: str) -> PhraseError:
         return PhraseError(prefix + line)
@@ -108,7 +108,8 @@ def _read_header(data: bytes, fail: Fail) -> _Header:
     size = int.from_bytes(data[4:8], "big")
     file_format, track_count, division = (int.from_bytes(data[i : i + 2], "big") for i in (8, 10, 12))
     if size < 6:
-        raise fail(f"has a damaged header of {size} bytes where 6 belong; export it again")
+        damaged = counted(size, "byte", "bytes")
+        raise fail(f"has a damaged header of {damaged} where 6 belong; export it again")
     if file_format == 2:
         raise fail(
             "is of format 2, patterns without a common time; export each pattern as a file of format 0 or 1"
@@ -132,8 +133,9 @@ def _read_division(division: int, fail: Fail) -> tuple[int, Fraction | None]:
         return division, None
     frames, ticks = 256 - (division >> 8), division & 0xFF
     if frames not in _FRAME_S or ticks == 0:
+        found = f"{counted(frames, 'frame', 'frames')} a second of {counted(ticks, 'tick', 'ticks')}"
         raise fail(
-            f"counts time in {frames} frames a second of {ticks} ticks, where 24, 25, 29 or 30 frames "
+            f"counts time in {found}, where 24, 25, 29 or 30 frames "
             "and at least one tick are possible; export it again"
         )
     return 0, _FRAME_S[frames] / ticks
@@ -147,7 +149,8 @@ def _track_chunks(data: bytes, header: _Header, fail: Fail) -> tuple[list[tuple[
         begin = at + 8
         if begin > len(data):
             raise fail(
-                f"is truncated: it announces {header.track_count:,} tracks and holds {len(chunks):,}; "
+                f"is truncated: it announces {counted(header.track_count, 'track', 'tracks')} "
+                f"and holds {len(chunks):,}; "
                 "copy or export it again"
             )
         at = begin + int.from_bytes(data[at + 4 : begin], "big")
@@ -156,13 +159,13 @@ def _track_chunks(data: bytes, header: _Header, fail: Fail) -> tuple[list[tuple[
             continue
         if at > len(data):
             raise fail(
-                f"is truncated: track {len(chunks) + 1} claims {at - begin:,} bytes "
-                f"and {len(data) - begin:,} are there; copy or export it again"
+                f"is truncated: track {len(chunks) + 1} claims {counted(at - begin, 'byte', 'bytes')} "
+                f"and the file has {len(data) - begin:,} left; copy or export it again"
             )
         chunks.append((begin, at))
-    remarks = [_count(others, "chunk that is no track", "chunks that are no tracks")] if others else []
+    remarks = [counted(others, "chunk that is no track", "chunks that are no tracks")] if others else []
     if at < len(data):
-        remarks.append(_count(len(data) - at, "byte after the last track", "bytes after the last track"))
+        remarks.append(counted(len(data) - at, "byte after the last track", "bytes after the last track"))
     return chunks, remarks
 
 
@@ -179,9 +182,8 @@ class _Choice:
         if self.channel is not None and not 1 <= self.channel <= 16:
             raise self.fail(f"channel {self.channel} was asked for; channels are 1 to 16")
         if self.track is not None and not 1 <= self.track <= self.track_count:
-            raise self.fail(
-                f"track {self.track} was asked for; the file has tracks 1 to {self.track_count:,}"
-            )
+            there = f"tracks 1 to {self.track_count:,}" if self.track_count > 1 else "only track 1"
+            raise self.fail(f"track {self.track} was asked for; the file has {there}")
 
     def has_track(self, number: int) -> bool:
         return self.track is None or self.track == number
@@ -269,7 +271,8 @@ def _events(data: bytes, begin: int, end: int, track: int, fail: Fail) -> Iterat
             length, content_at = _variable_length(data, at + (status == _META), end, damaged)
             stop = content_at + length
             if stop > end:
-                raise damaged(at, f"an event that claims {length:,} bytes, more than its track has left")
+                claimed = counted(length, "byte", "bytes")
+                raise damaged(at, f"an event that claims {claimed}, more than its track has left")
             content = (data[at : at + 1] if status == _META else b"") + data[content_at:stop]
         else:
             raise damaged(at, f"status 0x{status:02X}, which no file may hold")
@@ -423,35 +426,31 @@ def _title(tracks: list[_Track], choice: _Choice, path: Path | None) -> str:
     return name or (path.stem if path else "untitled")
 
 
-def _count(number: int, one: str, several: str) -> str:
-    return f"{number:,} {one if number == 1 else several}"
-
-
 def _ignored(tracks: list[_Track], choice: _Choice, header: _Header) -> tuple[str, ...]:
     """What the chosen tracks hold that has no effect, in readable lines."""
     chosen = [track for track in tracks if choice.has_track(track.number)]
     lines = []
     percussion = sum(track.note_ons[PERCUSSION_CHANNEL] for track in chosen)
     if percussion and choice.channel is None:
-        lines.append(f"{_count(percussion, 'note', 'notes')} on channel 10, percussion by convention")
+        lines.append(f"{counted(percussion, 'note', 'notes')} on channel 10, percussion by convention")
     controllers = sum((track.controllers for track in chosen), Counter[int]())
     if controllers:
         numbers = sorted(controllers)
         listed = ", ".join(map(str, numbers[:_MOST_LISTED])) + (
             " and others" if len(numbers) > _MOST_LISTED else ""
         )
-        changes = _count(controllers.total(), "controller change", "controller changes")
+        changes = counted(controllers.total(), "controller change", "controller changes")
         lines.append(f"{changes} (controller {listed})")
     if header.tick_s is not None and (tempos := sum(len(track.tempos) for track in tracks)):
         lines.append(
-            _count(
+            counted(
                 tempos,
                 "tempo change (time is counted in frames)",
                 "tempo changes (time is counted in frames)",
             )
         )
     others = sum((track.ignored for track in chosen), Counter[tuple[str, str]]())
-    lines += [_count(number, *names) for names, number in others.items()]
+    lines += [counted(number, *names) for names, number in others.items()]
     return tuple(lines)
 
 
@@ -462,13 +461,28 @@ def _nothing_chosen(tracks: list[_Track], choice: _Choice) -> str:
         return "has no notes; export it with the notes in it"
     asked = [f"track {choice.track}"] if choice.track is not None else []
     asked += [f"channel {choice.channel}"] if choice.channel is not None else []
+    if empty := _chosen_count(tracks, choice):
+        place = f" on {' and '.join(asked)}" if asked else ""
+        ends = "its only note ends where it starts" if empty == 1 else f"all {empty:,} end where they start"
+        return f"has no notes with a length{place}: {ends}; lengthen them and export it again"
     listed = "; ".join(_where_notes_are(track) for track in with_notes[:_MOST_LISTED])
     more = " and more tracks" if len(with_notes) > _MOST_LISTED else ""
-    hint = ""
+    hint = "; choose among these"
     if choice.channel is None and any(track.note_ons[PERCUSSION_CHANNEL] for track in with_notes):
         hint = "; channel 10, percussion by convention, is played only when asked for"
     searched = " and ".join(asked) or "channels 1 to 9 and 11 to 16"
     return f"has no notes with a length on {searched}; the notes are in {listed}{more}{hint}"
+
+
+def _chosen_count(tracks: list[_Track], choice: _Choice) -> int:
+    """How many notes begin on the chosen tracks and channels."""
+    return sum(
+        count
+        for track in tracks
+        if choice.has_track(track.number)
+        for channel, count in track.note_ons.items()
+        if choice.has_channel(channel)
+    )
 
 
 def _where_notes_are(track: _Track) -> str:

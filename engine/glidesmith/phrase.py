@@ -9,13 +9,13 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from glidesmith.errors import PhraseError, SettingError
 from glidesmith.text import (
     Mistakes,
     decoded,
-    printable,
+    file_name,
     read_bytes,
     shortened,
     shown,
@@ -23,6 +23,9 @@ from glidesmith.text import (
     toml_mapping,
 )
 from glidesmith.units import note_number, spoken_duration
+
+if TYPE_CHECKING:
+    from glidesmith.preset import Preset
 
 MOST_NOTES = 100_000
 """The most notes that a phrase may have."""
@@ -100,7 +103,7 @@ def load_phrase(
         from glidesmith.midi import read_midi
 
         return read_midi(data, path, track, channel, longest_s)
-    where = printable(str(path))
+    where = file_name(path)
     if len(data) > MOST_TOML_BYTES:
         raise PhraseError(f"{where}: is over {MOST_TOML_BYTES:,} bytes of text; split the phrase")
     if track is not None or channel is not None:
@@ -108,9 +111,32 @@ def load_phrase(
     return parse_phrase(decoded(data, where, PhraseError), path, longest_s)
 
 
+def load_preset_phrase(
+    preset: "Preset",
+    track: int | None = None,
+    channel: int | None = None,
+    longest_s: float = LONGEST_S,
+) -> Phrase:
+    """The phrase that a preset names; ``track`` and ``channel`` take the place of the preset's own.
+
+    Raises PhraseError where it can't be used, each line naming the preset and its key as well as the file;
+    SettingError where the preset names none.
+    """
+    prefix = f"{preset.where}: " if preset.where else ""
+    named = preset.phrase
+    if named is None:
+        raise SettingError(f"{prefix}names no phrase; add [phrase] with file to it")
+    track = named.track if track is None else track
+    channel = named.channel if channel is None else channel
+    try:
+        return load_phrase(named.file, track, channel, longest_s)
+    except PhraseError as problem:
+        raise PhraseError(*(f"{prefix}phrase.file: {line}" for line in problem.lines)) from None
+
+
 def parse_phrase(text: str, path: Path | None = None, longest_s: float = LONGEST_S) -> Phrase:
     """Read the text of a TOML phrase. Raises PhraseError, a line for each mistake."""
-    where = printable(str(path)) if path else ""
+    where = file_name(path) if path else ""
     mapping = toml_mapping(text, where, PhraseError, parse_float=_exact)
     mistakes = Mistakes(where)
     for name, value in mapping.items():
@@ -161,7 +187,7 @@ def _quoted(value: object) -> str:
 
 
 def _unknown(place: str, name: str, value: object, names: tuple[str, ...], mistakes: Mistakes) -> str:
-    near = "" if mistakes.full else suggestion(name, names)
+    near = "" if mistakes.full else suggestion(name, names) or f"; a phrase has {', '.join(names)}"
     return f"{place}{shortened(name)} = {_quoted(value)}: there is no such key{near}"
 
 
@@ -211,7 +237,9 @@ def _note(entry: object, place: str, beat_s: Fraction, mistakes: Mistakes) -> No
     sound = True
     for name, value in entry.items():
         if (reason := _fault(name, value)) is not None:
-            near = suggestion(name, _NOTE_KEYS) if reason == _NO_KEY and not mistakes.full else ""
+            near = ""
+            if reason == _NO_KEY and not mistakes.full:
+                near = suggestion(name, _NOTE_KEYS) or f"; a note has {', '.join(_NOTE_KEYS)}"
             mistakes.add(f"{place}: {shortened(name)} = {_quoted(value)}: {reason}{near}")
             sound = False
     for name in _NOTE_KEYS[:3]:

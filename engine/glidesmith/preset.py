@@ -29,7 +29,7 @@ from glidesmith.text import (
     Mistakes,
     decoded,
     edited_toml,
-    printable,
+    file_name,
     read_bytes,
     shortened,
     shown,
@@ -172,8 +172,29 @@ class Preset:
         base = _mapping_of(self) if self.given is None else self.given
         wave = changes.get("oscillator.wave", "file")
         dropped: dict[str, object] = {} if wave == "file" else {"oscillator.file": None}
-        where = printable(str(self.path)) if self.path else ""
-        return preset_from_mapping(_with_changes(base, {**dropped, **changes}), where, self.path)
+        return preset_from_mapping(_with_changes(base, {**dropped, **changes}), self.where, self.path)
+
+    @property
+    def where(self) -> str:
+        """How messages name the preset: its path, printable and not too long, or nothing without one."""
+        return file_name(self.path) if self.path else ""
+
+    def unused(self) -> tuple[str, ...]:
+        """The settings that the file gives and that have no effect with the others, a readable line each.
+
+        For example ``"pitch.bend has no effect with law rc; it counts for log and exp"``. Defaults and
+        presets that come from no file or mapping have none.
+        """
+        values = {key.name: value for key, value in _values_of(self)}
+        lines = []
+        for key in KEYS:
+            if key.counts_for is None or not _is_given(key, self.given or {}):
+                continue
+            other, useful = key.counts_for
+            if values[other] not in useful:
+                said = f"{KEY[other].leaf} {values[other]}"
+                lines.append(f"{key.name} has no effect with {said}; it counts for {' and '.join(useful)}")
+        return tuple(lines)
 
 
 def load_preset(path: str | os.PathLike[str]) -> Preset:
@@ -184,7 +205,7 @@ def load_preset(path: str | os.PathLike[str]) -> Preset:
 
 def parse_preset(text: str, path: Path | None = None) -> Preset:
     """Check a preset's text; ``path`` is where it stands or will stand. Raises PresetError."""
-    where = printable(str(path)) if path else ""
+    where = file_name(path) if path else ""
     return preset_from_mapping(toml_mapping(text, where, PresetError), where, path)
 
 
@@ -215,6 +236,11 @@ def settings_hash(preset: Preset) -> str:
     return hashlib.sha256(canonical.encode("ascii")).hexdigest()
 
 
+def _is_given(key: Key, mapping: Mapping[str, Any]) -> bool:
+    table = mapping.get(key.table)
+    return isinstance(table, Mapping) and key.leaf in table
+
+
 def _is_heard(key: Key) -> bool:
     return key.name != "title" and key.table != "phrase"
 
@@ -228,7 +254,7 @@ def update_preset_text(text: str, changes: Mapping[str, object], path: Path | No
 
     Raises PresetError where the changed preset would not be valid.
     """
-    where = printable(str(path)) if path else ""
+    where = file_name(path) if path else ""
     mapping = toml_mapping(text, where, PresetError)
     wanted = preset_from_mapping(_with_changes(mapping, changes), where, path)
     try:
@@ -270,7 +296,7 @@ def _moved_files(text: str, origin: Path, path: Path) -> dict[str, object]:
     old_folder, new_folder = origin.parent.absolute(), path.parent.absolute()
     if old_folder == new_folder:
         return {}
-    mapping = toml_mapping(text, printable(str(origin)), PresetError)
+    mapping = toml_mapping(text, file_name(origin), PresetError)
     moved: dict[str, object] = {}
     for key in KEYS:
         table = mapping.get(key.table)
@@ -282,7 +308,7 @@ def _moved_files(text: str, origin: Path, path: Path) -> dict[str, object]:
 
 def _read_text(path: Path) -> str:
     data = read_bytes(path, MOST_PRESET_BYTES, PresetError)
-    return decoded(data, printable(str(path)), PresetError)
+    return decoded(data, file_name(path), PresetError)
 
 
 def _checked_values(mapping: Mapping[str, Any], mistakes: Mistakes) -> dict[str, Any]:
@@ -429,10 +455,11 @@ def _values_of(preset: Preset) -> Iterator[tuple[Key, Any]]:
 
 
 def _mapping_of(preset: Preset) -> dict[str, Any]:
-    """What a file would say to give this preset, with files as absolute paths."""
+    """What a file would say to give this preset, with files as absolute paths and without idle defaults."""
     changes = {
         key.name: str(value.absolute()) if isinstance(value, Path) else key.plain(value)
         for key, value in _values_of(preset)
+        if key.counts_for is None or value != key.default
     }
     return _with_changes({}, changes)
 

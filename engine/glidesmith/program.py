@@ -19,6 +19,7 @@ from glidesmith.errors import SettingError
 from glidesmith.keyboard import LEGATO, PRESS, RELEASE, KeyChange, key_changes
 from glidesmith.oscillator import CYCLE, HIGHEST_SHARE
 from glidesmith.slew import SLEW, Slew
+from glidesmith.text import counted
 from glidesmith.units import note_hz
 from glidesmith.voice import quiet_sample
 from glidesmith.wavetable import Wavetables, build_wavetables, read_cycle
@@ -226,9 +227,8 @@ def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchC
     volts = note_volts(preset, phrase.notes[first].number)
     low, high = (converted_volts(preset.converter, end)[0] for end in (-100.0, 100.0))
     return (
-        f"converter: {len(clipped)} of the phrase's notes lie beyond its codes, {low:+g} to {high:+g} V, "
-        f"and are clipped (the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move "
-        "tuning.zero_volts",
+        f"converter: clips {counted(len(clipped), 'note', 'notes')} of the phrase to its codes, {low:+g} to {high:+g} V "
+        f"(the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move tuning.zero_volts",
     )
 
 
@@ -309,7 +309,7 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
     cycle = None
     if preset.oscillator.wave == "file":
         assert preset.oscillator.file is not None
-        cycle = read_cycle(preset.oscillator.file)
+        cycle = read_cycle(preset.oscillator.file, preset.where)
     lowest_hz = _lowest_hz(preset, [c.held_volts for c in pitch], float(settings["octaves_per_volt"][0]))
     tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, lowest_hz, rate)
     pitch_events, gate_events = _pitch_events(pitch, rate), _gate_events(gate, rate)

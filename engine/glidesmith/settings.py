@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 from glidesmith.errors import SettingError
-from glidesmith.text import nearest, shown, suggestion
+from glidesmith.text import nearest, shortened, shown, suggestion
 from glidesmith.units import format_time, note_name, note_number, parse_time
 
 Kind = Literal["time", "number", "whole", "choice", "flag", "note", "file", "text"]
@@ -37,7 +37,8 @@ class Key:
 
     ``name`` is dotted, as ``"pitch.rise"``. ``lowest`` and ``highest`` bound times (seconds), numbers and
     whole numbers, both included; ``or_zero`` allows 0 below ``lowest`` too. ``default`` is None where the
-    key must be given (``required``) and where leaving it out means "none" or "by the law".
+    key must be given (``required``) and where leaving it out means "none" or "by the law". ``counts_for``
+    names another key and those of its values with which alone this one has an effect.
     """
 
     name: str
@@ -50,6 +51,7 @@ class Key:
     or_zero: bool = False
     choices: tuple[str, ...] = ()
     unit: str = ""
+    counts_for: tuple[str, tuple[str, ...]] | None = None
 
     @property
     def table(self) -> str:
@@ -134,9 +136,19 @@ def _slew_keys(table: str, volt: str) -> tuple[Key, ...]:
             f"{table}.{leaf}", "time", described, required=True, lowest=1e-6, highest=60.0, or_zero=True
         )
 
-    def number(leaf: str, described: str, default: float, lowest: float, highest: float, unit: str) -> Key:
-        name = f"{table}.{leaf}"
-        return Key(name, "number", described, default=default, lowest=lowest, highest=highest, unit=unit)
+    def number(
+        leaf: str, described: str, default: float, lowest: float, highest: float, unit: str, *laws: str
+    ) -> Key:
+        return Key(
+            f"{table}.{leaf}",
+            "number",
+            described,
+            default=default,
+            lowest=lowest,
+            highest=highest,
+            unit=unit,
+            counts_for=(f"{table}.law", laws),
+        )
 
     return (
         Key(f"{table}.law", "choice", "the slew law", default="linear", choices=LAWS),
@@ -148,9 +160,11 @@ def _slew_keys(table: str, volt: str) -> tuple[Key, ...]:
             "constant rate or constant time; by the law if left out",
             choices=TIMINGS,
         ),
-        number("bend", "how strongly log and exp depend on the output", 1.0, 0.01, 10.0, "/V"),
-        number("knee", "how near the target soft begins to slow down", 0.1, 0.001, 2.0, "V"),
-        number("curvature", "the bow of curve; over 0 starts fast, 0 is straight", 0.0, -20.0, 20.0, ""),
+        number("bend", "how strongly log and exp depend on the output", 1.0, 0.01, 10.0, "/V", "log", "exp"),
+        number("knee", "how near the target soft begins to slow down", 0.1, 0.001, 2.0, "V", "soft"),
+        number(
+            "curvature", "the bow of curve; over 0 starts fast, 0 is straight", 0.0, -20.0, 20.0, "", "curve"
+        ),
     )
 
 
@@ -165,7 +179,15 @@ def _stage(leaf: str, described: str) -> Key:
 KEYS: tuple[Key, ...] = (
     Key("title", "text", "what the patch is called; the file's name if left out"),
     Key("oscillator.wave", "choice", "the waveform", default="saw", choices=WAVES),
-    Key("oscillator.width", "number", "the pulse's high part of a cycle", 0.5, lowest=0.05, highest=0.95),
+    Key(
+        "oscillator.width",
+        "number",
+        "the pulse's high part of a cycle",
+        default=0.5,
+        lowest=0.05,
+        highest=0.95,
+        counts_for=("oscillator.wave", ("pulse",)),
+    ),
     _level("oscillator.level_db", "the oscillator's peak level", -12.0),
     Key("oscillator.file", "file", 'the WAV that holds one cycle, for wave = "file"; relative to the preset'),
     *_slew_keys("pitch", "volt"),
@@ -181,7 +203,16 @@ KEYS: tuple[Key, ...] = (
     Key("envelope.shape", "choice", "the form of each stage", default="linear", choices=("linear", "rc")),
     Key("envelope.retrigger", "flag", "start again on an overlapping note", default=False),
     Key("amplifier.law", "choice", "gain by level", default="linear", choices=("linear", "decibel")),
-    Key("amplifier.range_db", "number", "range of decibel", 60.0, lowest=20.0, highest=120.0, unit="dB"),
+    Key(
+        "amplifier.range_db",
+        "number",
+        "range of decibel",
+        default=60.0,
+        lowest=20.0,
+        highest=120.0,
+        unit="dB",
+        counts_for=("amplifier.law", ("decibel",)),
+    ),
     Key(
         "amplifier.velocity_db",
         "number",
@@ -252,9 +283,10 @@ def find_key(name: str) -> Key:
 
 
 def suggested_key(name: str) -> str:
-    """`` (did you mean "pitch.rise"?)`` for a mistyped dotted name, else nothing.
+    """`` (did you mean "pitch.rise"?)`` for a mistyped dotted name.
 
-    A key that exists in the named table comes first, then one of the same name elsewhere.
+    A key that exists in the named table comes first, then one of the same name elsewhere. Where none is near,
+    the keys of the named table are listed; without a table, there is nothing to say.
     """
     table, _, leaf = name.rpartition(".")
     if table in LEAVES and (found := nearest(leaf, LEAVES[table])):
@@ -262,6 +294,8 @@ def suggested_key(name: str) -> str:
     same_leaf = [key.name for key in KEYS if key.leaf == leaf]
     if same_leaf:
         return f' (did you mean "{same_leaf[0]}"?)'
+    if table in LEAVES:
+        return f"; [{shortened(table)}] has {', '.join(LEAVES[table])}"
     return suggestion(name, KEY)
 
 

@@ -26,6 +26,9 @@ _DEEP_KEY = re.compile(
         (?: (?:[\w-]++ | "(?:[^"\\\n]|\\.)*+" | '[^'\n]*+') [ \t]*+ \. [ \t]*+ ){16}"""
 )
 _LONGEST_COMPARED = 64
+_LONGEST_NAME = 200
+BYTE_ORDER_MARK = "\ufeff"
+"""What some editors put before UTF-8 text; it is passed over in reading and kept in writing back."""
 
 
 def printable(text: str) -> str:
@@ -43,6 +46,18 @@ def shortened(text: str, longest: int = LONGEST_SHOWN) -> str:
     """The printable form of a text, cut to ``longest`` characters with an ellipsis at the end."""
     head = printable(text[: longest + 1])
     return head if len(head) <= longest else head[: longest - 1] + "…"
+
+
+def file_name(path: str | os.PathLike[str]) -> str:
+    """A path as messages name it: printable, and without its middle where it is very long."""
+    name = printable(os.fspath(path))
+    half = (_LONGEST_NAME - 1) // 2
+    return name if len(name) <= _LONGEST_NAME else f"{name[:half]}…{name[-half:]}"
+
+
+def counted(number: int, one: str, several: str) -> str:
+    """A number with what it counts: ``"1 track"``, ``"1,200 tracks"``."""
+    return f"{number:,} {one if number == 1 else several}"
 
 
 def shown(value: object) -> str:
@@ -72,14 +87,47 @@ def _shown_fraction(value: Fraction) -> str:
 
 
 def nearest(name: str, choices: Iterable[str]) -> str | None:
-    """The choice that a mistyped name most likely means, or None."""
+    """The choice that a mistyped name most likely means, or None.
+
+    That is one with at most two letters mistyped (one in names of up to four letters), else the only choice
+    that is the name's beginning or begins with it: ``range`` for ``range_db``, ``sawtooth`` for ``saw``.
+    """
     if len(name) > _LONGEST_COMPARED:
         return None
-    from difflib import get_close_matches
+    meant = name.lower()
+    least: tuple[int, str] | None = None
+    begun = []
+    for choice in choices:
+        near = choice.lower()
+        short, long = sorted((len(meant), len(near)))
+        allowed = min(1 if long <= 4 else 2, short - 1)
+        slips = _slips(meant, near) if long - short <= allowed else long
+        if slips <= allowed and (least is None or slips < least[0]):
+            least = (slips, choice)
+        if short >= 3 and (near.startswith(meant) or meant.startswith(near)):
+            begun.append(choice)
+    if least is not None:
+        return least[1]
+    return begun[0] if len(begun) == 1 else None
 
-    lowered = {choice.lower(): choice for choice in choices}
-    found = get_close_matches(name.lower(), list(lowered), n=1, cutoff=0.6)
-    return lowered[found[0]] if found else None
+
+def _slips(first: str, second: str) -> int:
+    """How many letters are left out, added, replaced or swapped with their neighbour between two names.
+
+    The optimal string alignment distance, by the usual table of prefixes (Damerau, "A technique for computer
+    detection and correction of spelling errors", 1964; from memory).
+    """
+    before: list[int] = []
+    last = list(range(len(second) + 1))
+    for i, letter in enumerate(first, 1):
+        row = [i]
+        for j, other in enumerate(second, 1):
+            best = min(last[j] + 1, row[j - 1] + 1, last[j - 1] + (letter != other))
+            if i > 1 and j > 1 and letter == second[j - 2] and first[i - 2] == other:
+                best = min(best, before[j - 2] + 1)
+            row.append(best)
+        before, last = last, row
+    return last[-1]
 
 
 def suggestion(name: str, choices: Iterable[str]) -> str:
@@ -117,18 +165,24 @@ class Mistakes:
             return
         lines = list(self._lines)
         if self._untold:
-            lines.append(f"{self._prefix}and {self._untold:,} more mistakes like these")
+            more = counted(self._untold, "more mistake", "more mistakes")
+            lines.append(f"{self._prefix}and {more} like these")
         raise error(*lines)
 
 
-def read_bytes(path: Path, most_bytes: int, error: Callable[[str], GlidesmithError]) -> bytes:
-    """The content of a regular file of at most ``most_bytes`` bytes.
+def read_bytes(
+    path: Path,
+    most_bytes: int,
+    error: Callable[[str], GlidesmithError],
+    too_long: str = "is it the right file?",
+) -> bytes:
+    """The content of a regular file of at most ``most_bytes`` bytes; ``too_long`` says how to mend a longer.
 
     Folders, devices and pipes are refused before anything is read from them, so nothing here waits for ever.
 
     Raises ``error`` with one line that names the file and says how to mend it.
     """
-    name = printable(str(path))
+    name = file_name(path)
     try:
         data = _regular_bytes(path, most_bytes + 1)
     except _NotRegularError as problem:
@@ -141,7 +195,7 @@ def read_bytes(path: Path, most_bytes: int, error: Callable[[str], GlidesmithErr
     except ValueError:
         raise error(f"{name}: is not a name that a file can have; check it") from None
     if len(data) > most_bytes:
-        raise error(f"{name}: is over {most_bytes:,} bytes, the most that is read; is it the right file?")
+        raise error(f"{name}: is over {most_bytes:,} bytes, the most that is read; {too_long}")
     return data
 
 
@@ -169,15 +223,13 @@ _READ_FLAGS = (
 
 
 def decoded(data: bytes, where: str, error: Callable[[str], GlidesmithError]) -> str:
-    """The bytes of a text file as text; line ends are left as they are.
+    """The bytes of a text file as text; line ends and a byte-order mark of UTF-8 are left as they are.
 
     Raises ``error`` with one line where they are not plain UTF-8.
     """
     prefix = f"{where}: " if where else ""
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
         raise error(f"{prefix}is written in UTF-16; save it as UTF-8")
-    if data.startswith(b"\xef\xbb\xbf"):
-        raise error(f"{prefix}starts with a byte-order mark; save it as UTF-8 without one")
     if b"\0" in data:
         raise error(f"{prefix}holds NUL bytes, so it is not a text file; is it the right file?")
     try:
@@ -194,12 +246,13 @@ def toml_mapping(
     error: Callable[[str], GlidesmithError],
     parse_float: Callable[[str], object] = float,
 ) -> dict[str, Any]:
-    """What a TOML text says, as nested dictionaries.
+    """What a TOML text says, as nested dictionaries; a byte-order mark before it is passed over.
 
     Raises ``error`` with one line where it is not TOML, or nested so deeply that reading it would take for
     ever.
     """
     prefix = f"{where}: " if where else ""
+    text = text.removeprefix(BYTE_ORDER_MARK)
     too_deep = f"{prefix}has tables or arrays nested far too deeply; none needs more than two levels"
     if _DEEP_KEY.search(text):
         raise error(too_deep)
@@ -208,9 +261,43 @@ def toml_mapping(
     except RecursionError:
         raise error(too_deep) from None
     except tomllib.TOMLDecodeError as problem:
-        raise error(f"{prefix}is not valid TOML: {shortened(str(problem), 200)}") from None
+        raise error(f"{prefix}is not valid TOML: {_toml_fault(str(problem))}") from None
     except ValueError:
         raise error(f"{prefix}holds a whole number of thousands of digits; write a sensible one") from None
+
+
+_TOML_MENDING = (
+    ("Cannot declare", "keep one of the two, with the keys of both"),
+    ("Cannot overwrite", "a key or table is there twice; keep one of the two"),
+    ("Cannot mutate", "a table is there twice; keep one of the two, with the keys of both"),
+    ("Duplicate", "keep one of the two"),
+    ("Unclosed array", "close it with ]"),
+    ("Expected ']", "close the name with ], as in [pitch]"),
+    ("string", "close the text with the quote that began it"),
+    ("Expected '\"'", "close the text with the quote that began it"),
+    ('Expected "\'"', "close the text with the quote that began it"),
+    ("Illegal character '\\n'", "close the text with the quote that began it, in the same line"),
+    ("character '", "take this character out"),
+    ("date", 'write text in quotes, as "80 ms", and numbers without units, as 0.08'),
+    ("Invalid value", 'write text in quotes, as "80 ms", and numbers without units, as 0.08'),
+    ("Expected newline", 'write one key = value to a line, with text in quotes, as rise = "80 ms"'),
+)
+"""How to mend what the parser of TOML complains of, by words in its message; the first that fits."""
+
+
+def _toml_fault(message: str) -> str:
+    """The parser's message, and how to mend what it found."""
+    if "Unescaped" in message:
+        mending = "write \\\\ for a backslash, or put the text in single quotes"
+    else:
+        default = "write every line as [table] or key = value"
+        mending = next((how for words, how in _TOML_MENDING if words in message), default)
+    message = _KEY_TUPLE.sub(lambda found: f"[{'.'.join(_QUOTED.findall(found[1]))}]", message)
+    return f"{shortened(message, 200)}; {mending}"
+
+
+_KEY_TUPLE = re.compile(r"\(('(?:[^']|', ')*',?)\)")
+_QUOTED = re.compile(r"'([^']*)'")
 
 
 def edited_toml(text: str, edits: Mapping[str, object]) -> str:
@@ -223,7 +310,8 @@ def edited_toml(text: str, edits: Mapping[str, object]) -> str:
     """
     import tomlkit
 
-    document = tomlkit.parse(text)
+    mark = BYTE_ORDER_MARK if text.startswith(BYTE_ORDER_MARK) else ""
+    document = tomlkit.parse(text.removeprefix(mark))
     for name, value in edits.items():
         table, _, leaf = name.rpartition(".")
         if value is None:
@@ -235,7 +323,7 @@ def edited_toml(text: str, edits: Mapping[str, object]) -> str:
     written = tomlkit.dumps(document)
     if "\r\n" in text and text.count("\r\n") == text.count("\n"):
         written = written.replace("\r\n", "\n").replace("\n", "\r\n")
-    return written
+    return mark + written
 
 
 def _put(holder: Any, leaf: str, value: object) -> None:

@@ -14,18 +14,19 @@ The series of the first four stand in any handbook (Bronshtein and Semendyayev, 
 from memory); the last is the discrete Fourier transform of the cycle.
 """
 
+import io
 import math
 from dataclasses import dataclass
 from functools import lru_cache
 from itertools import pairwise
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
 from glidesmith.errors import SettingError
 from glidesmith.oscillator import FADE_SHARE, HIGHEST_SHARE, LEVEL, LEVELS_PER_OCTAVE
-from glidesmith.text import printable
+from glidesmith.text import counted, file_name, printable, read_bytes
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -46,6 +47,9 @@ _SMALLEST_BITS = 8
 _NO_PARTIAL = 1e-12
 _SILENT = 1e-6
 _WAV_MARKS = (b"RIFF", b"RIFX", b"RF64")
+_MOST_WAV_BYTES = 16_000_000
+_UNKNOWN_SIZE = 0xFFFFFFFF
+_TO_MEND_LENGTH = "cut the recording to a single cycle"
 
 
 @dataclass(frozen=True, eq=False)
@@ -79,8 +83,8 @@ def check_cycle(cycle: "NDArray[np.float64]", where: str = "cycle") -> "NDArray[
     """One cycle with its mean removed and stretched to a peak of 1; SettingError where it is no cycle."""
     if cycle.ndim != 1 or not SHORTEST_CYCLE <= cycle.size <= LONGEST_CYCLE:
         raise SettingError(
-            f"{where}: {'×'.join(map(str, cycle.shape))} samples; one cycle has {SHORTEST_CYCLE} to "
-            f"{LONGEST_CYCLE}: cut the recording to a single cycle"
+            f"{where}: {_length_text(cycle.shape)}; one cycle has {SHORTEST_CYCLE} to "
+            f"{LONGEST_CYCLE:,}: {_TO_MEND_LENGTH}"
         )
     if not np.isfinite(cycle).all():
         raise SettingError(f"{where}: holds a NaN or an infinity; export the cycle again as finite samples")
@@ -98,13 +102,21 @@ def check_cycle(cycle: "NDArray[np.float64]", where: str = "cycle") -> "NDArray[
     return np.asarray(centred / peak, dtype=np.float64)
 
 
-def read_cycle(path: str | Path) -> "NDArray[np.float64]":
+def _length_text(shape: tuple[int, ...]) -> str:
+    if len(shape) == 1:
+        return counted(shape[0], "sample", "samples")
+    return f"{'×'.join(map(str, shape))} samples"
+
+
+def read_cycle(path: str | Path, where: str = "") -> "NDArray[np.float64]":
     """Read one cycle from a WAV file.
 
     Parameters
     ----------
     path : str or Path
         A WAV file of 8 to 65,536 samples; several channels are averaged. Its sample rate has no meaning here.
+    where : str
+        What begins an error's line: the preset that names the file, if one does.
 
     Returns
     -------
@@ -114,44 +126,61 @@ def read_cycle(path: str | Path) -> "NDArray[np.float64]":
     Raises
     ------
     SettingError
-        One line: no such file, no WAV file, too short, too long, silent or not finite.
+        One line: no such file, no WAV file, cut off, too short, too long, silent or not finite.
     """
     import soundfile
 
+    begin = f"{where}: oscillator.file" if where else "oscillator.file"
+
+    def refuse(line: str) -> SettingError:
+        return SettingError(f"{begin}: {line}")
+
     place = Path(path)
-    where = f"oscillator.file {printable(str(place))}"
-    _check_wav(place, where)
+    data = read_bytes(place, _MOST_WAV_BYTES, refuse, _TO_MEND_LENGTH)
+    begin_with_name = f"{begin}: {file_name(place)}"
+    _check_wav(data, begin_with_name)
     try:
-        with soundfile.SoundFile(str(place)) as wav:
+        with soundfile.SoundFile(io.BytesIO(data)) as wav:
             if not SHORTEST_CYCLE <= wav.frames <= LONGEST_CYCLE:
                 raise SettingError(
-                    f"{where}: {wav.frames} samples; one cycle has {SHORTEST_CYCLE} to {LONGEST_CYCLE}: "
-                    "cut the recording to a single cycle"
+                    f"{begin_with_name}: {_length_text((wav.frames,))}; one cycle has {SHORTEST_CYCLE} to "
+                    f"{LONGEST_CYCLE:,}: {_TO_MEND_LENGTH}"
                 )
             samples = wav.read(dtype="float64", always_2d=True)
     except (soundfile.SoundFileError, OSError) as error:
+        reason = printable(str(getattr(error, "error_string", error))).rstrip(".")
         raise SettingError(
-            f"{where}: can't be read as WAV ({printable(str(error))}); export it again as WAV"
+            f"{begin_with_name}: can't be read as WAV ({reason}); export it again as WAV"
         ) from None
     with np.errstate(invalid="ignore", over="ignore"):
         cycle = samples.mean(axis=1)
-    return check_cycle(cycle, where)
+    return check_cycle(cycle, begin_with_name)
 
 
-def _check_wav(path: Path, where: str) -> None:
-    """Refuse what is no WAV file before the library for sound files guesses from the name."""
-    try:
-        if not path.exists():
-            raise SettingError(f"{where}: no such file; give a WAV file that holds one cycle")
-        if not path.is_file():
-            raise SettingError(f"{where}: not a file; give a WAV file that holds one cycle")
-        with path.open("rb") as file:
-            head = file.read(12)
-    except (OSError, ValueError) as error:
-        reason = getattr(error, "strerror", None) or str(error)
-        raise SettingError(f"{where}: {printable(reason)}; give a WAV file that can be read") from None
-    if head[:4] not in _WAV_MARKS or head[8:12] != b"WAVE":
-        raise SettingError(f"{where}: not a WAV file; export the cycle as WAV")
+def _check_wav(data: bytes, where: str) -> None:
+    """Refuse what is no WAV file before the library for sound files guesses, and samples that are cut off.
+
+    A data chunk of 0xFFFFFFFF bytes in a plain WAV goes on to the end of the file: that is what programs
+    write that don't know the length beforehand.
+    """
+    if data[:4] not in _WAV_MARKS or data[8:12] != b"WAVE":
+        raise SettingError(f"{where}: is not a WAV file; export the cycle as WAV")
+    order: Literal["big", "little"] = "big" if data[:4] == b"RIFX" else "little"
+    begin, long_size = 20, _UNKNOWN_SIZE
+    while begin <= len(data):
+        name = data[begin - 8 : begin - 4]
+        size = int.from_bytes(data[begin - 4 : begin], order)
+        if name == b"ds64":  # EBU Tech 3306: the 64-bit sizes of the file and of its data
+            long_size = int.from_bytes(data[begin + 8 : begin + 16], order)
+        if name == b"data":
+            claimed = long_size if size == _UNKNOWN_SIZE else size
+            if claimed != _UNKNOWN_SIZE and claimed > len(data) - begin:
+                raise SettingError(
+                    f"{where}: is cut off: it claims {counted(claimed, 'byte', 'bytes')} of samples and has "
+                    f"{len(data) - begin:,}; copy or export it again"
+                )
+            return
+        begin += size + size % 2 + 8
 
 
 def partials(
