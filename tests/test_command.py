@@ -1,9 +1,12 @@
 """What every command has in common: help, exit status, and errors in one line."""
 
 import errno
+import importlib
+import signal
 import subprocess
 import sys
 
+import click
 import pytest
 
 import glidesmith
@@ -61,13 +64,17 @@ def test_every_command_has_help_with_an_example(name):
     [
         ([], "missing command"),
         (["rendr"], 'no command "rendr" (did you mean "render"?)'),
-        (["frobnicate"], "render, measure, check"),
+        (["frobnicate"], "render, measure, compare, tally, check, completion"),
         (["re\x1b[31mnder"], "\\x1b[31m"),
         (["--verson"], "--version"),
         (["render"], "PRESET"),
         (["render", "a.toml", "--dephth", "16"], "--depth"),
-        (["render", "a.toml", "--rate", "fast"], "fast"),
-        (["render", "a.toml", "--depth", "20"], "24"),
+        (
+            ["render", "a.toml", "--rate", "48k"],
+            "from 8000 to 384000, as 48000; see main render --help",
+        ),
+        (["render", "a.toml", "--depth", "20"], "'16', '24', 'float'; see main render --help"),
+        (["render", "a.toml", "--seed", "1"], "see main render --help"),
         (["measure"], "PRESET"),
         (["check"], "PATH"),
         (["completion", "tcsh"], "bash"),
@@ -122,3 +129,88 @@ def test_a_reader_that_goes_away_is_no_reason_for_a_traceback():
     done = subprocess.run(["bash", "-c", shell], capture_output=True, text=True, check=True, env=ENVIRONMENT)
     assert done.stderr == ""
     assert done.stdout.strip() in ("0", "1")
+
+
+def test_wrong_usage_points_to_the_help_of_the_command():
+    done = process("render", "lead.toml", "--seed", "1")
+    assert done.stderr.endswith(b"; see glidesmith render --help\n")
+
+
+def test_every_command_and_every_public_name_is_there():
+    for name in COMMANDS:
+        assert isinstance(importlib.import_module(f"glidesmith.command.{name}").command, click.Command)
+    for name in glidesmith.__all__:
+        assert getattr(glidesmith, name) is not None
+
+
+def test_the_help_lists_the_commands_in_the_order_in_which_a_user_meets_them():
+    listed = run("--help").stdout.partition("Commands:")[2].splitlines()
+    names = [line.split()[0] for line in listed[1:7]]
+    assert names == ["render", "measure", "compare", "tally", "check", "completion"]
+
+
+@pytest.mark.parametrize("closed", ["<&-", ">&-", "2>&-", "<&- >&- 2>&-"])
+def test_closed_standard_streams_are_no_hindrance(tmp_path, closed):
+    """And none of them is taken for a file that is opened later."""
+    write_preset(tmp_path)
+    shell = f"{sys.executable} -m glidesmith render lead.toml {closed}"
+    done = subprocess.run(
+        ["bash", "-c", shell], cwd=tmp_path, capture_output=True, text=True, env=ENVIRONMENT
+    )
+    assert (done.returncode, done.stderr) == (0, "")
+    assert run("render", tmp_path / "lead.toml", "-o", tmp_path / "again.wav", "--quiet").exit_code == 0
+    assert (tmp_path / "lead.wav").read_bytes() == (tmp_path / "again.wav").read_bytes()
+
+
+def test_audio_for_a_standard_output_that_is_closed_is_refused(tmp_path):
+    write_preset(tmp_path)
+    shell = f"{sys.executable} -m glidesmith render lead.toml -o - >&-"
+    done = subprocess.run(
+        ["bash", "-c", shell], cwd=tmp_path, capture_output=True, text=True, env=ENVIRONMENT
+    )
+    assert done.returncode == 2
+    assert done.stderr.startswith("glidesmith: standard output is closed")
+
+
+@pytest.mark.parametrize("name", ["SIGTERM", "SIGHUP"])
+def test_a_signal_that_ends_a_command_is_told_once_and_what_stood_for_it_comes_back(
+    tmp_path, monkeypatch, name
+):
+    number = getattr(signal, name)
+
+    def stop(*_):
+        try:
+            signal.raise_signal(number)
+        finally:
+            signal.raise_signal(number)  # while cleaning up
+
+    monkeypatch.setattr("glidesmith.preset.load_preset", stop)
+    kept = signal.signal(number, signal.SIG_DFL)
+    try:
+        result = run("measure", write_preset(tmp_path))
+        assert signal.getsignal(number) is signal.SIG_DFL
+    finally:
+        signal.signal(number, kept)
+    assert result.exit_code == 128 + number
+    assert complaint(result) == "glidesmith: interrupted; what was being written is removed"
+
+
+def test_a_signal_that_is_ignored_stays_so(tmp_path, monkeypatch):
+    """As under nohup."""
+    monkeypatch.setattr("glidesmith.preset.load_preset", lambda _: signal.raise_signal(signal.SIGHUP))
+    kept = signal.signal(signal.SIGHUP, signal.SIG_IGN)
+    try:
+        with pytest.raises(AttributeError):  # of what the stand-in returns
+            run("measure", write_preset(tmp_path))
+    finally:
+        signal.signal(signal.SIGHUP, kept)
+
+
+@pytest.mark.parametrize("option", [["--quiet"], []])
+def test_compiled_code_that_can_not_be_kept_is_told_each_time(tmp_path, monkeypatch, option):
+    monkeypatch.setattr("glidesmith.compiled.CACHE_FOLDER", None)
+    line = run("render", write_preset(tmp_path), "-o", tmp_path / "take.wav", *option).stderr
+    assert line.startswith("glidesmith: compiling")
+    assert "GLIDESMITH_CACHE" in line
+    monkeypatch.setattr("glidesmith.compiled.CACHE_FOLDER", str(tmp_path))
+    assert run("render", tmp_path / "lead.toml", "-o", tmp_path / "take.wav", *option).stderr == ""

@@ -1,10 +1,12 @@
 """``glidesmith check`` finds what rendering would refuse, in every file it is pointed at."""
 
+import errno
 import json
 
 import pytest
 
 from commands import PHRASE, PRESET, complaint, run, write_midi, write_preset
+from unprivileged import no_privileges, open_folder
 
 
 @pytest.fixture
@@ -112,3 +114,37 @@ def test_nothing_is_written(here):
     before = sorted(here.rglob("*"))
     run("check", ".")
     assert sorted(here.rglob("*")) == before
+
+
+def test_a_folder_that_can_not_be_read_is_bad():
+    with open_folder() as folder:
+        write_preset(folder)
+        closed = folder / "closed"
+        closed.mkdir()
+        closed.chmod(0)
+        with no_privileges():
+            result = run("check", folder, "--json")
+        closed.chmod(0o755)
+    assert result.exit_code == 1
+    (bad,) = [item for item in json.loads(result.stdout)["checked"] if not item["ok"]]
+    assert (bad["path"], bad["kind"]) == (str(closed), "folder")
+    assert result.stderr.startswith(f"glidesmith: {closed}: can't be read (Permission denied)")
+
+
+def test_what_fails_while_reading_is_told_as_reading_and_stops_nothing(here, monkeypatch):
+    def fail(path):
+        raise OSError(errno.EINVAL, "Invalid argument", str(path))
+
+    monkeypatch.setattr("glidesmith.preset.load_preset", fail)
+    result = run("check", "lead.toml", "line.toml")
+    assert result.stdout == "2 files checked: 1 good, 1 bad\n"
+    assert "lead.toml: can't be read (Invalid argument)" in result.stderr
+
+
+def test_a_preset_is_told_the_same_about_its_phrase_as_in_rendering(here):
+    write_midi(here / "line.mid")
+    (here / "lead.toml").write_text(PRESET + '[phrase]\nfile = "line.mid"\n')
+    result = run("check", "lead.toml")
+    assert result.exit_code == 0
+    assert "ignored in the phrase: 1 controller" in result.stderr
+    assert result.stderr == run("render", "lead.toml").stderr

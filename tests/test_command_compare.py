@@ -182,3 +182,22 @@ def test_only_what_is_needed_is_imported(here):
         [sys.executable, "-c", code, *arguments], capture_output=True, text=True, check=True, env=ENVIRONMENT
     )
     assert done.stdout.splitlines()[-1] == "0 []", done.stderr
+
+
+def test_a_set_never_replaces_what_it_is_made_from(here):
+    """An oscillator file among the WAVs of the set's folder, even with --replace."""
+    (here / "laws").mkdir()
+    (here / "laws" / "01-rc.wav").write_bytes(b"of the test")
+    wave = '[oscillator]\nwave = "file"\nfile = "laws/01-rc.wav"\n'
+    (here / "cycle.toml").write_text(wave + (here / "lead.toml").read_text().partition("\n")[2])
+    result = run("compare", "cycle.toml", "-o", "laws", "--vary", "pitch.law=rc,exp", "--replace")
+    assert result.exit_code == 2
+    assert "is what is rendered from" in complaint(result)
+    assert (here / "laws" / "01-rc.wav").read_bytes() == b"of the test"
+
+
+def test_mistakes_are_in_the_json_too(here):
+    (here / "bad.toml").write_text("nonsense = 1\n")
+    result = run("compare", "bad.toml", "-o", "laws", "--vary", "pitch.law=rc,exp", "--json")
+    assert result.exit_code == 2
+    assert "nonsense" in json.loads(result.stdout)["errors"][0]

@@ -1,6 +1,7 @@
 """``glidesmith measure`` prints what the Python API measures."""
 
 import json
+import shutil
 
 import pytest
 
@@ -61,7 +62,7 @@ def test_a_terminal_that_lacks_a_letter_gets_its_number(here):
 @pytest.mark.parametrize(("name", "start"), [("lead.svg", b"<?xml"), ("lead.PNG", b"\x89PNG")])
 def test_a_plot_is_drawn_when_asked_for(here, name, start):
     result = run("measure", "lead.toml", "--plot", name)
-    assert (result.exit_code, result.stderr) == (0, "")
+    assert (result.exit_code, result.stderr) == (0, f"glidesmith: {name}: drawn\n")
     assert (here / name).read_bytes().startswith(start)
 
 
@@ -82,3 +83,39 @@ def test_what_can_not_be_measured_is_told_in_a_line(here, arguments, words):
     result = run("measure", *arguments)
     assert result.exit_code == 2
     assert words in complaint(result)
+
+
+@pytest.mark.parametrize("plot", ["pre.svg", "line.svg", "link.svg", "cycle.svg", "take.svg"])
+def test_a_plot_never_replaces_what_is_measured(here, plot):
+    """Nor does its part file, nor by way of a link."""
+    (here / "line.svg").write_text((here / "line.toml").read_text())
+    cycle = '[oscillator]\nwave = "file"\nfile = "cycle.svg"\n[phrase]\nfile = "line.svg"\n'
+    write_preset(here, "pre.svg", phrase=None, text=PRESET + cycle)
+    shutil.copy("pre.svg", "take.svg.part")
+    (here / "link.svg").symlink_to("pre.svg")
+    (here / "cycle.svg").write_bytes(b"of the test")
+    before = {path.name: path.read_bytes() for path in here.iterdir()}
+    result = run("measure", "take.svg.part" if plot == "take.svg" else "pre.svg", "--plot", plot)
+    assert result.exit_code == 2
+    assert f"{plot}: is what is rendered from" in complaint(result)
+    assert {path.name: path.read_bytes() for path in here.iterdir()} == before
+
+
+def test_mistakes_are_in_the_json_too(here):
+    (here / "bad.toml").write_text(PRESET.replace("rise", "rize"))
+    result = run("measure", "bad.toml", "--json")
+    assert result.exit_code == 2
+    errors = json.loads(result.stdout)["errors"]
+    assert "rize" in errors[0]
+    assert result.stderr.splitlines() == [f"glidesmith: {line}" for line in errors]
+
+
+def test_a_home_that_can_not_be_written_to_is_nobodys_business(here):
+    """The drawing library would say so; where compiled code can't be kept either, that is told."""
+    places = dict.fromkeys(("HOME", "XDG_CONFIG_HOME", "XDG_CACHE_HOME"), "/proc/none")
+    environment = {name: value for name, value in ENVIRONMENT.items() if name != "MPLCONFIGDIR"}
+    result = process("measure", "lead.toml", "--plot", "lead.svg", env={**environment, **places})
+    assert result.returncode == 0
+    lines = result.stderr.decode().splitlines()
+    assert all("GLIDESMITH_CACHE" in line for line in lines[:-1])
+    assert lines[-1] == "glidesmith: lead.svg: drawn"

@@ -15,6 +15,7 @@ import soundfile
 
 from commands import ENVIRONMENT, PRESET, complaint, long_phrase, process, run, write_midi, write_preset
 from glidesmith import load_phrase, load_preset, render
+from glidesmith.command.progress import Progress, _fitted
 from glidesmith.preset import settings_hash
 from glidesmith.wav import quantise
 from unprivileged import no_privileges, open_folder
@@ -304,6 +305,28 @@ def test_progress_on_a_terminal_is_one_line_that_goes_away(here):
         assert shown.endswith(b" \r")
 
 
+@pytest.mark.parametrize("width", [8, 20, 30, 40, 50, 60, 79, 200])
+@pytest.mark.parametrize("label", ["a", "a-long-name-of-a-preset-it-is"])
+def test_progress_fits_the_terminal(label, width):
+    line = _fitted(label, ":  50 %, 12 s left", 0.5, width)
+    assert len(line) <= width
+    if width > 79:
+        assert line == f"{label}:  50 %, 12 s left [{'=' * 15}{' ' * 15}]"
+    elif width > 26:
+        assert "50 %, 12 s left" in line
+
+
+def test_progress_on_a_narrow_terminal_stays_in_one_row(monkeypatch, capsys):
+    monkeypatch.setattr("glidesmith.command.progress._PATIENCE_S", 0.0)
+    monkeypatch.setattr("glidesmith.command.progress._columns", lambda: 30)
+    monkeypatch.setattr(sys.stderr, "isatty", lambda: True)
+    with Progress("a-long-name-of-a-preset") as progress:
+        progress(1, 2)
+    rows = [row for row in capsys.readouterr().err.split("\r") if row]
+    assert len(rows) == 2
+    assert all(len(row) <= 29 for row in rows)
+
+
 def _read(file):
     """What a terminal still holds; its end is an error on Linux."""
     try:
@@ -335,6 +358,13 @@ def contents(folder):
         (["lead.toml", "--trace", "lead.toml"], "is what is rendered from"),
         (["lead.toml", "--cv", "line.toml"], "is what is rendered from"),
         (["lead.toml", "--phrase", "line.wav", "-o", "line.wav"], "line.wav"),
+        (["lead.toml", "-o", ""], "name is empty"),
+        (["lead.toml", "--trace", ""], "name is empty"),
+        (["lead.toml", "--trace", "-"], "only -o can be -"),
+        (["lead.toml", "--cv", "-"], "only -o can be -"),
+        (["lead.toml", "--cv", "cv.wav", "--cv-full-scale", "nan"], "--cv-full-scale"),
+        (["lead.toml", "--cv", "cv.wav", "--tail", "2 h"], "tail"),
+        (["lead.toml", "--cv", "n" * 300], "too long"),
         (["lead.toml", "--seed", "1"], "--dither"),
         (["lead.toml", "--dither", "--depth", "float"], "float"),
         (["lead.toml", "--cv-full-scale", "5"], "--cv"),
@@ -443,12 +473,13 @@ def test_a_render_killed_on_the_way_leaves_the_old_file_and_the_next_one_works(h
     assert not (here / "take.wav.part").exists()
 
 
-def test_an_interrupted_render_leaves_nothing_of_its_own(here):
+@pytest.mark.parametrize(("name", "status"), [("SIGINT", 130), ("SIGTERM", 143), ("SIGHUP", 129)])
+def test_a_render_that_is_told_to_end_leaves_nothing_of_its_own(here, name, status):
     (here / "take.wav").write_bytes(b"old")
     running = started(here)
-    running.send_signal(signal.SIGINT)
+    running.send_signal(getattr(signal, name))
     _, said = running.communicate()
-    assert running.returncode == 130
-    assert said.split() == ["glidesmith:", "interrupted;", "what", "was", "being", "written", "is", "removed"]
+    assert running.returncode == status
+    assert said.strip() == "glidesmith: interrupted; what was being written is removed"
     assert (here / "take.wav").read_bytes() == b"old"
     assert not (here / "take.wav.part").exists()

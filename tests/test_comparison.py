@@ -511,8 +511,13 @@ def test_what_is_not_the_sets_stays_even_when_it_is_replaced(tmp_path):
 def test_sheets_hidden_files_and_parts_of_a_killed_run_are_no_hindrance(tmp_path):
     (tmp_path / ".hidden").write_text("x")
     (tmp_path / "ann.json").write_text(json.dumps({"kind": "glidesmith listening sheet"}))
-    for name in ("01-gone.wav.part", "index.html.part", "comparison.json.part"):
-        (tmp_path / name).write_text("x")
+    begun = {
+        "01-rc.wav.part": "RIFF....WAVELIST....Glidesmith",
+        "index.html.part": "<!doctype html><title>Glidesmith",
+        "comparison.json.part": '{"kind": "glidesmith comp',
+    }
+    for name, content in begun.items():
+        (tmp_path / name).write_text(content)
     compare(make_preset(), tmp_path, phrase=PHRASE, vary=LAWS)
     assert not list(tmp_path.glob("*.part"))
     assert (tmp_path / "ann.json").exists()

@@ -3,6 +3,7 @@
 import errno
 import gc
 import io
+import json
 import os
 import resource
 import subprocess
@@ -12,7 +13,13 @@ from pathlib import Path
 import pytest
 
 from glidesmith.errors import OutputError
+from glidesmith.page import write_page
 from glidesmith.partfile import PartFile, output_error
+from glidesmith.plot import plot
+from glidesmith.setfolder import KIND
+from glidesmith.trace import TraceWriter
+from glidesmith.wav import WavSink
+from making import make_phrase, make_preset
 from unprivileged import no_privileges, open_folder
 
 
@@ -98,11 +105,117 @@ def test_bytes_can_be_written_again(tmp_path):
     assert (tmp_path / "out.bin").read_bytes() == b"01ab456789!"
 
 
-def test_what_a_killed_writer_left_behind_is_no_hindrance(tmp_path):
-    (tmp_path / "out.bin.part").write_bytes(b"left behind, and longer than what is written")
-    with PartFile(tmp_path / "out.bin") as file:
-        file.write(b"new")
-    assert (tmp_path / "out.bin").read_bytes() == b"new"
+def _sound(path):
+    WavSink(path, 48_000, title="Under test").close()
+
+
+def _trace(path):
+    TraceWriter(path, 48_000).close()
+
+
+def _picture(path):
+    plot(make_preset(), make_phrase(("0", "0.5", 50)), path)
+
+
+def _page(path):
+    """As compare begins it; the facts of a set come first."""
+    facts = {"kind": KIND, "title": "Under test", "candidates": []}
+    write_page(path, facts, [])
+
+
+def _facts(path):
+    path.write_text(json.dumps({"kind": KIND}, indent=1))
+
+
+@pytest.mark.parametrize(
+    ("write", "name"),
+    [
+        (Path.touch, "out.bin"),
+        (_sound, "out.wav"),
+        (_trace, "out.csv"),
+        (_picture, "out.svg"),
+        (_picture, "out.png"),
+        (_page, "index.html"),
+        (_facts, "comparison.json"),
+    ],
+)
+def test_what_a_killed_writer_left_behind_is_no_hindrance(tmp_path, write, name):
+    """Whole here, and cut where a buffer ends; the beginning is what counts."""
+    target = tmp_path / name
+    part = tmp_path / f"{name}.part"
+    write(target)
+    for length in {target.stat().st_size, min(target.stat().st_size, 65_536)}:
+        part.write_bytes(target.read_bytes()[:length])
+        with PartFile(target) as file:
+            file.write(target.read_bytes())
+        assert not part.exists()
+
+
+@pytest.mark.parametrize(
+    "content",
+    [
+        b"my own notes about this take, made with Glidesmith",
+        b"RIFF\x24\0\0\0WAVEfmt of another program",
+        b"{}",
+        b"\0",
+    ],
+)
+def test_a_part_file_that_is_not_ours_is_refused_by_its_name_and_stays(tmp_path, content):
+    part = tmp_path / "out.wav.part"
+    part.write_bytes(content)
+    with pytest.raises(OutputError, match=r"out\.wav\.part .*in the way.*; move") as error:
+        PartFile(tmp_path / "out.wav")
+    refused(error)
+    assert part.read_bytes() == content
+    assert list(tmp_path.iterdir()) == [part]
+
+
+@pytest.mark.parametrize(
+    "make",
+    [
+        lambda part, victim: part.mkdir(),
+        lambda part, victim: part.symlink_to(victim),
+        lambda part, victim: part.symlink_to("missing"),
+        lambda part, victim: os.link(victim, part),
+        lambda part, victim: os.mkfifo(part),
+    ],
+    ids=["folder", "symbolic link", "dangling link", "hard link", "pipe"],
+)
+def test_what_else_may_stand_under_the_part_files_name_is_refused_and_stays(tmp_path, make):
+    """The other name of a hard link is a victim whose content looks like a leftover's."""
+    victim, part = tmp_path / "victim", tmp_path / "out.wav.part"
+    _sound(victim)
+    content = victim.read_bytes()
+    make(part, victim)
+    before = part.lstat()
+    with pytest.raises(OutputError, match=r"out\.wav\.part .*in the way") as error:
+        PartFile(tmp_path / "out.wav")
+    refused(error)
+    assert (part.lstat().st_ino, part.lstat().st_mode) == (before.st_ino, before.st_mode)
+    assert victim.read_bytes() == content
+
+
+def test_anothers_file_is_never_taken_for_a_leftover():
+    with open_folder() as folder:
+        (folder / "out.wav.part").touch()
+        (folder / "out.wav.part").chmod(0o666)
+        folder.chmod(0o777)
+        with no_privileges(), pytest.raises(OutputError, match="in the way") as error:
+            PartFile(folder / "out.wav")
+        refused(error)
+
+
+def test_a_part_file_that_was_taken_away_is_told_and_what_took_its_place_stays(tmp_path):
+    target, part = tmp_path / "out.bin", tmp_path / "out.bin.part"
+    file = PartFile(target)
+    file.write(b"new")
+    part.unlink()
+    part.write_bytes(b"another's")
+    with pytest.raises(OutputError, match="took its part file away") as error:
+        file.close()
+    refused(error)
+    assert part.read_bytes() == b"another's"
+    assert not target.exists()
 
 
 def test_a_second_writer_of_one_target_is_refused_and_the_first_goes_on(tmp_path):

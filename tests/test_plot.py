@@ -1,5 +1,6 @@
 """The picture: that it shows the courses and the facts, that it can be read, and that its file is whole."""
 
+import os
 import subprocess
 import sys
 import xml.etree.ElementTree as ElementTree
@@ -9,7 +10,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from glidesmith import OutputError, SettingError
+from glidesmith import OutputError, SettingError, __version__
 from glidesmith.course import pitch_course
 from glidesmith.measuring import measure
 from glidesmith.plot import PICTURES, _Curves, _draw, plot
@@ -234,3 +235,34 @@ def test_no_window_and_no_drawing_library_before_it_is_needed(tmp_path):
     assert run.returncode == 0, run.stderr
     assert run.stderr == ""
     assert PICTURES == (".svg", ".png")
+
+
+def test_the_librarys_folder_is_named_for_it_alone_and_its_remarks_are_kept_back(tmp_path):
+    """In a process of its own, since the library looks once."""
+    code = f"""
+import logging, os
+from pathlib import Path
+from glidesmith import compiled, plot
+compiled.CACHE_FOLDER = {str(tmp_path / "cache" / "digest")!r}
+Path(compiled.CACHE_FOLDER).mkdir(parents=True)
+level = logging.getLogger("matplotlib").level
+with plot._quiet_library():
+    import matplotlib
+    print(matplotlib.get_configdir())
+    logging.getLogger("matplotlib.font_manager").warning("a remark")
+print("MPLCONFIGDIR" in os.environ, logging.getLogger("matplotlib").level == level)
+"""
+    environment = {name: value for name, value in os.environ.items() if name != "MPLCONFIGDIR"}
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, env=environment)
+    assert done.stderr == ""
+    assert done.stdout.split() == [str(tmp_path / "cache" / "drawing"), "False", "True"]
+
+
+def test_pictures_say_what_made_them_and_name_no_library(tmp_path):
+    plot(make_preset(), PHRASE, tmp_path / "lead.svg")
+    plot(make_preset(), PHRASE, tmp_path / "lead.png")
+    about = (tmp_path / "lead.svg").read_bytes().partition(b"</metadata>")[0]
+    assert f"<dc:title>Glidesmith {__version__}</dc:title>".encode() in about
+    assert b"matplotlib" not in about.lower()
+    head = (tmp_path / "lead.png").read_bytes()[:200]
+    assert f"Software\0Glidesmith {__version__}".encode() in head

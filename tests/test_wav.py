@@ -445,3 +445,18 @@ def test_a_voltage_that_is_not_finite_is_refused(tmp_path):
     with pytest.raises(OutputError, match="not finite"):
         write_cv(tmp_path / "cv.wav", np.array([0.0, np.nan]), np.zeros(2), RATE)
     assert list(tmp_path.iterdir()) == []
+
+
+@pytest.mark.parametrize("full_scale_volts", [5.0, 7.3, 10.0])
+def test_control_voltages_are_rounded_once(tmp_path, full_scale_volts):
+    """Against exact rationals: the code nearest to v / full scale * 2^23."""
+    rng = np.random.default_rng(7)
+    pitch = rng.uniform(-full_scale_volts, full_scale_volts, 2000)
+    gain = rng.uniform(0.0, 1.0, 2000)
+    write_cv(tmp_path / "cv.wav", pitch, gain, 48_000, full_scale_volts)
+    codes = soundfile.read(tmp_path / "cv.wav", dtype="int32")[0] >> 8
+    full = Fraction(full_scale_volts)
+    gain_scale = min(Fraction(10), full) / full
+    top = 2**23 - 1
+    assert codes[:, 0].tolist() == [min(round(Fraction(v) / full * 2**23), top) for v in pitch]
+    assert codes[:, 1].tolist() == [min(round(Fraction(g) * gain_scale * 2**23), top) for g in gain]

@@ -1,9 +1,10 @@
 """Files that appear whole or not at all.
 
 What is written goes to ``NAME.part`` beside the target, is forced to the disk and only then takes the
-target's name, so that a writer that fails or is killed never touches what was there. The part file is locked
-while it is written: two writers of one target can't mix, and one that a killed writer left behind is simply
-written anew.
+target's name, so that a writer that fails or is killed never touches what was there. The part file is always
+a new one, and locked while it is written: two writers of one target can't mix. One that a killed writer left
+behind is removed, if it is empty or begins as what is written here does; anything else under its name is
+refused.
 """
 
 import contextlib
@@ -38,6 +39,13 @@ _WAYS_OUT = {
     errno.ELOOP: "symbolic links go round in a circle; check the path",
 }
 
+_SAFELY = getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_NONBLOCK", 0) | getattr(os, "O_BINARY", 0)
+
+_HEAD_BYTES = 65_536
+_BEGINNINGS = (b"RIFF", b"RF64", b"<?xml", b"\x89PNG", b"<!doctype html>", b"{")
+"""Of audio, pictures, pages and facts; each also names Glidesmith near its beginning."""
+_TRACE_BEGINNING = b"time_s,target_volts,pitch_volts,"
+
 
 def output_error(name: str, problem: OSError) -> OutputError:
     """The line that tells a user why ``name`` can't be written and how to mend it."""
@@ -68,6 +76,7 @@ class PartFile(Outlet):
     """
 
     _part: Path | None = None
+    _part_identity: tuple[int, int] | None = None
     _owned = False
 
     def __init__(self, target: Path | BinaryIO, name: str | None = None) -> None:
@@ -116,6 +125,8 @@ class PartFile(Outlet):
             if self._part is not None:
                 self._verify(check)
                 os.fsync(self._file.fileno())
+                if _identity(self._part) != self._part_identity:
+                    raise self._refused("another process took its part file away; write it again")
                 self._part.replace(self._target)
                 self._part = None
             if self._owned:
@@ -130,7 +141,7 @@ class PartFile(Outlet):
     def abandon(self) -> None:
         """Remove what was begun. Nothing happens after ``close``."""
         with contextlib.suppress(OSError):
-            if self._part is not None:
+            if self._part is not None and _identity(self._part) == self._part_identity:
                 self._part.unlink()
         self._part = None
         if self._owned:
@@ -162,22 +173,44 @@ class PartFile(Outlet):
             os.fchmod(self._file.fileno(), stat.S_IMODE(kind))
 
     def _claim(self, part: Path) -> None:
-        """Open the part file, empty and locked.
+        """Make the part file, and lock it.
 
-        Between opening and locking another writer may have given the file its final name: then once more.
+        Before it is locked another writer may have taken it for a leftover: then once more.
         """
-        flags = os.O_RDWR | os.O_CREAT | getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_BINARY", 0)
         while True:
-            self._file = os.fdopen(os.open(part, flags, 0o666), "w+b")
+            try:
+                descriptor = os.open(part, os.O_RDWR | os.O_CREAT | os.O_EXCL | _SAFELY, 0o666)
+            except FileExistsError:
+                self._clear(part)
+                continue
+            self._file = os.fdopen(descriptor, "w+b")
             self._owned = True
-            if fcntl is not None:
-                _lock(self._file, self.name)
-            facts = os.fstat(self._file.fileno())
+            _lock(self._file, self.name)
+            facts = os.fstat(descriptor)
             if _identity(part) == (facts.st_dev, facts.st_ino):
-                self._part = part
-                self._file.truncate(0)
+                self._part, self._part_identity = part, (facts.st_dev, facts.st_ino)
                 return
             self._file.close()
+
+    def _clear(self, part: Path) -> None:
+        """Remove what a killed writer left under the part file's name; refuse whatever else is there.
+
+        Nothing is written into it. It stays locked until its name is gone.
+        """
+        in_the_way = self._refused(
+            f"{printable(part.name)} beside it is in the way, and is not left over from writing it; "
+            "move that elsewhere first"
+        )
+        with contextlib.suppress(FileNotFoundError):
+            if not _may_be_leftover(part.lstat()):
+                raise in_the_way
+            with os.fdopen(os.open(part, os.O_RDWR | _SAFELY), "rb") as file:
+                _lock(file, self.name)
+                if not _begins_as_ours(file.read(_HEAD_BYTES)):
+                    raise in_the_way
+                facts = os.fstat(file.fileno())
+                if _identity(part) == (facts.st_dev, facts.st_ino):
+                    part.unlink()
 
     def _verify(self, check: Callable[[BinaryIO], None] | None) -> None:
         found = os.fstat(self._file.fileno()).st_size
@@ -208,7 +241,30 @@ def _kind(path: Path) -> int | None:
         return None
 
 
+def _may_be_leftover(facts: os.stat_result) -> bool:
+    """Whether it is a regular file of the user's own that has no other name."""
+    own = not hasattr(os, "geteuid") or facts.st_uid == os.geteuid()
+    return stat.S_ISREG(facts.st_mode) and facts.st_nlink == 1 and own
+
+
+def is_leftover(part: Path) -> bool:
+    """Whether a file under a part file's name is what a killed writer left, and not somebody's own."""
+    with contextlib.suppress(OSError):
+        if _may_be_leftover(part.lstat()):
+            with os.fdopen(os.open(part, os.O_RDONLY | _SAFELY), "rb") as file:
+                return _begins_as_ours(file.read(_HEAD_BYTES))
+    return False
+
+
+def _begins_as_ours(head: bytes) -> bool:
+    """Whether a file's first bytes are those of a file that is written here, or there are none."""
+    named = head.startswith(_BEGINNINGS) and b"glidesmith" in head.lower()
+    return not head or named or head.startswith(_TRACE_BEGINNING)
+
+
 def _lock(file: BinaryIO, name: str) -> None:
+    if fcntl is None:
+        return
     try:
         fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
     except BlockingIOError:

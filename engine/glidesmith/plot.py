@@ -5,14 +5,18 @@ are friendly to colorblind people" (2008); none is needed to read the picture, s
 their dashes and marks in their shape.
 """
 
+import contextlib
+import logging
 import math
 import os
+import sys
 from io import BytesIO
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from glidesmith import __version__, compiled
 from glidesmith.amplifier import amplifier_record, fill_gain
 from glidesmith.course import Course, GlideCourse, gain_courses, heard_octaves, pitch_course
 from glidesmith.errors import SettingError
@@ -23,7 +27,7 @@ from glidesmith.text import printable, shortened, write_whole
 from glidesmith.units import note_name
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Iterator, Sequence
 
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
@@ -75,6 +79,31 @@ def plot(
 
 def _drawn(curves: "_Curves", facts: Facts, kind: str) -> bytes:
     """The file's content. The reader's own settings of the drawing library have no part in it."""
+    with _quiet_library():
+        return _saved(curves, facts, kind)
+
+
+@contextlib.contextmanager
+def _quiet_library() -> "Iterator[None]":
+    """Keep the drawing library's remarks from the user, and its folder beside the compiled code.
+
+    Where there is no such folder, the library looks for one, at worst a temporary one that it removes.
+    """
+    log = logging.getLogger("matplotlib")
+    kept_level = log.level
+    log.setLevel(logging.ERROR)
+    placed = "matplotlib" not in sys.modules and "MPLCONFIGDIR" not in os.environ and compiled.CACHE_FOLDER
+    if placed:
+        os.environ["MPLCONFIGDIR"] = str(Path(placed).parent / "drawing")
+    try:
+        yield
+    finally:
+        log.setLevel(kept_level)
+        if placed:
+            del os.environ["MPLCONFIGDIR"]
+
+
+def _saved(curves: "_Curves", facts: Facts, kind: str) -> bytes:
     import warnings
 
     import matplotlib
@@ -88,7 +117,8 @@ def _drawn(curves: "_Curves", facts: Facts, kind: str) -> bytes:
         warnings.filterwarnings("ignore", "Glyph .* missing from", UserWarning)
         figure = Figure((curves.width, _HEIGHT), layout="constrained", dpi=_DOTS_PER_INCH)
         _draw(figure, curves, facts)
-        about = {"Date": None, "Creator": "Glidesmith"} if kind == "svg" else {"Software": "Glidesmith"}
+        maker = f"Glidesmith {__version__}"
+        about = {"Date": None, "Creator": maker} if kind == "svg" else {"Software": maker}
         figure.savefig(file, format=kind, metadata=about)
     return file.getvalue()
 

@@ -15,7 +15,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from glidesmith.errors import GlidesmithError, OutputError
-from glidesmith.partfile import PartFile, output_error
+from glidesmith.partfile import PartFile, is_leftover, output_error
 from glidesmith.text import printable, read_bytes, shortened, shown
 
 if TYPE_CHECKING:
@@ -148,7 +148,9 @@ class SetFolder:
     def outdated(self, files: Sequence[str]) -> list[Path]:
         """What a finished set of ``files`` leaves over: WAVs of the earlier set, parts of killed runs."""
         old = [earlier.file for earlier in self.earlier.values() if earlier.file not in files]
-        parts = [entry.name for entry in os.scandir(self.path) if _is_part(entry.name)]
+        parts = [
+            entry.name for entry in os.scandir(self.path) if _is_part(entry.name) and is_leftover(Path(entry))
+        ]
         return [self.path / name for name in dict.fromkeys([*old, *parts])]
 
     def left_warnings(self) -> tuple[str, ...]:

@@ -13,7 +13,7 @@ fmt, fact (float only), LIST INFO (title, comment, software), data.
 import struct
 from collections.abc import Callable
 from pathlib import Path
-from typing import BinaryIO, Literal, TypeAlias
+from typing import BinaryIO, Literal, TypeAlias, cast
 
 import numpy as np
 from numpy.typing import NDArray
@@ -259,7 +259,7 @@ class WavSink(Sink):
         self._format = _Format(_checked_rate(sample_rate, channels), channels, depth, title, comment)
         self._limit_bytes = limit_bytes
         self._expected = frames_expected
-        self._held = np.empty((_BLOCK_FRAMES, channels), dtype=np.float32)
+        self._held = np.empty((_BLOCK_FRAMES, channels))
         self._held_frames = 0
         self._file = PartFile(target, name)
         try:
@@ -267,6 +267,10 @@ class WavSink(Sink):
         except BaseException:
             self._file.abandon()
             raise
+
+    def write(self, block: Samples) -> None:
+        """As any sink, or in float64: samples are rounded once, to the file's depth."""
+        super().write(cast("NDArray[np.float32]", block))
 
     def _take(self, block: NDArray[np.float32]) -> None:
         taken = 0
@@ -365,13 +369,13 @@ class CvWriter(Outlet):
     def write(self, pitch_volts: NDArray[np.float64], gain_control: NDArray[np.float64]) -> None:
         """Take the next frames: volts, and the gain control from 0 to 1, each float64 (n,)."""
         frames = np.empty((len(pitch_volts), 2))
-        frames[:, 0] = pitch_volts
-        np.multiply(gain_control, self.full_gain_volts, out=frames[:, 1])
+        np.divide(pitch_volts, self.full_scale_volts, out=frames[:, 0])
+        np.multiply(gain_control, self.full_gain_volts / self.full_scale_volts, out=frames[:, 1])
         size = np.abs(frames)
-        self._beyond += int(np.count_nonzero(size > self.full_scale_volts))
-        self._furthest_volts = max(self._furthest_volts, float(size.max(initial=0.0)))
-        frames /= self.full_scale_volts
-        self._sink.write(np.clip(frames, -1.0, 1.0).astype(np.float32))
+        self._beyond += int(np.count_nonzero(size > 1.0))
+        furthest_volts = float(size.max(initial=0.0)) * self.full_scale_volts
+        self._furthest_volts = max(self._furthest_volts, furthest_volts)
+        self._sink.write(frames)
 
     @property
     def warnings(self) -> tuple[str, ...]:

@@ -2,13 +2,17 @@
 
 Each command is a module of this package with a click command called ``command``, imported when it is asked
 for. Whatever a user can mend is told in one line a mistake on standard error; the exit status is 0 when all
-went well, 1 when some items failed, 2 for bad input or usage and 130 when interrupted.
+went well, 1 when some items failed, 2 for bad input or usage, and 128 and the signal's number when a signal
+ended it: 130 for an interrupt, 143 when told to terminate, 129 when the terminal went away.
 """
 
+import contextlib
 import io
 import os
+import signal
 import sys
-from collections.abc import Sequence
+import threading
+from collections.abc import Iterator, Sequence
 from importlib import import_module
 from typing import Any, NoReturn
 
@@ -45,6 +49,45 @@ def error_lines(problem: Exception) -> tuple[str, ...]:
         name = problem.filename if isinstance(problem.filename, str) else "standard output"
         return output_error(name, problem).lines
     raise problem
+
+
+class _StoppedError(BaseException):
+    """A signal told the command to end."""
+
+
+@contextlib.contextmanager
+def _stoppable() -> Iterator[list[int]]:
+    """While it lasts, the signals to terminate and to hang up raise once, and their number is in the list.
+
+    A signal that is ignored, as under nohup, stays so.
+    """
+    stopped: list[int] = []
+
+    def stop(number: int, _: object) -> None:
+        if not stopped:  # a second one must not keep the first from cleaning up
+            stopped.append(number)
+            raise _StoppedError
+
+    kept = {}
+    if threading.current_thread() is threading.main_thread():
+        for number in (getattr(signal, name, None) for name in ("SIGTERM", "SIGHUP")):
+            if number is not None and signal.getsignal(number) is signal.SIG_DFL:
+                kept[number] = signal.signal(number, stop)
+    try:
+        yield stopped
+    finally:
+        for number, handler in kept.items():
+            signal.signal(number, handler)
+
+
+def _replace_closed_streams() -> None:
+    """Give standard streams that were closed before the start a device that takes everything.
+
+    In this order each gets its own descriptor again, so that no file that is opened later does.
+    """
+    for name, mode in (("stdin", "r"), ("stdout", "w"), ("stderr", "w")):
+        if getattr(sys, name) is None:
+            setattr(sys, name, open(os.devnull, mode, encoding="utf-8"))  # noqa: PTH123, SIM115
 
 
 def _is_mishap(problem: Exception) -> bool:
@@ -103,22 +146,24 @@ class Commands(click.Group):
         options = {"windows_expand_args": windows_expand_args, **extra}
         if not standalone_mode:
             return super().main(args, name, complete_var, standalone_mode=False, **options)
+        _replace_closed_streams()
         if isinstance(sys.stdout, io.TextIOWrapper):
             # A terminal that lacks a letter gets its number.
             sys.stdout.reconfigure(errors="backslashreplace")
-        status = 0
-        try:
-            result = super().main(args, name, complete_var, standalone_mode=False, **options)
-            status = result if isinstance(result, int) else 0
-            if status == 0:
-                sys.stdout.flush()
-        except click.Abort:
-            tell("glidesmith: interrupted; what was being written is removed")
-            status = INTERRUPTED
-        except (GlidesmithError, click.ClickException, OSError, MemoryError) as problem:
-            tell(*(f"glidesmith: {line}" for line in error_lines(problem)))
-            status = 1 if _is_mishap(problem) else BAD_INPUT
-        return _leave(status)
+        status, lines = 0, tuple[str, ...]()
+        with _stoppable() as stopped:
+            try:
+                result = super().main(args, name, complete_var, standalone_mode=False, **options)
+                status = result if isinstance(result, int) else 0
+                if status == 0:
+                    sys.stdout.flush()
+            except (click.Abort, _StoppedError):
+                status, lines = INTERRUPTED, ("interrupted; what was being written is removed",)
+            except (GlidesmithError, click.ClickException, OSError, MemoryError) as problem:
+                status, lines = 1 if _is_mishap(problem) else BAD_INPUT, error_lines(problem)
+        with contextlib.suppress(OSError):  # a terminal that went away takes no words
+            tell(*(f"glidesmith: {line}" for line in lines))
+        return _leave(128 + stopped[0] if stopped else status)
 
 
 def _leave(status: int) -> NoReturn:

@@ -1,7 +1,9 @@
 """``glidesmith check``: whether presets and phrases are fit to render."""
 
+import errno
 import os
-from collections.abc import Iterable, Iterator
+import stat
+from collections.abc import Iterable, Iterator, Mapping
 from pathlib import Path
 from typing import Any, Literal
 
@@ -23,8 +25,9 @@ def command(paths: tuple[Path, ...], as_json: bool) -> int:
     """Check presets and phrases without rendering them.
 
     They are read as strictly as rendering reads them, and so are the phrase and the oscillator file that a
-    preset names. Of each folder among PATH..., every .toml, .mid and .midi file in it and below is checked.
-    Mistakes go to standard error, a line each; the exit status is 1 when a file has any.
+    preset names. Of each folder among PATH..., every .toml, .mid and .midi file in it and below is checked,
+    and a folder that can't be read is bad. Mistakes go to standard error, a line each; the exit status is 1
+    when there are any.
 
     \b
     Example:
@@ -34,7 +37,7 @@ def command(paths: tuple[Path, ...], as_json: bool) -> int:
     found = list(_files(paths))
     if not found:
         raise click.UsageError("there is nothing to check: no .toml, .mid or .midi file in the folders given")
-    checked = [_check(path) for path in found]
+    checked = [_check(path, problem) for path, problem in found]
     bad = sum(not facts["ok"] for facts in checked)
     if as_json:
         click.echo(json_text({"checked": checked, "failed": bad}))
@@ -47,28 +50,52 @@ def _counted(number: int, noun: str) -> str:
     return f"{number:,} {noun}{'' if number == 1 else 's'}"
 
 
-def _files(paths: Iterable[Path]) -> Iterator[Path]:
-    """The files to check: those named, and those in and below the folders named, each once, in order."""
+def _files(paths: Iterable[Path]) -> Iterator[tuple[Path, OSError | None]]:
+    """The files to check: those named, and those in and below the folders named, each once, in order.
+
+    A folder that can't be read is among them, with the reason.
+    """
     seen: set[str] = set()
     for path in paths:
-        if path.is_dir():
-            inside = sorted(p for p in path.rglob("*") if p.suffix.lower() in SUFFIXES and p.is_file())
-        else:
-            inside = [path]
-        for file in inside:
-            identity = os.path.realpath(file)
+        inside = _inside(path) if os.path.isdir(path) else {path: None}  # noqa: PTH112 (never raises)
+        for item in sorted(inside):
+            identity = os.path.realpath(item)
             if identity not in seen:
                 seen.add(identity)
-                yield file
+                yield item, inside[item]
 
 
-def _check(path: Path) -> dict[str, Any]:
-    """The verdict on one file, fit for JSON; its mistakes are told at once."""
-    facts: dict[str, Any] = {"path": str(path), "kind": _kind(path), "ok": True, "errors": [], "warnings": []}
+def _inside(folder: Path) -> Mapping[Path, OSError | None]:
+    """The presets and phrases in a folder and below, and with a reason the folders that can't be read."""
+    unread: list[OSError] = []
+    found: dict[Path, OSError | None] = {}
+    for place, _, names in os.walk(folder, onerror=unread.append):
+        paths = (Path(place, name) for name in names)
+        found |= {path: None for path in paths if path.suffix.lower() in SUFFIXES and _may_be_file(path)}
+    return found | {Path(problem.filename): problem for problem in unread}
+
+
+def _may_be_file(path: Path) -> bool:
+    """Whether it is a regular file, or one of which the system won't say what it is."""
     try:
-        facts["warnings"] = list(_phrase(path) if facts["kind"] == "phrase" else _preset(path))
-    except (GlidesmithError, OSError, MemoryError) as problem:
-        facts |= {"ok": False, "errors": list(error_lines(problem))}
+        return stat.S_ISREG(path.stat().st_mode)
+    except OSError as problem:
+        return problem.errno not in (errno.ENOENT, errno.ELOOP)
+
+
+def _check(path: Path, problem: OSError | None) -> dict[str, Any]:
+    """The verdict on one file, fit for JSON; its mistakes are told at once."""
+    kind = "folder" if problem is not None else _kind(path)
+    facts: dict[str, Any] = {"path": str(path), "kind": kind, "ok": True, "errors": [], "warnings": []}
+    try:
+        if problem is not None:
+            raise problem
+        facts["warnings"] = list(_phrase(path) if kind == "phrase" else _preset(path))
+    except (GlidesmithError, MemoryError) as mistake:
+        facts |= {"ok": False, "errors": list(error_lines(mistake))}
+    except OSError as unread:
+        reason = f"can't be read ({unread.strerror or unread}); check its permissions and the disk"
+        facts |= {"ok": False, "errors": [f"{path}: {reason}"]}
     tell(*(f"glidesmith: {line}" for line in facts["errors"]))
     tell(*(f"glidesmith: {path}: {line}" for line in facts["warnings"]))
     return facts
@@ -105,8 +132,10 @@ def _preset(path: Path) -> tuple[str, ...]:
         if preset.oscillator.file is not None:
             from glidesmith.wavetable import read_cycle
 
-            read_cycle(preset.oscillator.file)
+            read_cycle(preset.oscillator.file, preset.where)
         return ()
     from glidesmith.program import compile_program
 
-    return compile_program(preset, PhraseChoice().load(preset), _RATE).warnings
+    phrase = PhraseChoice().load(preset)
+    warnings = compile_program(preset, phrase, _RATE).warnings
+    return (*preset.unused(), *ignored_lines(phrase), *warnings)

@@ -8,6 +8,8 @@ from glidesmith.command import tell
 from glidesmith.command.options import (
     FilePath,
     PhraseChoice,
+    check_inputs_kept,
+    errors_in_json,
     ignored_lines,
     json_option,
     json_text,
@@ -60,13 +62,16 @@ def command(
 
     if plot is not None and plot.suffix.lower() not in PICTURES:
         raise click.BadParameter(f"{str(plot)!r}: name it .svg or .png", param_hint="--plot")
-    loaded = load_preset(preset)
-    played = PhraseChoice(phrase, track, channel, longest).load(loaded)
-    tell_of_compiling()
-    facts = measure(loaded, played, tolerance_cents=tolerance_cents, sample_rate=rate)
-    tell(*(f"glidesmith: {preset}: {line}" for line in ignored_lines(played)))
-    if plot is not None:
-        from glidesmith.plot import plot as draw
+    with errors_in_json(as_json):
+        loaded = load_preset(preset)
+        played = PhraseChoice(phrase, track, channel, longest).load(loaded)
+        check_inputs_kept((plot,), loaded, phrase)
+        tell_of_compiling()
+        facts = measure(loaded, played, tolerance_cents=tolerance_cents, sample_rate=rate)
+        tell(*(f"glidesmith: {preset}: {line}" for line in ignored_lines(played)))
+        if plot is not None:
+            from glidesmith.plot import plot as draw
 
-        draw(loaded, played, plot, tolerance_cents)
+            draw(loaded, played, plot, tolerance_cents)
+            tell(f"glidesmith: {plot}: drawn")
     click.echo(json_text(facts.as_dict()) if as_json else table(facts))

@@ -1,5 +1,7 @@
 """How far a long job is, on standard error."""
 
+import os
+import shutil
 import sys
 import time
 from types import TracebackType
@@ -9,6 +11,8 @@ import click
 
 _PATIENCE_S = 1.0
 _BAR_CELLS = 30
+_FEWEST_CELLS = 5
+_SHORTEST_LABEL = 8
 
 
 class Progress:
@@ -35,15 +39,15 @@ class Progress:
         self._shown = now
         part = done / total if total else 1.0
         left_s = (now - self._begun) * (1.0 - part) / part if part else 0.0
-        self._draw(f"{self._label}: {100.0 * part:3.0f} %, {left_s:.0f} s left", part)
+        self._draw(f": {100.0 * part:3.0f} %, {left_s:.0f} s left", part)
 
     def _draw(self, text: str, part: float) -> None:
         if not self._in_place:
-            click.echo(text, err=True)
+            click.echo(self._label + text, err=True)
             return
-        cells = round(part * _BAR_CELLS)
-        line = f"{text} [{'=' * cells}{' ' * (_BAR_CELLS - cells)}]"
-        click.echo("\r" + line.ljust(self._drawn), err=True, nl=False)
+        width = _columns() - 1
+        line = _fitted(self._label, text, part, width)
+        click.echo("\r" + line.ljust(min(self._drawn, width)), err=True, nl=False)
         self._drawn = len(line)
 
     def __enter__(self) -> Self:
@@ -56,4 +60,25 @@ class Progress:
         traceback: TracebackType | None,
     ) -> None:
         if self._drawn:
-            click.echo("\r" + " " * self._drawn + "\r", err=True, nl=False)
+            click.echo("\r" + " " * min(self._drawn, _columns() - 1) + "\r", err=True, nl=False)
+
+
+def _columns() -> int:
+    """How wide the terminal is that standard error goes to."""
+    try:
+        columns = os.get_terminal_size(sys.stderr.fileno()).columns
+    except OSError:
+        columns = 0
+    return columns or shutil.get_terminal_size().columns
+
+
+def _fitted(label: str, text: str, part: float, width: int) -> str:
+    """The line within ``width`` characters: as much of the bar, then of the label, as there is room for."""
+    from glidesmith.text import shortened
+
+    cells = min(_BAR_CELLS, width - len(label) - len(text) - 3)
+    if cells >= _FEWEST_CELLS:
+        done = round(part * cells)
+        return f"{label}{text} [{'=' * done}{' ' * (cells - done)}]"
+    room = max(width - len(text), _SHORTEST_LABEL)
+    return f"{shortened(label, room)}{text}"[: max(width, 0)]

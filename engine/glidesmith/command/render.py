@@ -14,8 +14,10 @@ import click
 from glidesmith.command import BAD_INPUT, error_lines, tell
 from glidesmith.command.options import (
     FilePath,
+    FiniteRange,
     PhraseChoice,
     as_time,
+    check_inputs_kept,
     ignored_lines,
     json_option,
     json_text,
@@ -24,11 +26,10 @@ from glidesmith.command.options import (
     tell_of_compiling,
 )
 from glidesmith.command.progress import Progress
-from glidesmith.errors import GlidesmithError, SettingError
+from glidesmith.errors import GlidesmithError
 
 if TYPE_CHECKING:
     from glidesmith.phrase import Phrase
-    from glidesmith.preset import Preset
     from glidesmith.program import Program
     from glidesmith.rendering import Report
     from glidesmith.voice import Traces
@@ -109,7 +110,7 @@ class Job:
 )
 @click.option(
     "--cv-full-scale",
-    type=click.FloatRange(0.0, 20.0, min_open=True),
+    type=FiniteRange(0.0, 20.0, min_open=True),
     metavar="VOLTS",
     help="What your interface puts out for a full-scale sample, 10 by default.",
 )
@@ -220,6 +221,10 @@ def _check_extras(jobs: Sequence[Job], choices: Choices) -> None:
         raise click.UsageError(
             "--trace and --cv take the signals of one preset: render the presets one by one"
         )
+    if STANDARD_OUTPUT in (choices.trace, choices.cv):
+        raise click.UsageError("only -o can be -, standard output: give --trace and --cv the name of a file")
+    if jobs[0].to_standard_output and sys.__stdout__ is None:
+        raise click.UsageError("standard output is closed: pipe it on, or give -o FILE.wav")
     if jobs[0].to_standard_output and sys.stdout.isatty():
         raise click.UsageError("standard output is a terminal: pipe it on, or give -o FILE.wav")
     names = [os.path.realpath(p) for p in (jobs[0].output, choices.trace, choices.cv) if p is not None]
@@ -264,29 +269,13 @@ def _render(job: Job, choices: Choices) -> dict[str, object]:
 
     preset = load_preset(job.preset)
     phrase = choices.phrase.load(preset)
-    _check_inputs_kept(job, choices, preset)
+    check_inputs_kept((job.output, choices.trace, choices.cv), preset, choices.phrase.file)
     digest = settings_hash(preset)
     program = compile_program(preset, phrase, choices.rate, choices.tail_s)
     report, beyond = _play(program, job, choices, f"Settings {digest}")
-    warnings = (*ignored_lines(phrase), *report.warnings, *beyond)
+    warnings = (*preset.unused(), *ignored_lines(phrase), *report.warnings, *beyond)
     tell(*(f"glidesmith: {job.preset}: {line}" for line in warnings))
     return _facts(job, choices, phrase, report, digest, warnings)
-
-
-def _check_inputs_kept(job: Job, choices: Choices, preset: "Preset") -> None:
-    """No output may replace what it is made from."""
-    from glidesmith.text import printable
-
-    sources = (
-        job.preset,
-        choices.phrase.file,
-        preset.oscillator.file,
-        preset.phrase.file if preset.phrase else None,
-    )
-    kept = {os.path.realpath(source) for source in sources if source is not None}
-    for output in (job.output, choices.trace, choices.cv):
-        if output is not None and os.path.realpath(output) in kept:
-            raise SettingError(f"{printable(str(output))}: is what is rendered from; write to another file")
 
 
 def _play(program: "Program", job: Job, choices: Choices, comment: str) -> "tuple[Report, tuple[str, ...]]":
@@ -337,8 +326,7 @@ def _cv_writer(program: "Program", path: Path, choices: Choices, comment: str) -
     """Control voltages keep 24 bits beside 16-bit audio: a step is then 1.2 µV at 10 V."""
     from glidesmith.wav import DC_CAUTION, CvWriter
 
-    tell(f"glidesmith: {path} {DC_CAUTION}")
-    return CvWriter(
+    writer = CvWriter(
         path,
         program.sample_rate,
         choices.cv_full_scale_volts,
@@ -347,6 +335,8 @@ def _cv_writer(program: "Program", path: Path, choices: Choices, comment: str) -
         comment=comment,
         frames_expected=program.length,
     )
+    tell(f"glidesmith: {path} {DC_CAUTION}")
+    return writer
 
 
 def _facts(
