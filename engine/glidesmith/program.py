@@ -227,8 +227,9 @@ def _clip_warnings(preset: "Preset", phrase: "Phrase", changes: "Sequence[PitchC
     volts = note_volts(preset, phrase.notes[first].number)
     low, high = (converted_volts(preset.converter, end)[0] for end in (-100.0, 100.0))
     return (
-        f"converter: clips {counted(len(clipped), 'note', 'notes')} of the phrase to its codes, {low:+g} to {high:+g} V "
-        f"(the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move tuning.zero_volts",
+        f"converter: clips {counted(len(clipped), 'note', 'notes')} of the phrase to its codes, {low:+g} to "
+        f"{high:+g} V (the first is note {first}, {volts:+.3f} V); raise converter.span_volts or move "
+        "tuning.zero_volts",
     )
 
 

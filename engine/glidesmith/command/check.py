@@ -133,7 +133,7 @@ def _preset(path: Path) -> tuple[str, ...]:
             from glidesmith.wavetable import read_cycle
 
             read_cycle(preset.oscillator.file, preset.where)
-        return ()
+        return preset.unused()
     from glidesmith.program import compile_program
 
     phrase = PhraseChoice().load(preset)
