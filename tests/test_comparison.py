@@ -523,6 +523,41 @@ def test_sheets_hidden_files_and_parts_of_a_killed_run_are_no_hindrance(tmp_path
     assert (tmp_path / "ann.json").exists()
 
 
+@pytest.mark.parametrize("name", ["01-rc.wav", "index.html", "comparison.json"])
+def test_a_file_of_somebody_s_own_is_not_overwritten_even_to_replace(tmp_path, name):
+    (tmp_path / name).write_text('{"kind": "x"}')
+    with pytest.raises(OutputError, match="move it elsewhere"):
+        compare(make_preset(), tmp_path, phrase=PHRASE, vary=LAWS, replace=True)
+    assert [p.name for p in tmp_path.iterdir()] == [name]
+    assert (tmp_path / name).read_text() == '{"kind": "x"}'
+
+
+@pytest.mark.parametrize(
+    "change",
+    [
+        lambda facts: facts.pop("loudness"),
+        lambda facts: facts.update(loudness=None),
+        lambda facts: facts["loudness"].update(common_lufs=[1]),
+        lambda facts: facts["candidates"][0].pop("gain_db"),
+        lambda facts: facts["candidates"][0].update(gain_db=[1]),
+        lambda facts: facts["candidates"][0].update(lufs=float("nan")),
+        lambda facts: facts["candidates"][0].update(true_peak_dbtp=1e300),
+        lambda facts: facts["candidates"][0].update(warnings=None),
+        lambda facts: facts["candidates"][0]["rendered"].update(lufs=float("inf")),
+    ],
+)
+def test_figures_that_are_damaged_are_refused_and_can_be_replaced(tmp_path, change):
+    compare(make_preset(), tmp_path, phrase=PHRASE, vary=LAWS)
+    path = tmp_path / "comparison.json"
+    facts = json.loads(path.read_text())
+    change(facts)
+    path.write_text(json.dumps(facts))
+    with pytest.raises(OutputError, match="is damaged"):
+        compare(make_preset(), tmp_path, phrase=PHRASE, vary=LAWS)
+    compare(make_preset(), tmp_path, phrase=PHRASE, vary=LAWS, replace=True)
+    assert json.loads(path.read_text())["loudness"]["common_lufs"] < 0
+
+
 @pytest.mark.parametrize(
     "damage",
     [

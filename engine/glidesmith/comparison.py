@@ -179,7 +179,8 @@ def compare(
     most : int
         How many candidates there may be, 2 to 256.
     replace : bool
-        Write even where the folder holds another set, whose files go, or something else, which stays.
+        Write even where the folder holds another set, whose files go, or something else, which stays;
+        files that belong to no set are never overwritten.
     progress : callable, optional
         Called with the steps done and the steps in all.
 
@@ -206,7 +207,9 @@ def compare(
     heading = plan.heading()
     place = SetFolder(Path(folder))
     _require_inputs_kept(plan, place.path)
-    if not replace:
+    if replace:
+        place.require_names_free({*plan.files, FACTS_FILE, PAGE_FILE})
+    else:
         place.require_free(ground_of(heading), [candidate.digest for candidate in plan.candidates])
     steps = _Steps(progress, 2 * len(plan.candidates))
     takes = _takes(plan)

@@ -9,7 +9,7 @@ import hashlib
 import json
 import os
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -31,6 +31,8 @@ _MOST_FACTS_BYTES = 500_000_000
 _MOST_SHEET_BYTES = 1_000_000
 _OWN_WAV = re.compile(r"[0-9]{2,3}(?:-[a-z0-9.-]*)?\.wav")
 _MOST_NAMED = 3
+_HEAD_BYTES = 200
+_MOST_DECIBELS = 1000.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,6 +77,7 @@ class SetFolder:
         self.facts: Mapping[str, Any] | None = None
         self.earlier: dict[str, Earlier] = {}
         self.problem = ""
+        self._is_damaged_set = False
         self._others: list[str] = []
         self._stamp = _stamp(path / FACTS_FILE)
         try:
@@ -92,6 +95,7 @@ class SetFolder:
                 self.facts, self.earlier = _read_facts(self.path / FACTS_FILE)
             except GlidesmithError as problem:
                 self.problem = str(problem)
+                self._is_damaged_set = KIND.encode() in _read_head(self.path / FACTS_FILE)
         own = {earlier.file for earlier in self.earlier.values()}
         if self.facts is not None:
             own |= {FACTS_FILE, PAGE_FILE}
@@ -122,6 +126,15 @@ class SetFolder:
             count = f"{len(self.earlier)} candidates"
             title = shown(self.facts["title"])
             raise OutputError(f"{self.name}: holds another set ({title}, {count}; {reason}); {way_out}")
+
+    def require_names_free(self, names: Collection[str]) -> None:
+        """Raise OutputError where a file of no set has one of the ``names`` of the set to come."""
+        taken = [name for name in self._others if name in names]
+        if taken and not self._is_damaged_set:
+            raise OutputError(
+                f"{self.name}: {shown(taken[0])} belongs to no comparison set and would be overwritten; move "
+                "it elsewhere, or choose another folder"
+            )
 
     def _other_ground(self, ground: Mapping[str, object]) -> str:
         assert self.facts is not None
@@ -236,10 +249,27 @@ def _read_facts(path: Path) -> tuple[Mapping[str, Any], dict[str, Earlier]]:
     try:
         found = [_earlier(entry) for entry in facts["candidates"]]
         ground_of(facts)
+        _decibels(facts["loudness"]["common_lufs"])
         facts["title"] = shortened(str(facts["title"]))
     except (KeyError, TypeError, ValueError, AttributeError):
         raise OutputError(f"{name}: is damaged (not all that a set has is there)") from None
     return facts, {earlier.settings_sha256: earlier for earlier in found}
+
+
+def _read_head(path: Path) -> bytes:
+    """The first bytes of a file, and none of one that can't be read."""
+    try:
+        with path.open("rb") as file:
+            return file.read(_HEAD_BYTES)
+    except OSError:
+        return b""
+
+
+def _decibels(value: object) -> float:
+    """A level as facts tell it. Raises ValueError for anything else."""
+    if isinstance(value, bool) or not isinstance(value, (int, float)) or not abs(value) <= _MOST_DECIBELS:
+        raise ValueError(value)
+    return float(value)
 
 
 def _earlier(entry: Mapping[str, Any]) -> Earlier:
@@ -248,10 +278,13 @@ def _earlier(entry: Mapping[str, Any]) -> Earlier:
     if not _OWN_WAV.fullmatch(file):
         raise ValueError(file)
     measured = Rendered(
-        float(rendered["lufs"]),
-        float(rendered["true_peak_dbtp"]),
+        _decibels(rendered["lufs"]),
+        _decibels(rendered["true_peak_dbtp"]),
         bool(rendered["gated"]),
         str(rendered["sha256"]),
     )
-    str(entry["label"])
+    for level in ("gain_db", "lufs", "true_peak_dbtp"):
+        _decibels(entry[level])
+    if not all(isinstance(line, str) for line in [entry["label"], *entry["warnings"]]):
+        raise ValueError(entry["label"])
     return Earlier(file, str(entry["settings_sha256"]), str(entry["audio_sha256"]), measured, entry)

@@ -5,7 +5,7 @@ from pathlib import Path
 import click
 
 from glidesmith.command import tell
-from glidesmith.command.options import FilePath, json_option, json_text
+from glidesmith.command.options import FilePath, errors_in_json, json_option, json_text
 
 SOME_FAILED = 1
 
@@ -27,7 +27,8 @@ def command(sheets: tuple[Path, ...], as_json: bool) -> int:
     from glidesmith.blind import tally_sheets, tally_text
     from glidesmith.text import printable
 
-    tally = tally_sheets(sheets)
+    with errors_in_json(as_json):
+        tally = tally_sheets(sheets)
     tell(*(f"glidesmith: {line}" for line in tally.refused))
     if as_json:
         click.echo(json_text(tally.facts))
