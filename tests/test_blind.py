@@ -298,3 +298,28 @@ def test_a_sheet_over_the_limit_is_not_read(tmp_path):
 def test_no_sheets_at_all_are_an_error():
     with pytest.raises(SheetError, match="no listening sheets"):
         tally_sheets([])
+
+
+def test_rounds_that_were_given_up_are_told_beside_their_pair(tmp_path):
+    found = tally_sheets(save(tmp_path, abx(12), abx(1, done=3, made="2026-11-02T10:00:00Z")))
+    (pair,) = found.facts["abx"]["pairs"]
+    assert pair["trials"] == 16
+    assert any("1 round of this pair given up" in line for line in pair["warnings"])
+
+
+def test_far_fewer_right_than_guessing_gives_is_no_plain_nothing(tmp_path):
+    """0 of 16: guessing does as badly with 2^-16 (binomial, by hand)."""
+    verdict = tally_sheets(save(tmp_path, abx(0))).facts["abx"]["pairs"][0]["verdict"]
+    assert "the wrong way round" in verdict
+    assert "1.5e-05" in verdict
+    assert "wrong way" not in tally_sheets(save(tmp_path, abx(8))).facts["abx"]["pairs"][0]["verdict"]
+
+
+@pytest.mark.parametrize(
+    "made", ["2026-11-01T10:00:00+00:00", "2026-11-01T10:00:00.000Z", "2026-11-01T11:00:00+01:00"]
+)
+def test_one_round_whose_time_is_written_otherwise_is_still_one_round(tmp_path, made):
+    once = abx(12, made="2026-11-01T10:00:00Z")
+    found = tally_sheets(save(tmp_path, once, abx(12, made=made, listener=" ADA")))
+    assert found.facts["abx"]["pairs"][0]["trials"] == 16
+    assert "the same round" in found.refused[0]

@@ -54,6 +54,7 @@ REPEATED = (
     "so decide beforehand how many there are"
 )
 NO_PROOF_OF_SAMENESS = "this is no evidence that they sound the same"
+NO_PROOF_OF_EQUAL_LIKING = "this is no evidence that they are liked equally"
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,13 +105,14 @@ def tally_sheets(paths: Sequence[Path]) -> Tally:
     if not sheets:
         raise SheetError(*(refused or ("no listening sheets: give the files that the page saved",)))
     rounds = [sheet for sheet in sheets if isinstance(sheet, AbxSheet) and sheet.finished]
+    given_up = [sheet for sheet in sheets if isinstance(sheet, AbxSheet) and not sheet.finished]
     preferences = [sheet for sheet in sheets if isinstance(sheet, PreferenceSheet) and sheet.finished]
     facts: dict[str, object] = {
         "kind": "glidesmith tally",
         "version": 1,
         "set": sheets[0].set,
         "sheets": len(sheets),
-        "abx": _abx(rounds),
+        "abx": _abx(rounds, given_up),
         "preference": _preference(preferences),
         "unfinished": [_unfinished(sheet) for sheet in sheets if not sheet.finished],
         "refused": list(refused),
@@ -129,8 +131,8 @@ def _names(sheets: Sequence[Sheet]) -> list[str]:
     ]
 
 
-def _abx(sheets: Sequence[AbxSheet]) -> dict[str, object] | None:
-    """Every pair of candidates that was listened to, with its listeners."""
+def _abx(sheets: Sequence[AbxSheet], given_up: Sequence[AbxSheet]) -> dict[str, object] | None:
+    """Every pair of candidates that was listened to, with its listeners and how many rounds were given up."""
     if not sheets:
         return None
     names = _names(sheets)
@@ -140,8 +142,8 @@ def _abx(sheets: Sequence[AbxSheet]) -> dict[str, object] | None:
     pooled = [_score("", (sheet for _, sheet in members)) for members in pairs.values()]
     corrected = holm([score.probability for score in pooled])
     entries = [
-        _abx_pair(members, score, probability)
-        for members, score, probability in zip(pairs.values(), pooled, corrected, strict=True)
+        _abx_pair(members, score, probability, len(pairs), sum(frozenset(s.pair) == pair for s in given_up))
+        for (pair, members), score, probability in zip(pairs.items(), pooled, corrected, strict=True)
     ]
     return {"test": ABX_TEST, "confidence": CONFIDENCE, "pairs": entries}
 
@@ -151,7 +153,10 @@ def _score(name: str, sheets: Iterable[AbxSheet]) -> Score:
     return Score(name, len(rounds), sum(s.correct for s in rounds), sum(s.trials for s in rounds))
 
 
-def _abx_pair(members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected: float) -> dict[str, object]:
+def _abx_pair(
+    members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected: float, tests: int, given_up: int
+) -> dict[str, object]:
+    """One pair, of the ``tests`` that are corrected for; ``given_up`` rounds of it were not finished."""
     first = members[0][1]
     listeners = [
         _score(name, (sheet for member, sheet in members if member == name))
@@ -163,25 +168,37 @@ def _abx_pair(members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected:
     warnings = [DEPENDENT] if len(listeners) > 1 else []
     if any(score.rounds > 1 for score in listeners):
         warnings.append(REPEATED)
+    if given_up:
+        warnings.append(
+            f"{_counted(given_up, 'round')} of this pair given up and not counted; giving up when it goes "
+            "badly makes the rest look better than it is"
+        )
     return {
         "pair": list(first.pair),
         "labels": list(first.labels),
         **total,
         "evidence": corrected < SIGNIFICANCE,
-        "verdict": _abx_verdict(pooled, corrected),
+        "verdict": _abx_verdict(pooled, corrected, tests),
         "listeners": [score.as_dict(value) for score, value in zip(listeners, own, strict=True)],
         "warnings": warnings,
     }
 
 
-def _abx_verdict(score: Score, corrected: float) -> str:
+def _abx_verdict(score: Score, corrected: float, tests: int) -> str:
     if corrected < SIGNIFICANCE:
         return f"evidence that the two can be told apart: {_by_guessing(corrected)}"
-    if critical_correct(score.trials, 1.0 - SIGNIFICANCE) is None:
-        fewest = next(n for n in range(score.trials, 100) if critical_correct(n, 1.0 - SIGNIFICANCE))
+    needed = 1.0 - SIGNIFICANCE / tests
+    if critical_correct(score.trials, needed) is None:
+        fewest = next(n for n in range(score.trials, 1000) if critical_correct(n, needed))
         return (
             f"no evidence, and there could be none: {score.trials} trials are too few to show anything, "
             f"{fewest} are the fewest"
+        )
+    so_few = guessing_probability(score.trials - score.correct, score.trials)
+    if so_few < SIGNIFICANCE:
+        return (
+            f"no evidence that the two can be told apart, but so few correct answers come by guessing with a "
+            f"probability of only {_rounded(so_few)}: were the answers the wrong way round?"
         )
     return f"no evidence that the two can be told apart: {_by_guessing(corrected)}; {NO_PROOF_OF_SAMENESS}"
 
@@ -330,7 +347,7 @@ def _preference_lines(preference: Mapping[str, Any]) -> Iterator[str]:
             chosen.setdefault(row["listener"], []).append(row["preferred"] or "neither")
     yield from (f"  {listener} chose {', '.join(choices)}" for listener, choices in chosen.items())
     if not any(pair["evidence"] for pair in preference["pairs"]):
-        yield f"  no pair shows a preference; {NO_PROOF_OF_SAMENESS}"
+        yield f"  no pair shows a preference; {NO_PROOF_OF_EQUAL_LIKING}"
     yield from (f"  note: {warning}" for warning in preference["warnings"])
 
 

@@ -9,7 +9,7 @@ import json
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from datetime import datetime
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
@@ -285,6 +285,15 @@ def accepted_sheets(paths: Sequence[Path]) -> tuple[list[Sheet], list[SheetError
 
 def _identity(sheet: Sheet) -> object:
     """What two copies of one sheet have in common."""
+    heard: object = None
     if isinstance(sheet, AbxSheet):
-        return (sheet.set, sheet.listener, sheet.made, sheet.pair, sheet.trials, sheet.correct, sheet.seconds)
-    return (sheet.set, sheet.listener, sheet.made, sheet.judgements)
+        heard = (frozenset(sheet.pair), sheet.trials, sheet.correct, sheet.seconds)
+    else:
+        heard = sheet.judgements
+    return (sheet.set, sheet.listener.strip().casefold(), _instant(sheet.made), heard)
+
+
+def _instant(made: str) -> float:
+    """The moment that a date and time names, however it is written; one without a zone counts as UTC."""
+    moment = datetime.fromisoformat(made)
+    return (moment if moment.tzinfo else moment.replace(tzinfo=UTC)).timestamp()
