@@ -710,3 +710,27 @@ def test_pitch_of_presets_with_other_zeros_can_be_laid_over_each_other():
     one, two = make_preset(), make_preset(tuning={"zero_volts": "C2"})
     assert curves(one, PHRASE, 1.0)["target"] == curves(two, PHRASE, 1.0)["target"]
     assert curves(one, PHRASE, 1.0)["target"][0] == [0.0, -0.25]
+
+
+def test_a_candidate_that_was_next_to_inaudible_is_told_beside_its_gain(tmp_path):
+    done = compare(make_preset(), tmp_path, phrase=PHRASE, vary={"gain.rise": [60.0, 0.001]})
+    (line,) = (line for line in done.warnings if "dB quieter" in line)
+    assert done.facts["candidates"][0]["gain_db"] > 30
+    assert done.facts["candidates"][0]["label"] in line
+
+
+def test_a_preset_without_a_title_goes_by_its_file(tmp_path):
+    for name, title in (("nameless", ""), ("named", "With a name")):
+        (tmp_path / f"{name}.toml").write_text(
+            f'title = "{title}"\n[pitch]\nrise = 0.1\nfall = 0.{len(name)}\n[gain]\nrise = 0.01\nfall = 0.1\n'
+        )
+    presets = [load_preset(tmp_path / "nameless.toml"), load_preset(tmp_path / "named.toml")]
+    done = compare(presets, tmp_path / "set", phrase=PHRASE)
+    assert [entry["label"] for entry in done.facts["candidates"]] == ["nameless", "With a name"]
+
+
+def test_what_varies_is_what_is_heard_after_equalising(tmp_path):
+    presets = [make_preset(title="One"), make_preset(title="Other", pitch={"law": "exp", "rise": 0.03})]
+    done = compare(presets, tmp_path, phrase=PHRASE, equal="landing")
+    for entry in done.facts["candidates"]:
+        assert {key: entry["settings"].get(key) for key in entry["varied"]} == entry["varied"]

@@ -290,7 +290,11 @@ def _preset_names(presets: Sequence[Preset]) -> list[str]:
     titles = [printable(preset.title) for preset in presets]
     stems = [printable(preset.path.stem) if preset.path else "" for preset in presets]
     return [
-        title if titles.count(title) == 1 else stem if stem and stems.count(stem) == 1 else str(preset.path)
+        title
+        if title.strip() and titles.count(title) == 1
+        else stem
+        if stem and stems.count(stem) == 1
+        else str(preset.path)
         for preset, title, stem in zip(presets, titles, stems, strict=True)
     ]
 

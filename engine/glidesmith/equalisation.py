@@ -247,7 +247,8 @@ def _rescaled(
             mistakes.add(f"candidate {shown(candidate.label)} can't have an equal {equal.mode}: {problem}")
     if len(times) < len(SIDES):
         return candidate
-    return Candidate(candidate.label, candidate.preset.changed(times), candidate.varied)
+    varied = {key: times.get(key, value) for key, value in candidate.varied.items()}
+    return Candidate(candidate.label, candidate.preset.changed(times), varied)
 
 
 def _scaled_time(preset: "Preset", side: str, factor: float) -> float:

@@ -34,6 +34,7 @@ CEILING_DBTP = -1.0
 
 _HEADROOM_DB = 0.01
 _CLOSE_LU = 0.005
+_LARGE_GAIN_DB = 30.0
 _MOST_PASSES = 6
 _FAINT = 0.01
 _NO_RENDER = Rendered(-math.inf, -math.inf, True, "")
@@ -205,6 +206,13 @@ def warnings_of(takes: Sequence[Take]) -> Iterator[str]:
             whose.setdefault(line, []).append(take.label)
     for line, labels in whose.items():
         yield line if len(labels) == len(takes) else f"{_listed(labels)}: {line}"
+    for take in takes:
+        if abs(take.gain_db) > _LARGE_GAIN_DB:
+            how = "quieter" if take.gain_db > 0 else "louder"
+            yield (
+                f"{shown(shortened(take.label))}: was {abs(take.gain_db):.0f} dB {how} as rendered than "
+                "here; look at its envelope and its gain slew"
+            )
     for labels in same.values():
         if len(labels) > 1:
             yield (
