@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 CYCLE = 1 << 62
 HIGHEST_SHARE = 0.45
-LEVELS_PER_OCTAVE = 6
+LEVELS_PER_OCTAVE, COARSE_FROM, COARSE_STEP = 48, 336, 4
 FRAME_S, HOP_S = 0.040, 0.004
 BAND_HZ = (20.0, 15_000.0)
 _KAISER_BETA = 20.0
@@ -93,16 +93,24 @@ def sum_of_sines(
 def level_gain(heights: Floats) -> Callable[[int], Floats]:
     """The gain of partial k where the fundamental lies at the given heights.
 
-    The engine's documented law, written from the partial's side: a level is a sixth of an octave; partial k
-    is in every level that keeps it under height 0 throughout. Over the top third of the first such level
-    (nearest height 0) it fades as 3t² - 2t³; below it is there in full, above not at all.
+    The engine's documented law, written from the partial's side. At whole depths of the fundamental, in 48ths
+    of an octave under 0.45 of the rate, partial k has the gain 1 - (6x³ - x¹⁸)/5, where x goes from 0 to 1 as
+    the partial itself goes from 18 of them to 1 under 0.45 of the rate. Deeper than seven octaves that holds
+    at every fourth depth, and the partial goes from 15 to 4. Straight lines join these gains.
     """
-    depth = -heights * LEVELS_PER_OCTAVE
+    depth = np.maximum(-heights * LEVELS_PER_OCTAVE, 0.0)
+    step = np.where(depth < COARSE_FROM, 1.0, COARSE_STEP)
+    above = np.floor(depth / step) * step
+
+    def at(k: int, whole_depth: Floats) -> Floats:
+        fine = whole_depth <= COARSE_FROM
+        own_depth = whole_depth - LEVELS_PER_OCTAVE * np.log2(k)
+        x = np.clip(np.where(fine, (18.0 - own_depth) / 17.0, (15.0 - own_depth) / 11.0), 0.0, 1.0)
+        return np.asarray(1.0 - (6.0 * x**3 - x**18) / 5.0)
 
     def gain(k: int) -> Floats:
-        first = np.ceil(LEVELS_PER_OCTAVE * np.log2(k) - 1e-6)
-        t: Floats = np.clip((depth - first) * 3.0, 0.0, 1.0)
-        return t * t * (3.0 - 2.0 * t)
+        upper, lower = at(k, above), at(k, above + step)
+        return upper + (depth - above) / step * (lower - upper)
 
     return gain
 
@@ -176,13 +184,12 @@ def eased_glide(
     )
 
 
-def audible_partials(glide: Glide, series: Series) -> Floats:
-    """The tone's partials at constant amplitude under 17.2 kHz (18.7 at a rate of 48 kHz, 20 at 96).
+def audible_partials(glide: Glide, series: Series, edge_share: float = 0.97) -> Floats:
+    """The tone's partials at constant amplitude, up to 0.97 of where the engine's end (19.2 kHz at 44.1 kHz).
 
-    Above it they may fade as they like. Here they go in 12 ms, so that the meter itself adds nothing under
-    15 kHz.
+    There they go in 12 ms, so that the meter itself adds nothing under 15 kHz.
     """
-    edge = min(20_000.0, 0.866 * HIGHEST_SHARE * glide.sample_rate)
+    edge = edge_share * HIGHEST_SHARE * glide.sample_rate
     count = int(edge / glide.frequency_hz.min())
     half = round(0.006 * glide.sample_rate)
     shape = np.hanning(2 * half + 3)[1:-1] ** 2
@@ -197,7 +204,7 @@ def audible_partials(glide: Glide, series: Series) -> Floats:
 
 
 def every_partial(glide: Glide, series: Series) -> Floats:
-    """The tone with the engine's documented fades: all that is to be heard, up to 0.45 of the rate."""
+    """The tone with the engine's documented gains: all that is to be heard, up to 0.45 of the rate."""
     count = int(HIGHEST_SHARE * glide.sample_rate / glide.frequency_hz.min()) + 1
     return sum_of_sines(glide.phases, (series[0][:count], series[1][:count]), level_gain(glide.heights))
 
@@ -209,26 +216,28 @@ def _frames(signal: Floats, sample_rate: int) -> Floats:
 
 
 def leftover_db(signal: NDArray[np.floating], tone: Floats, sample_rate: int) -> float:
-    """What is left without the tone, from 20 Hz to 15 kHz, against the tone, in the worst 40 ms frame.
+    """What is left without the tone, from 20 Hz to 15 kHz, against the signal, in the worst 40 ms frame.
 
     Frames every 4 ms, under a Kaiser window whose side lobes lie under -150 dB.
     """
-    rest = _frames(np.asarray(signal, dtype=np.float64) - tone, sample_rate)
+    signal = np.asarray(signal, dtype=np.float64)
+    rest = _frames(signal - tone, sample_rate)
     size = 1 << (rest.shape[1] - 1).bit_length()
     power = np.abs(np.fft.rfft(rest, size)) ** 2
     frequency = np.fft.rfftfreq(size, 1.0 / sample_rate)
     inside = (frequency >= BAND_HZ[0]) & (frequency <= BAND_HZ[1])
     found = 2.0 * power[:, inside].sum(axis=1) / size
-    whole = (_frames(tone, sample_rate) ** 2).sum(axis=1)
+    whole = (_frames(signal, sample_rate) ** 2).sum(axis=1)
     return float(10.0 * np.log10((found / whole).max() + 1e-30))
 
 
 def inharmonic_db(signal: NDArray[np.floating], glide: Glide, series: Series) -> float:
-    """The meter: energy that belongs to no harmonic, 20 Hz to 15 kHz, against the tone, worst 40 ms frame.
+    """The meter: energy that belongs to no harmonic, 20 Hz to 15 kHz, against the signal, worst 40 ms frame.
 
-    Every partial is subtracted at its exact phase and its constant amplitude from the Fourier series, so that
-    a harmonic of the wrong level counts too. Meant for `eased_glide`: at a corner, a partial over 17 kHz that
-    is just then fading has sidebands far below 15 kHz (-78 dB of a pulse 0.05 wide at 44.1 kHz), which
-    are not aliases. Glides with corners are read as `leftover_db` of `every_partial`.
+    Every partial is subtracted at its exact phase and its constant amplitude from the Fourier series, so
+    that a harmonic of the wrong level counts too, and so do the sidebands of a partial that the engine
+    fades. Where a glide starts or stops suddenly, the partials that the meter leaves out (see
+    `audible_partials`) add sidebands of their own frequency's corner: `test_meter_has_a_floor_far_below`
+    says how little.
     """
     return leftover_db(signal, audible_partials(glide, series), glide.sample_rate)

@@ -15,16 +15,21 @@ from numpy.typing import NDArray
 import oracle
 from conftest import LONG
 from glidesmith.errors import SettingError
-from glidesmith.oscillator import FADE_SHARE, HIGHEST_SHARE, LEVELS_PER_OCTAVE, oscillate
+from glidesmith.oscillator import HIGHEST_SHARE, LEVELS_PER_OCTAVE, oscillate
 from glidesmith.wavetable import (
+    COARSE_FADE,
+    COARSE_STEP,
+    FADE,
+    FINE_LEVELS,
     IMAGES_DB,
     MOST_PARTIALS,
     _fill_table,
     build_wavetables,
     check_cycle,
-    level_partials,
+    partial_gain,
     partials,
     read_cycle,
+    table_gains,
 )
 
 WAVES = [
@@ -101,18 +106,42 @@ def test_level_and_mean_of_a_cycle_do_not_matter(length: int) -> None:
     )
 
 
-def test_no_level_holds_a_partial_over_height_0() -> None:
-    """At a level's upper border, m sixths of an octave down, its partials fit and one more would not."""
-    for level in range(85):
-        border = 2.0 ** (-level / LEVELS_PER_OCTAVE)
-        assert level_partials(level) * border <= 1.0 + 1e-9
-        assert (level_partials(level) + 1) * border > 1.0
-    assert level_partials(84) == MOST_PARTIALS
+def test_partial_gain_falls_softly() -> None:
+    """1 from 18 48ths of an octave down, 0 from one up, falling between, its slope without a step. At 16, 17
+    and 18 kHz (at 44.1 kHz) the slope over a hertz has grown as the distance from 15 kHz to a power near 2.
+    """
+    hertz = np.linspace(12_000.0, 20_000.0, 80_001)
+    gains = partial_gain(LEVELS_PER_OCTAVE * np.log2(HIGHEST_SHARE * 44_100 / hertz))
+    assert np.all(gains[hertz <= 15_302.0] == 1.0)
+    assert np.all(gains[hertz >= 19_561.0] == 0.0)
+    slopes = -np.diff(gains) / 0.1
+    assert slopes.min() >= 0.0
+    assert np.abs(np.diff(slopes)).max() < 1e-6
+    distance = np.array([1.0, 2.0, 3.0])
+    found = np.interp(15_000.0 + 1000.0 * distance, hertz[1:], slopes)
+    power = np.diff(np.log(found)) / np.diff(np.log(distance))
+    assert np.all((power > 1.5) & (power < 2.5)), power
+
+
+def test_no_table_holds_a_partial_over_the_table_above() -> None:
+    """A table's partials lie under 0.45 of the rate even for a fundamental as high as the table above is for,
+    and one more would not; each has the gain of its own depth.
+    """
+    for depth in range(1, 673):
+        step, fade = (1, FADE) if depth <= FINE_LEVELS else (COARSE_STEP, COARSE_FADE)
+        gains, above = table_gains(depth), 2.0 ** ((step - depth) / LEVELS_PER_OCTAVE)
+        assert gains.size * above < 1.0
+        assert (gains.size + 1) * above >= 1.0 - 1e-9
+        for k in {1, 2, gains.size // 2, gains.size} & set(range(1, gains.size + 1)):
+            wanted = partial_gain(np.array([depth - LEVELS_PER_OCTAVE * math.log2(k)]), fade)
+            assert gains[k - 1] == pytest.approx(wanted[0], abs=1e-12)
+    assert table_gains(0).size == 0
+    assert table_gains(672).size < MOST_PARTIALS
 
 
 @pytest.mark.parametrize(("wave", "width"), [*WAVES, ("file", 0.5)])
 def test_every_table_is_its_partial_sum(wave: str, width: float) -> None:
-    """Each level, read at 2,003 phases, against the sum of its partials.
+    """Each table, read at its depth at 2,003 phases, against the sum of its partials.
 
     RMS within the images' bound, and 1e-7 for float32's rounding. The images are the variance 1/630 - 1/900
     of the interpolation's error; with its mean, which changes the partials' levels, it is 1/630: √(10/3) =
@@ -121,13 +150,14 @@ def test_every_table_is_its_partial_sum(wave: str, width: float) -> None:
     cycle = seeded_cycle(600) if wave == "file" else None
     tables = build_wavetables(wave, width, cycle, 60.0, 48_000)
     phases = ((np.arange(2003) + 0.37) / 2003 * oracle.CYCLE).astype(np.int64)
-    series = oracle.fourier_series(wave, width, 400) if cycle is None else oracle.cycle_series(cycle, 400)
+    series = oracle.fourier_series(wave, width, 512) if cycle is None else oracle.cycle_series(cycle, 512)
     out = np.empty(phases.size, np.float32)
-    for level in range(tables.lowest_level + 1):
-        heights = np.full(phases.size, -(level + 0.7) / LEVELS_PER_OCTAVE)
+    for depth in [*range(0, FINE_LEVELS, 7), *range(FINE_LEVELS, tables.lowest_level + 1, COARSE_STEP)]:
+        heights = np.full(phases.size, -depth / LEVELS_PER_OCTAVE)
         oscillate(phases, heights, tables.levels, tables.cells, out)
-        count = level_partials(level)
-        wanted = oracle.sum_of_sines(phases, (series[0][:count], series[1][:count]))
+        gains = table_gains(depth)
+        sounding = (gains * series[0][: gains.size], gains * series[1][: gains.size])
+        wanted = oracle.sum_of_sines(phases, sounding)
         error = math.sqrt(np.mean((out - wanted) ** 2))
         assert error <= 2.0 * 10.0 ** (IMAGES_DB / 20.0) * math.sqrt(np.mean(wanted**2)) + 1e-7
 
@@ -135,7 +165,7 @@ def test_every_table_is_its_partial_sum(wave: str, width: float) -> None:
 def test_cells_join() -> None:
     """A cell ends with the value and slope that the next begins with, to float32's rounding."""
     tables = build_wavetables("saw", 0.5, None, 100.0, 48_000)
-    level = tables.levels[31]
+    level = tables.levels[260]
     cubics = tables.cells.view(np.float32).reshape(-1, 4).astype(np.float64)
     table = cubics[level["start"] : level["start"] + (1 << (62 - level["shift"]))]
     following = np.roll(table, -1, axis=0)
@@ -144,37 +174,48 @@ def test_cells_join() -> None:
     np.testing.assert_allclose(table @ [0.0, 1.0, 2.0, 3.0], following[:, 1], atol=2e-6 * scale)
 
 
-def test_levels_without_a_partial_of_their_own_share_a_table() -> None:
-    """A sine needs one table, a square wave one for every odd partial; levels that share one never fade."""
-    sine = build_wavetables("sine", 0.5, None, 40.0, 48_000)
-    assert sine.cells.size == 2 * (1 + 256)
-    assert set(sine.levels["start"][1:]) == {1}
-    np.testing.assert_array_equal(sine.levels["plain_from"][1:], FADE_SHARE)
-    np.testing.assert_array_equal(sine.levels["plain_to"][1:], math.inf)
-    square = build_wavetables("pulse", 0.5, None, 40.0, 48_000)
-    for level in range(1, square.lowest_level + 1):
-        odd = {(level_partials(m) + 1) // 2 for m in (level - 1, level)}
-        shared = square.levels["start"][level] == square.levels["start"][level + 1]
-        assert shared == (len(odd) == 1)
-
-
-def test_levels_are_described_without_gaps() -> None:
-    """Each level's plain part ends where the next level below begins, and begins after its fade or where it
-    began above.
+def test_depths_that_sound_alike_share_a_table() -> None:
+    """A sine needs a table for each of its gains, and below them one that is read alone. A square wave's is
+    read alone where no odd partial's gain differs from one depth to the next.
     """
-    rows = build_wavetables("saw", 0.5, None, 40.0, 48_000).levels
-    assert tuple(rows[0]) == (-math.inf, 0.0, 0, 62, 0, 62)
+    sine = build_wavetables("sine", 0.5, None, 40.0, 48_000)
+    begin, end = FADE
+    assert sine.cells.size == 2 * (1 + (begin - end) * 256)
+    below = sine.levels[begin + 1 :]
+    for name in ("start", "upper_start"):
+        assert set(below[name]) == {1 + (begin - end - 1) * 256}
+    assert set(below["from_depth"]) == {begin}
+    assert set(below["to_depth"]) == {math.inf}
+    square = build_wavetables("pulse", 0.5, None, 40.0, 48_000)
+    for level in range(FINE_LEVELS):
+        odd, before = table_gains(level + 1)[::2], table_gains(level)[::2]
+        alike = odd.size == before.size and np.array_equal(odd, before)
+        row = square.levels[level + 1]
+        assert (row["start"] == row["upper_start"]) == alike
+
+
+@pytest.mark.parametrize(("wave", "width"), WAVES)
+def test_levels_are_described_without_gaps(wave: str, width: float) -> None:
+    """One level's lower table is the next one's upper; over the depths that two tables serve, one level and
+    below the fine ones four, the weight goes from 1 to 0.
+    """
+    rows = build_wavetables(wave, width, None, 40.0, 48_000).levels
+    same = [name for name in rows.dtype.names or () if name not in ("zero_depth", "slope")]
+    assert rows[0].tolist() == (-math.inf, rows[0]["to_depth"], 0.0, 0.0, 0, 62, 0, 62)
     for above, row in pairwise(rows):
-        same = above["start"] == row["start"]
-        assert row["upper_start"] == above["start"]
-        assert row["upper_shift"] == above["shift"]
-        assert above["plain_to"] == (row["plain_to"] if same else math.floor(row["plain_from"]))
-        assert (
-            row["plain_from"] == above["plain_from"]
-            if same
-            else row["plain_from"] % 1.0 == pytest.approx(1 / 3)
-        )
-    assert rows[-1]["plain_to"] == math.inf
+        if above["to_depth"] == row["from_depth"]:
+            assert above["start"] == row["upper_start"]
+            assert above["shift"] == row["upper_shift"]
+        else:
+            assert all(above[name] == row[name] for name in same)
+    for level, row in enumerate(rows[1:]):
+        assert row["from_depth"] <= level < row["to_depth"]
+        if row["start"] != row["upper_start"]:
+            step = 1 if level < FINE_LEVELS else COARSE_STEP
+            assert row["to_depth"] - row["from_depth"] == step
+            assert row["to_depth"] == row["zero_depth"]
+            assert row["slope"] == 1.0 / step
+    assert rows[-1]["to_depth"] == math.inf
 
 
 def test_tables_do_not_depend_on_range_or_rate() -> None:
@@ -183,8 +224,7 @@ def test_tables_do_not_depend_on_range_or_rate() -> None:
     large = build_wavetables("pulse", 0.3, None, 30.0, 96_000)
     assert small.lowest_level < large.lowest_level
     np.testing.assert_array_equal(small.cells, large.cells[: small.cells.size])
-    for name in ("start", "shift", "upper_start", "upper_shift", "plain_from"):
-        np.testing.assert_array_equal(small.levels[name], large.levels[name][: small.levels.size])
+    np.testing.assert_array_equal(small.levels[:-1], large.levels[: small.levels.size - 1])
 
 
 @pytest.mark.parametrize("lowest_hz", [8.0, 8.1759, 39.9, 40.0, 1000.0, 30_000.0])
@@ -196,13 +236,13 @@ def test_levels_reach_the_lowest_frequency(lowest_hz: float, sample_rate: float)
     tables = build_wavetables("sine", 0.5, None, lowest_hz, sample_rate)
     depth = LEVELS_PER_OCTAVE * math.log2(HIGHEST_SHARE * sample_rate / lowest_hz)
     assert tables.lowest_level >= math.floor(depth)
-    assert tables.lowest_level <= max(depth, 0.0) + 4.0
+    assert tables.lowest_level <= max(depth, 0.0) + 25.0
     assert tables.levels.size == tables.lowest_level + 2
 
 
 def test_lowest_level_is_bounded() -> None:
     """Under 8 Hz at 192 kHz nothing more is built: at most 16,384 partials."""
-    assert build_wavetables("sine", 0.5, None, 1e-6, 384_000).lowest_level == 84
+    assert build_wavetables("sine", 0.5, None, 1e-6, 384_000).lowest_level == 672
 
 
 def test_tables_are_kept() -> None:
@@ -216,7 +256,7 @@ def test_tables_are_kept() -> None:
 
 
 def test_tables_hold_no_negative_zero() -> None:
-    """-0 would make a table read alone differ in one bit from the same table under a fade of weight 0."""
+    """-0 would make a table read alone differ in one bit from the same table blended with itself."""
     for wave in ("sine", "triangle", "saw", "pulse"):
         values = build_wavetables(wave, 0.5, None, 200.0, 48_000).cells.view(np.float32)[0::4]
         assert not np.any((values == 0.0) & np.signbit(values))

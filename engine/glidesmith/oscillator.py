@@ -6,11 +6,13 @@ momentary frequency alone; it has no memory, and so every sample comes out the s
 in blocks.
 
 The frequency is told as a *height*: octaves above 0.45 of the sample rate, where the last partial has to be
-gone (see `HIGHEST_SHARE`). Going down from there every octave holds `LEVELS_PER_OCTAVE` levels, and each
-level has a table that holds no partial which could lie above height 0. Near its upper border a level fades
-into the table of the next one, so that the partial which the next level does without goes softly; everywhere
-else one table is read. A table is read by cubic interpolation. `glidesmith.wavetable` fills the tables; this
-module says how they lie in memory.
+gone (see `HIGHEST_SHARE`). *Depth* is the height turned round and counted in levels, `LEVELS_PER_OCTAVE` to
+the octave. Tables stand at whole depths. Each holds the partials as loud as they should be for a fundamental
+just there: a partial's gain depends on its own frequency alone and falls softly to 0 over the last third of
+an octave (see `glidesmith.wavetable.partial_gain`). Between two tables a sample is their blend, linear in
+depth. So no partial is ever switched, and where a glide starts or stops suddenly, what corner there is in a
+partial's gain is as small as can be. A table is read by cubic interpolation. `glidesmith.wavetable` fills
+the tables; this module says how they lie in memory.
 """
 
 from typing import TYPE_CHECKING, Any
@@ -30,16 +32,15 @@ CYCLE = 1 << 62
 HIGHEST_SHARE = 0.45
 """Height 0 as a share of the sample rate: no partial sounds above it."""
 
-LEVELS_PER_OCTAVE = 6
-"""So many that with `FADE_SHARE` no partial under 17 kHz is ever faded at 44.1 kHz."""
-
-FADE_SHARE = 1.0 / 3.0
-"""The share of a level, at its upper border, in which it fades into the next one."""
+LEVELS_PER_OCTAVE = 48
+"""So many that the corners between the straight pieces of a partial's gain stay under -95 dB of the tone."""
 
 LEVEL = np.dtype(
     [
-        ("plain_from", np.float64),
-        ("plain_to", np.float64),
+        ("from_depth", np.float64),
+        ("to_depth", np.float64),
+        ("zero_depth", np.float64),
+        ("slope", np.float64),
         ("start", np.int32),
         ("shift", np.int32),
         ("upper_start", np.int32),
@@ -47,21 +48,21 @@ LEVEL = np.dtype(
     ],
     align=True,
 )
-"""One level. *Depth* is the height turned round and counted in levels: level m serves depths from m to m + 1.
+"""One level: the depths from m to m + 1, and the two tables that are blended there.
 
-``plain_from``, ``plain_to``: the depths around this level over which its table alone is read. ``start``: the
-table's first cell. ``shift``: the phase's bits below the cell number, 62 - log2 of the table's size.
-``upper_…``: the same of the table it fades into. A level's place in the array is its number + 1; the first
-record is silence.
+``from_depth``, ``to_depth``: the depths around this level that the same two tables serve. ``zero_depth``,
+``slope``: the upper table's weight is (``zero_depth`` - depth) · ``slope``, held between 0 and 1. ``start``:
+the lower table's first cell. ``shift``: the phase's bits below the cell number, 62 - log2 of the table's
+size. ``upper_…``: the same of the upper table; where it is the lower table too, that one is read alone. A
+level's place in the array is its number + 1; the first record is silence.
 """
 
 _LEVELS = float(LEVELS_PER_OCTAVE)
-_FADE_SLOPE = 1.0 / FADE_SHARE
 _PHASE_MASK = CYCLE - 1
 _FRACTION_BITS = 23
 _FRACTION_MASK = (1 << _FRACTION_BITS) - 1
 _ONE_AS_BITS = 0x3F800000
-_STRETCH = 32
+_STRETCH = 16
 """Samples looked at together when a run of one level is followed."""
 _SHORT_RUN = 8
 """Runs shorter than this are left to the loop that looks up the level of every sample."""
@@ -137,12 +138,11 @@ def _place(depth: float, count: int) -> "Whole":
 
 
 @inlined
-def _fade_weight(plain_from: float, depth: float) -> float:
-    """Weight of the upper table: 0 from ``plain_from`` down, 1 at the upper border, 3t² - 2t³ between."""
-    t = np.float32((plain_from - depth) * _FADE_SLOPE)
-    t = t if t > np.float32(0.0) else np.float32(0.0)
-    t = t if t < np.float32(1.0) else np.float32(1.0)
-    return t * t * (np.float32(3.0) - (t + t))  # type: ignore[return-value]
+def _upper_weight(zero_depth: float, slope: float, depth: float) -> float:
+    """The weight of a level's upper table."""
+    weight = np.float32((zero_depth - depth) * slope)
+    weight = weight if weight > np.float32(0.0) else np.float32(0.0)
+    return weight if weight < np.float32(1.0) else np.float32(1.0)  # type: ignore[return-value]
 
 
 @vector_kernel
@@ -161,7 +161,7 @@ def _oscillate_plain(
 
 
 @vector_kernel
-def _oscillate_fading(
+def _oscillate_blend(
     begin: int,
     end: int,
     phases: "NDArray[np.int64]",
@@ -170,14 +170,14 @@ def _oscillate_fading(
     cells: "NDArray[np.int64]",
     out: "NDArray[np.float32]",
 ) -> None:
-    """A run in the fading part of one level."""
+    """Two tables for the whole run."""
     start, shift = np.int64(level["start"]), np.int64(level["shift"])
     upper_start, upper_shift = np.int64(level["upper_start"]), np.int64(level["upper_shift"])
-    plain_from = level["plain_from"]
+    zero_depth, slope = level["zero_depth"], level["slope"]
     for i in range(np.uint64(begin), np.uint64(end)):
-        own = _read(cells, start, shift, phases[i])
+        lower = _read(cells, start, shift, phases[i])
         upper = _read(cells, upper_start, upper_shift, phases[i])
-        out[i] = own + _fade_weight(plain_from, _depth(heights[i])) * (upper - own)
+        out[i] = lower + _upper_weight(zero_depth, slope, _depth(heights[i])) * (upper - lower)
 
 
 @vector_kernel
@@ -195,9 +195,9 @@ def _oscillate_mixed(
         depth = _depth(heights[i])
         place = _place(depth, levels.size)
         level = levels[np.uint64(place)]
-        own = _read(cells, np.int64(level["start"]), np.int64(level["shift"]), phases[i])
+        lower = _read(cells, np.int64(level["start"]), np.int64(level["shift"]), phases[i])
         upper = _read(cells, np.int64(level["upper_start"]), np.int64(level["upper_shift"]), phases[i])
-        out[i] = own + _fade_weight(level["plain_from"], depth) * (upper - own)
+        out[i] = lower + _upper_weight(level["zero_depth"], level["slope"], depth) * (upper - lower)
 
 
 @vector_kernel
@@ -237,8 +237,8 @@ def oscillate(
     """Sound the tables over a block. No array may overlap another.
 
     Each sample depends on its own phase and height only. Blocks are cut in runs of one level, since loops
-    over one table fill whole vector registers; runs too short for that go through a loop that looks up every
-    sample's level.
+    over the same tables fill whole vector registers; runs too short for that go through a loop that looks up
+    every sample's level.
 
     Parameters
     ----------
@@ -254,18 +254,13 @@ def oscillate(
     """
     begin = 0
     while begin < phases.size:
-        depth = _depth(heights[begin])
-        place = _place(depth, levels.size)
-        level = levels[place]
-        if depth < level["plain_from"]:
-            end = _run_end(heights, begin, np.float64(place - 1), level["plain_from"])
-        else:
-            end = _run_end(heights, begin, level["plain_from"], level["plain_to"])
+        level = levels[_place(_depth(heights[begin]), levels.size)]
+        end = _run_end(heights, begin, level["from_depth"], level["to_depth"])
         if end - begin < _SHORT_RUN:
             end = min(begin + _STRETCH, phases.size)
             _oscillate_mixed(begin, end, phases, heights, levels, cells, out)
-        elif depth < level["plain_from"]:
-            _oscillate_fading(begin, end, phases, heights, level, cells, out)
-        else:
+        elif level["start"] == level["upper_start"]:
             _oscillate_plain(begin, end, phases, level, cells, out)
+        else:
+            _oscillate_blend(begin, end, phases, heights, level, cells, out)
         begin = end

@@ -25,7 +25,7 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 
 from glidesmith.errors import SettingError
-from glidesmith.oscillator import FADE_SHARE, HIGHEST_SHARE, LEVEL, LEVELS_PER_OCTAVE
+from glidesmith.oscillator import HIGHEST_SHARE, LEVEL, LEVELS_PER_OCTAVE
 from glidesmith.text import counted, file_name, printable, read_bytes
 
 if TYPE_CHECKING:
@@ -41,8 +41,20 @@ MOST_PARTIALS = 16_384
 IMAGES_DB = -115.0
 """At most the power of the images that interpolation makes of the partials, against the wave's power."""
 
+FADE = (18, 1)
+"""The depths between which a partial fades: at a rate of 44.1 kHz from 15.3 to 19.6 kHz."""
+
+FINE_LEVELS = 7 * LEVELS_PER_OCTAVE
+"""Down to here a table stands at every level; below, no single partial near the end is loud, and fewer do."""
+
+COARSE_STEP = 4
+"""Levels from table to table below the fine ones."""
+
+COARSE_FADE = (15, 4)
+"""As `FADE`, for these tables: from 16.0 to 18.7 kHz."""
+
 _LOWEST_LEVEL = LEVELS_PER_OCTAVE * int(math.log2(MOST_PARTIALS))
-_LEVELS_TOGETHER = 3
+_LEVELS_TOGETHER = 24
 _SMALLEST_BITS = 8
 _NO_PARTIAL = 1e-12
 _SILENT = 1e-6
@@ -74,9 +86,29 @@ class Wavetables:
     cells: "NDArray[np.int64]"
 
 
-def level_partials(level: int) -> int:
-    """How many partials a level's table holds: as many as stay under height 0 at the level's upper border."""
-    return int(2.0 ** (level / LEVELS_PER_OCTAVE) + 1e-9)
+def partial_gain(depths: "NDArray[np.float64]", fade: tuple[int, int] = FADE) -> "NDArray[np.float64]":
+    """The gain of a partial at a depth of its own, in levels under 0.45 of the sample rate.
+
+    1 - (6x³ - x¹⁸)/5, where x goes from 0 to 1 between the two depths of ``fade``. The second is as far under
+    height 0 as a table stands under the one above, so that their blend is silent from height 0 on.
+
+    Where a glide starts or stops suddenly, a fading partial's amplitude has a corner, and so sidebands that
+    fall as slope/distance²: their energy under 15 kHz goes with slope²/distance³. So the fade starts near
+    15 kHz (at a rate of 44.1 kHz, where it is tightest), its slope grows about as the distance from there
+    squared, and only at the very end goes to 0. Found by trying many exponents and lengths for the least
+    energy of the worst partial.
+    """
+    begin, end = fade
+    x = np.clip((begin - depths) / (begin - end), 0.0, 1.0)
+    cube = x * x * x
+    return np.asarray(1.0 - cube * (6.0 - np.square(np.square(cube)) * cube) / 5.0, dtype=np.float64)
+
+
+def table_gains(depth: int) -> "NDArray[np.float64]":
+    """The gains of the partials in the table at a whole depth: all that are over 0, from the first up."""
+    fade = FADE if depth <= FINE_LEVELS else COARSE_FADE
+    count = math.ceil(2.0 ** ((depth - fade[1]) / LEVELS_PER_OCTAVE) - 1e-9) - 1
+    return partial_gain(depth - LEVELS_PER_OCTAVE * np.log2(np.arange(1, count + 1)), fade)
 
 
 def check_cycle(cycle: "NDArray[np.float64]", where: str = "cycle") -> "NDArray[np.float64]":
@@ -276,77 +308,83 @@ def build_wavetables(
 
 @lru_cache(maxsize=8)
 def _wavetables(wave: str, width: float, cycle: bytes | None, lowest_level: int) -> Wavetables:
-    counts = [level_partials(level) for level in range(lowest_level + 1)]
-    series = partials(wave, width, None if cycle is None else np.frombuffer(cycle), counts[-1])
-    tables = _table_numbers(series, counts)
-    sizes = _table_bits(series, [counts[tables.index(table)] for table in range(tables[-1] + 1)])
-    levels = np.zeros(lowest_level + 2, LEVEL)
-    starts = np.concatenate([[1], 1 + np.cumsum([1 << bits for bits in sizes])])
-    _describe_levels(levels, tables, starts, sizes)
+    depths = _table_depths(lowest_level)
+    gains = [table_gains(depth) for depth in depths]
+    series = partials(wave, width, None if cycle is None else np.frombuffer(cycle), gains[-1].size)
+    series = np.where(np.abs(series) > _NO_PARTIAL, series, 0j)
+    tables, numbers = _different([gain * series[: gain.size] for gain in gains])
+    sizes = [0, *map(_table_bits, tables[1:])]
+    starts = np.cumsum([0, *(1 << bits for bits in sizes)])
     coefficients = np.zeros((starts[-1], 4), dtype=np.float32)
-    for table, bits in enumerate(sizes):
-        count = counts[tables.index(table)]
-        _fill_table(coefficients[starts[table] : starts[table + 1]], series[:count], 1 << bits)
+    for table in range(1, len(tables)):
+        _fill_table(coefficients[starts[table] : starts[table + 1]], tables[table], 1 << sizes[table])
+    places = [(starts[number], 62 - sizes[number]) for number in numbers]
+    levels = _describe_levels(depths, places)
     return Wavetables(wave, lowest_level, levels, coefficients.view(np.int64).reshape(-1))
 
 
-def _table_numbers(series: "NDArray[np.complex128]", counts: list[int]) -> list[int]:
-    """The number of each level's table, from 0. A level that adds no partial shares the table above it."""
-    sounding = np.abs(series) > _NO_PARTIAL * np.abs(series).max()
-    numbers = [0]
-    for fewer, count in pairwise(counts):
-        numbers.append(numbers[-1] + int(sounding[fewer:count].any()))
-    return numbers
+def _table_depths(lowest_level: int) -> list[int]:
+    """The whole depths at which tables stand, from 0 to the lowest level."""
+    fine = min(FINE_LEVELS, lowest_level)
+    return [*range(fine), *range(fine, lowest_level + 1, COARSE_STEP)]
 
 
-def _table_bits(series: "NDArray[np.complex128]", counts: list[int]) -> list[int]:
-    """log2 of the size that each table needs to keep its images under `IMAGES_DB`.
+def _different(
+    series: "list[NDArray[np.complex128]]",
+) -> "tuple[list[NDArray[np.complex128]], list[int]]":
+    """The series that differ from the one before, and for each of all series the number of the kept one."""
+    kept, numbers = [series[0]], [0]
+    for following in series[1:]:
+        size = kept[-1].size
+        if not np.array_equal(kept[-1], following[:size]) or following[size:].any():
+            kept.append(following)
+        numbers.append(len(kept) - 1)
+    return kept, numbers
+
+
+def _table_bits(series: "NDArray[np.complex128]") -> int:
+    """log2 of the size that a table needs to keep its images under `IMAGES_DB`.
 
     Between two points a step apart, the error of cubic Hermite interpolation is f''''/24 · t²(1 - t)² (Davis,
     Interpolation and Approximation, 1963, theorem 3.5.1; from memory). For a partial of x radians a step that
     is x⁴/24 of it, times a pulse train of mean 1/30, which only changes the partial's level, and variance
     1/630 - 1/900: the images.
     """
-    power = np.abs(series) ** 2
-    radians = 2.0 * math.pi * np.arange(1, series.size + 1)
-    images = np.cumsum(power * radians**8) * ((1.0 / 630.0 - 1.0 / 900.0) / 24.0**2)
-    allowed = np.cumsum(power) * 10.0 ** (IMAGES_DB / 10.0)
-    sizes = []
-    for count in counts:
-        needed = (images[count - 1] / allowed[count - 1]) ** 0.125 if allowed[count - 1] > 0.0 else 0.0
-        sizes.append(math.ceil(math.log2(max(needed, 4.0 * count, 2.0**_SMALLEST_BITS))))
-    return sizes
+    power = np.square(np.abs(series))
+    to_fourth = np.square(np.square(2.0 * math.pi * np.arange(1, series.size + 1)))
+    images = np.sum(power * np.square(to_fourth)) * ((1.0 / 630.0 - 1.0 / 900.0) / 24.0**2)
+    allowed = np.sum(power) * 10.0 ** (IMAGES_DB / 10.0)
+    needed = (images / allowed) ** 0.125 if allowed > 0.0 else 0.0
+    return math.ceil(math.log2(max(needed, 4.0 * series.size, 2.0**_SMALLEST_BITS)))
 
 
-def _describe_levels(
-    levels: "NDArray[Any]", tables: list[int], starts: "NDArray[np.int64]", sizes: list[int]
-) -> None:
-    """Fill the records: each level's table, the one it fades into, and where one table is enough."""
-    levels[0] = (-math.inf, 0.0, 0, 62, 0, 62)
-    for level, table in enumerate(tables):
-        row = levels[level + 1]
-        row["start"], row["shift"] = starts[table], 62 - sizes[table]
-        upper = levels[level]
-        shared = level > 0 and tables[level - 1] == table
-        row["plain_from"] = upper["plain_from"] if shared else level + FADE_SHARE
-        row["upper_start"], row["upper_shift"] = upper["start"], upper["shift"]
-    row["plain_to"] = math.inf
-    for level in range(len(tables) - 1, 0, -1):
-        shared = tables[level - 1] == tables[level]
-        levels[level]["plain_to"] = levels[level + 1]["plain_to"] if shared else level
+def _describe_levels(depths: list[int], places: "list[tuple[np.int64, int]]") -> "NDArray[Any]":
+    """The records of all levels, from the depths at which tables stand and each one's start and shift."""
+    levels = np.zeros(depths[-1] + 2, LEVEL)
+    levels[0] = (-math.inf, 0.0, 0.0, 0.0, *places[0], *places[0])
+    for (above, below), (upper, lower) in zip(pairwise(depths), pairwise(places), strict=True):
+        levels[above + 1 : below + 1] = (above, below, below, 1.0 / (below - above), *lower, *upper)
+    levels[-1] = (depths[-1], math.inf, 0.0, 0.0, *places[-1], *places[-1])
+    alone = levels["start"] == levels["upper_start"]
+    joined = alone[:-1] & alone[1:] & (levels["start"][:-1] == levels["start"][1:])
+    for level in np.flatnonzero(joined):
+        levels["from_depth"][level + 1] = levels["from_depth"][level]
+    for level in np.flatnonzero(joined)[::-1]:
+        levels["to_depth"][level] = levels["to_depth"][level + 1]
+    return levels
 
 
 def _fill_table(coefficients: "NDArray[np.float32]", series: "NDArray[np.complex128]", size: int) -> None:
     """Every cell's cubic Hermite coefficients, from the series' exact values and slopes at its borders."""
-    spectrum = np.zeros(size // 2 + 1, dtype=np.complex128)
-    spectrum[1 : series.size + 1] = series * (size / 2.0)
-    values = np.fft.irfft(spectrum, size)
-    slopes = np.fft.irfft(spectrum * (2j * math.pi / size * np.arange(spectrum.size)), size)
-    rise = np.roll(values, -1) - values
-    bend = slopes + np.roll(slopes, -1) - 2.0 * rise
+    spectra = np.zeros((2, size // 2 + 1), dtype=np.complex128)
+    spectra[0, 1 : series.size + 1] = series * (size / 2.0)
+    spectra[1, 1 : series.size + 1] = series * (1j * math.pi * np.arange(1, series.size + 1))
+    values, slopes = np.fft.irfft(spectra, size)
+    rise = np.concatenate([values[1:], values[:1]]) - values
+    bend = slopes + np.concatenate([slopes[1:], slopes[:1]]) - 2.0 * rise
     coefficients[:, 0] = values
     coefficients[:, 1] = slopes
     coefficients[:, 2] = rise - slopes - bend
     coefficients[:, 3] = bend
-    # Adding 0 turns -0 into 0, lest a table read alone differ in a bit from one under a fade of weight 0.
+    # Adding 0 turns -0 into 0, lest a table read alone differ in a bit from one blended with itself.
     coefficients[:, 0] += np.float32(0.0)
