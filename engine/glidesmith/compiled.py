@@ -115,3 +115,19 @@ def vector_kernel(function: Function) -> Function:
     The promise lets loops use vector registers.
     """
     return _compile(function, pipeline_class=_Disjoint)
+
+
+def callback_function(signature: Any) -> Callable[[Function], Any]:
+    """Compile a function that C calls: as `kernel`, with a C signature; the result has an ``address``."""
+
+    def compiled(function: Function) -> Any:
+        kept = config.CACHE_DIR
+        config.CACHE_DIR = CACHE_FOLDER or ""
+        try:
+            return numba.cfunc(signature, cache=CACHE_FOLDER is not None, error_model="numpy", _nrt=False)(
+                function
+            )
+        finally:
+            config.CACHE_DIR = kept
+
+    return compiled

@@ -36,8 +36,11 @@ _ALL_BUT_OVER = 1e-9
 """A stage with less than this part of its way left is over when settings change."""
 
 _BORDERS_PER_EVENT = 40
-_TIE_SAMPLES = 1e-8
 """More than an event brings: three stages at most, of at most six stretches."""
+
+_TIE_SAMPLES = 1e-8
+_JUST_AFTER = 1e-300
+"""The part of a sample by which an instant is after an event and before all else."""
 
 GATE_EVENT = np.dtype(
     [("sample", np.int64), ("fraction", np.float64), ("level", np.float64), ("trigger", np.int64)], align=True
@@ -311,6 +314,41 @@ def walk_resettle(walk: Any, slew: Any, envelope: Any, sample_rate: float) -> No
     walk.start_fraction = samples - np.floor(samples)
     target_begin(target, target.motion, end + (x - end) / left, end, duration)
     pursue(walk.pursuit, slew, target, since, y)
+
+
+@kernel
+def walk_past(walk: Any, slew: Any, envelope: Any, events: Any, sample_rate: float, sample: int) -> None:
+    """Walk to ``sample`` and take what events there are up to it, those at that very instant included."""
+    _settle(walk, slew, envelope, events, sample_rate, sample, _JUST_AFTER)
+    walk_to(walk, slew, envelope, events, sample_rate, sample, _JUST_AFTER)
+
+
+@kernel
+def walk_shift(walk: Any, samples: int) -> None:
+    """Count time from another sample 0: everything that the walk remembers moves by ``samples``."""
+    walk.sample += samples
+    walk.start_sample += samples
+
+
+@kernel
+def walk_take(walk: Any, slew: Any, envelope: Any, event: Any, sample_rate: float) -> None:
+    """Let an event that is in no list happen where the walk stands (``event`` must be of that instant)."""
+    elapsed = _elapsed(walk, walk.sample, walk.fraction, 1.0 / sample_rate)
+    _take_event(walk, slew, envelope, event, elapsed)
+    walk.event -= 1
+
+
+@kernel
+def walk_open(walk: Any, slew: Any, envelope: Any, sample: int, level: float, y: float) -> None:
+    """Begin at ``sample`` with an output that stands at ``y`` already, behind a gate that is at ``level``.
+
+    An open gate goes on in its decay towards sustain, a closed one in its release.
+    """
+    walk.sample = walk.start_sample = sample
+    walk.fraction = walk.start_fraction = 0.0
+    walk.x = walk.y = y
+    walk.level = level
+    _begin_stage(walk, slew, envelope, DECAY if level > 0.0 else RELEASE, y, y)
 
 
 @kernel

@@ -48,6 +48,7 @@ _LARGEST_FLOAT32 = 3.4028234663852886e38
 VOICE = np.dtype(
     [
         ("sample", np.int64),
+        ("sounded", np.int64),
         ("phase", np.int64),
         ("pitch_event", np.int64),
         ("pitch_sample", np.int64),
@@ -67,6 +68,7 @@ VOICE = np.dtype(
 """All that a voice remembers: the sample it is at, its phase, the glide in hand and since when, and what it
 had to clip.
 
+``sounded`` counts the samples made; ``sample``, the place in the program, goes back where a loop does.
 ``broken`` counts samples that were not finite and were silenced; it stays 0.
 """
 
@@ -79,18 +81,18 @@ Tables = namedtuple("Tables", "levels cells")
 
 
 @inlined
-def _elapsed(settings: Any, since: int, fraction: float, sample: int, beyond: float) -> float:
+def elapsed_s(settings: Any, since: int, fraction: float, sample: int, beyond: float) -> float:
     """Seconds from an anchor (``since`` + ``fraction``) to ``sample`` + ``beyond``."""
     return (float(sample - since) + (beyond - fraction)) * settings.step_s
 
 
 @inlined
-def _next_sample(events: Any, index: int) -> int:
+def next_sample(events: Any, index: int) -> int:
     return events[index].sample if index < events.size else _NEVER
 
 
 @kernel
-def _pitch_event(settings: Any, voice: Any, event: Any) -> None:
+def take_pitch_event(settings: Any, voice: Any, event: Any) -> None:
     """Let the pitch begin its next glide, or jump, from where it is at the event."""
     glide = voice.pitch
     if not event.jump and event.volts == glide.target:
@@ -98,19 +100,19 @@ def _pitch_event(settings: Any, voice: Any, event: Any) -> None:
     if event.jump:
         glide_hold(glide, event.volts)
     else:
-        elapsed = _elapsed(settings, voice.pitch_sample, voice.pitch_fraction, event.sample, event.fraction)
+        elapsed = elapsed_s(settings, voice.pitch_sample, voice.pitch_fraction, event.sample, event.fraction)
         glide_begin(glide, settings.pitch, glide_volts(glide, elapsed), event.volts)
     voice.pitch_sample = event.sample
     voice.pitch_fraction = event.fraction
 
 
 @kernel
-def _gate_event(settings: Any, voice: Any, event: Any) -> None:
+def take_gate_event(settings: Any, voice: Any, event: Any) -> None:
     """The same for the gain, without an envelope: the gate's level is the slew's target."""
     glide = voice.gain
     if event.level == glide.target:
         return
-    elapsed = _elapsed(settings, voice.gain_sample, voice.gain_fraction, event.sample, event.fraction)
+    elapsed = elapsed_s(settings, voice.gain_sample, voice.gain_fraction, event.sample, event.fraction)
     glide_begin(glide, settings.gain, glide_volts(glide, elapsed), event.level)
     voice.gain_sample = event.sample
     voice.gain_fraction = event.fraction
@@ -123,19 +125,19 @@ def _split_sample(settings: Any, voice: Any, events: Any, sample: int) -> float:
     begin = 0.0
     while True:
         end = 1.0
-        more = _next_sample(events, voice.pitch_event) == sample
+        more = next_sample(events, voice.pitch_event) == sample
         if more:
             end = events[voice.pitch_event].fraction
         since, fraction = voice.pitch_sample, voice.pitch_fraction
         cycles += glide_cycles(
             settings,
             voice.pitch,
-            _elapsed(settings, since, fraction, sample, begin),
-            _elapsed(settings, since, fraction, sample, end),
+            elapsed_s(settings, since, fraction, sample, begin),
+            elapsed_s(settings, since, fraction, sample, end),
         )
         if not more:
             return cycles
-        _pitch_event(settings, voice, events[voice.pitch_event])
+        take_pitch_event(settings, voice, events[voice.pitch_event])
         voice.pitch_event += 1
         begin = end
 
@@ -149,9 +151,9 @@ def _gliding_samples(settings: Any, glide: Any, since: int, fraction: float, sam
     """
     left = glide.lasts / settings.step_s - (float(sample - since) - fraction)
     count = int(min(max(np.ceil(left), 0.0), float(most)))
-    while count > 0 and _elapsed(settings, since, fraction, sample + count - 1, 0.0) >= glide.lasts:
+    while count > 0 and elapsed_s(settings, since, fraction, sample + count - 1, 0.0) >= glide.lasts:
         count -= 1
-    while count < most and _elapsed(settings, since, fraction, sample + count, 0.0) < glide.lasts:
+    while count < most and elapsed_s(settings, since, fraction, sample + count, 0.0) < glide.lasts:
         count += 1
     return count
 
@@ -167,15 +169,15 @@ def _hold_pitch(settings: Any, voice: Any, scratch: Any, at: int, count: int) ->
 
 @inlined
 def _volts_at(settings: Any, voice: Any, sample: int) -> float:
-    elapsed = _elapsed(settings, voice.pitch_sample, voice.pitch_fraction, sample, 0.0)
+    elapsed = elapsed_s(settings, voice.pitch_sample, voice.pitch_fraction, sample, 0.0)
     return glide_volts(voice.pitch, elapsed)
 
 
 @kernel
 def _single_sample(settings: Any, voice: Any, sample: int) -> int:
     """The increment of one sample inside one glide, by quadrature or by its steps."""
-    begin = _elapsed(settings, voice.pitch_sample, voice.pitch_fraction, sample, 0.0)
-    end = _elapsed(settings, voice.pitch_sample, voice.pitch_fraction, sample, 1.0)
+    begin = elapsed_s(settings, voice.pitch_sample, voice.pitch_fraction, sample, 0.0)
+    end = elapsed_s(settings, voice.pitch_sample, voice.pitch_fraction, sample, 1.0)
     return phase_units(glide_cycles(settings, voice.pitch, begin, end))
 
 
@@ -219,12 +221,12 @@ def _follow_pitch(settings: Any, voice: Any, events: Any, scratch: Any, count: i
     while at < count:
         sample = voice.sample + at
         glide = voice.pitch
-        if _next_sample(events, voice.pitch_event) == sample:
+        if next_sample(events, voice.pitch_event) == sample:
             scratch.volts[at] = _volts_at(settings, voice, sample)
             scratch.increments[at] = phase_units(_split_sample(settings, voice, events, sample))
             at += 1
             continue
-        most = min(count - at, _next_sample(events, voice.pitch_event) - sample)
+        most = min(count - at, next_sample(events, voice.pitch_event) - sample)
         inside = _gliding_samples(settings, glide, voice.pitch_sample, voice.pitch_fraction, sample, most + 1)
         if inside > 1:
             _glide_pitch(settings, voice, scratch, at, sample, inside - 1)
@@ -245,11 +247,11 @@ def _follow_gate(settings: Any, voice: Any, events: Any, scratch: Any, count: in
     control = scratch.control
     while at < count:
         sample = voice.sample + at
-        while _next_sample(events, voice.gate_event) < sample:
-            _gate_event(settings, voice, events[voice.gate_event])
+        while next_sample(events, voice.gate_event) < sample:
+            take_gate_event(settings, voice, events[voice.gate_event])
             voice.gate_event += 1
         glide = voice.gain
-        most = min(count - at, _next_sample(events, voice.gate_event) + 1 - sample)
+        most = min(count - at, next_sample(events, voice.gate_event) + 1 - sample)
         inside = _gliding_samples(settings, glide, voice.gain_sample, voice.gain_fraction, sample, most)
         fill_glide(
             glide,
@@ -277,13 +279,13 @@ def _fill_heights(settings: Any, volts: Any, heights: Any) -> None:
 
 
 @kernel
-def _mix_drone(settings: Any, sample: int, out: Any) -> None:
-    """Add the drone, faded over its first and last 20 ms."""
+def _mix_drone(settings: Any, sounded: int, left: int, out: Any) -> None:
+    """Add the drone, faded over its first and last 20 ms; ``left`` samples of the program are to come."""
     fade = max(_DRONE_FADE_S / settings.step_s, 1.0)
     increment = settings.drone_increment
     for i in range(out.size):
-        n = sample + i
-        edge = min(min(float(n), float(settings.length - 1 - n)) / fade, 1.0)
+        n = sounded + i
+        edge = min(min(float(n), float(left - 1 - i)) / fade, 1.0)
         phase = (n * increment) & _PHASE_MASK
         out[i] += np.float32(settings.drone_level * max(edge, 0.0) * np.sin(phase * _RADIANS_PER_UNIT))
 
@@ -327,7 +329,7 @@ def _limit(voice: Any, out: Any) -> None:
 
 
 @kernel
-def _play_chunk(settings: Any, voice: Any, events: Any, tables: Any, scratch: Any, out: Any) -> None:
+def play_chunk(settings: Any, voice: Any, events: Any, tables: Any, scratch: Any, out: Any) -> None:
     """Make the next ``out.size`` samples, at most `CHUNK`; the passes leave their results in ``scratch``."""
     count = out.size
     _follow_pitch(settings, voice, events.pitch, scratch, count)
@@ -353,9 +355,10 @@ def _play_chunk(settings: Any, voice: Any, events: Any, tables: Any, scratch: An
     oscillate(phases, heights, tables.levels, tables.cells, wave)
     _amplify(settings.level, wave, gain, out)
     if settings.drone_level > 0.0:
-        _mix_drone(settings, voice.sample, out)
+        _mix_drone(settings, voice.sounded, settings.length - voice.sample, out)
     _limit(voice, out)
     voice.sample += count
+    voice.sounded += count
 
 
 @vector_kernel
@@ -373,7 +376,7 @@ def play(settings: Any, voice: Any, events: Any, tables: Any, scratch: Any, out:
     settings, voice = settings[0], voice[0]
     for first in range(0, out.size, CHUNK):
         end = min(first + CHUNK, out.size)
-        _play_chunk(settings, voice, events, tables, scratch, out[first:end])
+        play_chunk(settings, voice, events, tables, scratch, out[first:end])
         if traces.pitch_volts.size:
             _copy(scratch.volts, traces.pitch_volts[first:end])
             _copy(scratch.control, traces.gain_control[first:end])
@@ -381,10 +384,10 @@ def play(settings: Any, voice: Any, events: Any, tables: Any, scratch: Any, out:
 
 
 @kernel
-def voice_reset(settings: Any, voice: Any) -> None:
+def reset(settings: Any, voice: Any) -> None:
     """Back to the first sample: the pitch on the first note, the gate closed."""
-    settings, voice = settings[0], voice[0]
     voice.sample = 0
+    voice.sounded = 0
     voice.phase = 0
     voice.pitch_event = 0
     voice.pitch_sample = 0
@@ -398,6 +401,12 @@ def voice_reset(settings: Any, voice: Any) -> None:
     voice.clipped = 0
     voice.broken = 0
     voice.peak = 0.0
+
+
+@kernel
+def voice_reset(settings: Any, voice: Any) -> None:
+    """As `reset`, for arrays of one record each."""
+    reset(settings[0], voice[0])
 
 
 @kernel
@@ -429,7 +438,7 @@ def _quiet_sample(settings: Any, voice: Any, gates: Any, latest: int, control: A
     if settings.enveloped:
         return _quiet_by_walk(settings, voice, gates, latest, control, unslewed)
     for index in range(gates.size):
-        _gate_event(settings, voice, gates[index])
+        take_gate_event(settings, voice, gates[index])
     quiet = amplifier_control(settings.amplifier, QUIET)
     glide = voice.gain
     after = glide_quiet_time(glide, quiet) / settings.step_s
