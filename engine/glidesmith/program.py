@@ -283,7 +283,14 @@ def _check_kinds(preset: object, phrase: object) -> None:
         raise SettingError("the phrase has no notes: give it at least one")
 
 
-def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s: float = 30.0) -> Program:
+def compile_program(
+    preset: "Preset",
+    phrase: "Phrase",
+    sample_rate: int,
+    tail_s: float = 30.0,
+    cycle: "NDArray[np.float64] | None" = None,
+    lowest_hz: float = math.inf,
+) -> Program:
     """Settle what a preset makes of a phrase at a sample rate.
 
     Parameters
@@ -294,6 +301,10 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
         Hz, 8,000 to 384,000.
     tail_s : float
         The longest time, in seconds, that the sound may go on after the last gate.
+    cycle : float64 (n,), optional
+        What `read_cycle` gives of the oscillator's file, where that was read already.
+    lowest_hz : float
+        Down to where the wave must be ready, in Hz, if the phrase itself goes less far down.
 
     Raises
     ------
@@ -307,11 +318,12 @@ def compile_program(preset: "Preset", phrase: "Phrase", sample_rate: int, tail_s
     pitch, gate = pitch_changes(preset, phrase), gate_changes(preset, phrase)
     first_volts = pitch[0].held_volts
     settings = _settings(preset, rate, first_volts)
-    cycle = None
-    if preset.oscillator.wave == "file":
+    if preset.oscillator.wave == "file" and cycle is None:
         assert preset.oscillator.file is not None
         cycle = read_cycle(preset.oscillator.file, preset.where)
-    lowest_hz = _lowest_hz(preset, [c.held_volts for c in pitch], float(settings["octaves_per_volt"][0]))
+    lowest_hz = min(
+        lowest_hz, _lowest_hz(preset, [c.held_volts for c in pitch], float(settings["octaves_per_volt"][0]))
+    )
     tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, lowest_hz, rate)
     pitch_events, gate_events = _pitch_events(pitch, rate), _gate_events(gate, rate)
     latest = int(gate_events["sample"][-1]) + 1 + math.ceil(tail_s * rate)
