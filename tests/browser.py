@@ -1,9 +1,12 @@
 """Debian's Chromium for tests: a page opened from disk, the network refused, the clock of its audio held."""
 
 import base64
+import os
 import shutil
+import signal
+import threading
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from io import BytesIO
 from pathlib import Path
 from typing import Any
@@ -19,6 +22,12 @@ from glidesmith.preset import settings_hash
 
 CHROMIUM = shutil.which("chromium")
 NEEDED = "needs Debian's package `chromium`, and `playwright` from PyPI (without its own browsers)"
+
+LONGEST_WAIT_MS = 15_000
+"""A page that does not come to what is waited for is broken."""
+
+LONGEST_TEST_S = 120.0
+"""A page that hangs, in an endless loop or waiting for what never comes, takes its browser down with it."""
 
 SWITCHES = [
     "--headless=new",
@@ -72,6 +81,21 @@ window.perform = async (presses, milliseconds) => {
   let text = "";
   for (let i = 0; i < bytes.length; i += 32768) text += String.fromCharCode(...bytes.subarray(i, i + 32768));
   return { seen, samples: btoa(text) };
+};
+"""
+
+# An audio context whose clock goes on only when `passTime` is called: a round needs clips to be heard for a
+# while, and no test shall wait for that.
+HELD = """
+window.AudioContext = class extends OfflineAudioContext {
+  #now = 0;
+  constructor({ sampleRate }) {
+    super(1, sampleRate, sampleRate);
+    window.passTime = (seconds) => { this.#now += seconds; };
+  }
+  get currentTime() { return this.#now; }
+  resume() { return Promise.resolve(); }
+  suspend() { return Promise.resolve(); }
 };
 """
 
@@ -145,14 +169,15 @@ class Tab:
 
     def wait_for_position(self, seconds: float) -> None:
         """Wait until the position shown is past so many seconds."""
-        self.page.evaluate(
-            """(seconds) => new Promise((done) => {
-              const shown = document.getElementById("position");
-              const look = () => (parseFloat(shown.textContent) > seconds ? done() : setTimeout(look, 20));
-              look();
-            })""",
-            seconds,
+        self.page.wait_for_function(
+            "(seconds) => parseFloat(document.getElementById('position').textContent) > seconds", arg=seconds
         )
+
+    def hear(self, keys: str, seconds: float = 0.7) -> None:
+        """Press keys, each clip playing for so long of the held clock before the next."""
+        for key in keys:
+            self.page.keyboard.press(key)
+            self.page.evaluate("(seconds) => passTime(seconds)", seconds)
 
     def perform(self, presses: list[tuple[float, str]], wait_ms: float = 5) -> tuple[np.ndarray, np.ndarray]:
         """Press keys at times of the offline context; begin playing first.
@@ -180,19 +205,41 @@ def browser() -> Iterator[Any]:
 
 
 @contextmanager
-def opened(chromium: Any, path: Path, offline_s: float | None = None, **settings: Any) -> Iterator[Tab]:
+def opened(
+    chromium: Any, path: Path, offline_s: float | None = None, held: bool = False, **settings: Any
+) -> Iterator[Tab]:
     """A page opened from disk in a fresh profile, the network refused, ready to play.
 
-    ``offline_s`` makes its audio context render offline, for so many seconds (see `OFFLINE`).
+    ``offline_s`` makes its audio context render offline, for so many seconds (see `OFFLINE`); ``held`` makes
+    its clock stand still (see `HELD`).
     """
     context = chromium.new_context(accept_downloads=True, **settings)
+    end = threading.Timer(LONGEST_TEST_S, _end, [_process_id(chromium)])
+    end.daemon = True
+    end.start()
     try:
+        context.set_default_timeout(LONGEST_WAIT_MS)
         context.set_offline(True)
         if offline_s is not None:
             context.add_init_script(OFFLINE.replace("SECONDS", str(offline_s)))
+        if held:
+            context.add_init_script(HELD)
         tab = Tab(context.new_page())
         tab.page.goto(path.as_uri())
         tab.wait_until_ready()
         yield tab
     finally:
+        end.cancel()
         context.close()
+
+
+def _process_id(chromium: Any) -> int:
+    session = chromium.new_browser_cdp_session()
+    processes = session.send("SystemInfo.getProcessInfo")["processInfo"]
+    session.detach()
+    return next(each["id"] for each in processes if each["type"] == "browser")
+
+
+def _end(process_id: int) -> None:
+    with suppress(ProcessLookupError):
+        os.kill(process_id, signal.SIGKILL)

@@ -58,6 +58,28 @@ def preference(order, listener="Ada", candidates=(RC, EXP, COSINE), undecided=()
     }
 
 
+def told(identity, listener="Ada", pair=(RC, EXP), answered=16, planned=16, **changes):
+    """What a sheet tells of an earlier round of A/B/X."""
+    return {
+        "id": identity,
+        "made": "2031-05-03T18:00:00.000Z",
+        "test": "abx",
+        "listener": listener,
+        "finished": answered == planned,
+        "answered": answered,
+        "planned": planned,
+        "pair": list(pair),
+        "labels": [LABELS[digest] for digest in pair],
+        **changes,
+    }
+
+
+def bundle(*sheets, **changes):
+    """All rounds that a browser kept, in one file."""
+    content = {"kind": "glidesmith listening sheets", "version": 1, "set": SET, "sheets": list(sheets)}
+    return {**content, **changes}
+
+
 def save(folder: Path, *sheets) -> list[Path]:
     """Write sheets as files, numbered; text is written as it is."""
     paths = []

@@ -1,206 +1,30 @@
-"""The page in Debian's Chromium, from disk and with the network refused: what it plays, shows and saves."""
+"""The comparison page in Debian's Chromium, from disk, the network refused: what it shows and takes."""
+
+# ruff: noqa: F401, F811 - fixtures are imported, and asked for by name
 
 import json
-from io import BytesIO
-from pathlib import Path
 
-import numpy as np
 import pytest
-import soundfile
-from scipy.stats import binomtest
 
-from browser import CANDIDATES, CHROMIUM, NEEDED, browser, decoded, example_set, opened
+from browser import Tab, opened
 from glidesmith.page import write_page
-from glidesmith.sheets import read_sheet
+from pages import (
+    LABELS,
+    begin,
+    chosen,
+    chromium,
+    example,
+    held_tab,
+    in_chromium,
+    page,
+    position,
+    redrawn,
+    tab,
+)
 
-try:
-    import playwright.sync_api as _  # noqa: F401
-except ImportError:
-    CHROMIUM = None
-pytestmark = pytest.mark.skipif(CHROMIUM is None, reason=NEEDED)
+pytestmark = in_chromium
 
-SAMPLE_RATE = 48_000
-LEVEL = 10.0 ** (-20.0 / 20.0)
-SWITCH_S, SEAM_S, AHEAD_S = 0.010, 0.005, 0.030
-SETTLED_S = 1.2  # the level's own fade in, with a time constant of 0.1 s, is under 1e-5 then
-LABELS = list(CANDIDATES)
 SCRIPT_TITLE = "<script>document.title = 'taken over'</script><b>ferry</b>"
-
-
-@pytest.fixture(scope="module")
-def chromium():
-    with browser() as found:
-        yield found
-
-
-@pytest.fixture(scope="module")
-def example():
-    return example_set(SAMPLE_RATE)
-
-
-@pytest.fixture(scope="module")
-def page(example, tmp_path_factory) -> Path:
-    path = tmp_path_factory.mktemp("page") / "index.html"
-    write_page(path, *example[:2])
-    return path
-
-
-@pytest.fixture(scope="module")
-def tones(example):
-    """A sine for each candidate, as FLAC: a click of -80 dB would stand out."""
-    clips = []
-    for index, candidate in enumerate(example[0]["candidates"]):
-        time = np.arange(candidate["frames"]) / SAMPLE_RATE
-        tone = np.round((0.2 - 0.04 * index) * np.sin(2 * np.pi * (200.0 + 31.0 * index) * time) * 2**23)
-        file = BytesIO()
-        soundfile.write(file, tone.astype(np.int32) << 8, SAMPLE_RATE, subtype="PCM_24", format="FLAC")
-        clips.append(file.getvalue())
-    return clips
-
-
-@pytest.fixture(scope="module")
-def tone_page(example, tones, tmp_path_factory) -> Path:
-    path = tmp_path_factory.mktemp("tones") / "index.html"
-    write_page(path, example[0], tones)
-    return path
-
-
-@pytest.fixture
-def tab(chromium, page):
-    with opened(chromium, page) as found:
-        yield found
-        assert found.complaints == []
-        assert found.requests == [page.as_uri()]
-
-
-def ramp(times, start_s, lasts_s=SWITCH_S):
-    return np.clip((times - start_s) / lasts_s, 0.0, 1.0)
-
-
-def at_position(clips, index, positions):
-    """A clip's samples at positions in seconds; silence past its end and before its start."""
-    places = np.round(positions * SAMPLE_RATE).astype(int)
-    clip = clips[index]
-    return np.where((places >= 0) & (places < clip.size), clip[np.clip(places, 0, clip.size - 1)], 0.0)
-
-
-# Sound
-
-
-def test_switching_keeps_the_position_and_leaves_no_gap(chromium, page, example):
-    """The output is, sample for sample, one clip before, a straight fade of 10 ms, the other clip after."""
-    clips = [decoded(flac) for flac in example[1]]
-    with opened(chromium, page, offline_s=5) as tab:
-        tab.page.click("#play")
-        output, seen = tab.perform([(1.5, "2"), (2.5, "3"), (3.5, "ArrowRight")])
-        assert tab.complaints == []
-    times = np.arange(output.size) / SAMPLE_RATE
-    positions = times - AHEAD_S
-    expected = at_position(clips, 0, positions)
-    for (pressed_s, _, _), index in zip(seen, (1, 2, 0), strict=True):
-        new = ramp(times, round((pressed_s + AHEAD_S) * SAMPLE_RATE) / SAMPLE_RATE)
-        expected = (1.0 - new) * expected + new * at_position(clips, index, positions)
-    settled = times > SETTLED_S
-    np.testing.assert_allclose(output[settled], LEVEL * expected[settled], atol=2e-6)
-    assert np.abs(expected).max() > 0.1
-    # The position shown: of the clock, and the same before and after (5 ms asked, 1 ms shown).
-    np.testing.assert_allclose(seen[:, 1], seen[:, 0] - AHEAD_S, atol=0.0011)
-    np.testing.assert_allclose(seen[:, 2], seen[:, 1], atol=0.0011)
-
-
-def test_playing_begins_low_and_fades_in(chromium, tone_page, tones):
-    clip = decoded(tones[0])
-    with opened(chromium, tone_page, offline_s=1.5) as tab:
-        tab.page.click("#play")
-        output, _ = tab.perform([])
-    times = np.arange(output.size) / SAMPLE_RATE
-    faded = LEVEL * (1.0 - np.exp(-times / 0.1)) * ramp(times, AHEAD_S)
-    away = times > AHEAD_S + SWITCH_S
-    expected = faded * at_position([clip], 0, times - AHEAD_S)
-    np.testing.assert_allclose(output[away], expected[away], atol=1e-4)
-    assert np.abs(np.diff(output)).max() < 1.1 * LEVEL * 0.2 * 2 * np.pi * 200.0 / SAMPLE_RATE
-
-
-PRESSES = {
-    "keys faster than a switch takes": [(1.5 + 0.004 * n, "123"[n % 3]) for n in range(24)],
-    "pause and play": [(1.5, " "), (1.8, " "), (1.805, " "), (1.9, " ")],
-    "steps back and on": [(1.5, "shift ArrowRight"), (1.504, "shift ArrowLeft"), (1.7, "Home"), (1.9, "2")],
-    "a loop set while playing": [(1.5, "["), (1.9, "]"), (2.4, "3"), (2.6, "l")],
-}
-
-
-@pytest.mark.parametrize("presses", PRESSES.values(), ids=PRESSES)
-def test_nothing_that_is_pressed_clicks(chromium, tone_page, tones, presses):
-    """No sample moves by more than the steepest sum of the tones and of fades of 5 ms between them."""
-    with opened(chromium, tone_page, offline_s=4) as tab:
-        tab.page.click("#play")
-        output, _ = tab.perform(presses)
-        assert tab.complaints == []
-    clips = [decoded(tone) for tone in tones]
-    steepest = max(np.abs(np.diff(clip)).max() for clip in clips)
-    fade = sum(np.abs(clip).max() for clip in clips) / (SEAM_S * SAMPLE_RATE)
-    assert np.abs(np.diff(output)).max() < LEVEL * (steepest + fade)
-    assert np.abs(output[-SAMPLE_RATE:]).max() > 0.5 * LEVEL * 0.1
-
-
-def test_moving_the_position_fades_across_without_a_gap(chromium, tone_page, tones):
-    clip = decoded(tones[0])
-    with opened(chromium, tone_page, offline_s=2.5) as tab:
-        tab.page.click("#play")
-        output, seen = tab.perform([(1.5, "shift ArrowRight")])
-    times = np.arange(output.size) / SAMPLE_RATE
-    moved_s = round((seen[0, 0] + AHEAD_S) * SAMPLE_RATE) / SAMPLE_RATE
-    new = ramp(times, moved_s)
-    before = at_position([clip], 0, times - AHEAD_S)
-    after = at_position([clip], 0, seen[0, 0] - AHEAD_S + 0.5 + times - moved_s)
-    settled = times > SETTLED_S
-    expected = LEVEL * ((1.0 - new) * before + new * after)
-    np.testing.assert_allclose(output[settled], expected[settled], atol=2e-6)
-
-
-def test_a_loop_closes_with_a_short_fade_over_and_over(chromium, tone_page, tones):
-    clip = decoded(tones[0])
-    start_s, end_s = 2.0, 2.5
-    with opened(chromium, tone_page, offline_s=3) as tab:
-        tab.page.fill("#loop-start", str(start_s))
-        tab.page.fill("#loop-end", str(end_s))
-        tab.page.locator("#loop-end").blur()
-        assert tab.page.is_checked("#loop")
-        tab.page.click("#play")
-        output, _ = tab.perform([(1.0, "Shift"), (2.0, "Shift")], wait_ms=250)  # for the page to plan ahead
-    times = np.arange(output.size) / SAMPLE_RATE
-    expected = np.zeros(output.size)
-    for begins_s in np.arange(AHEAD_S, 3.0, end_s - start_s):  # the first with the run: before it is settled
-        audible = ramp(times, begins_s, SEAM_S) - ramp(times, begins_s + end_s - start_s, SEAM_S)
-        expected += audible * at_position([clip], 0, start_s + times - begins_s)
-    settled = times > SETTLED_S
-    np.testing.assert_allclose(output[settled], LEVEL * expected[settled], atol=2e-6)
-
-
-def test_a_live_context_plays_on(tab):
-    """The same without the held clock: the position moves on, and stays while another candidate is chosen."""
-    tab.page.click("#play")
-    tab.wait_for_position(0.2)
-    between = tab.page.evaluate(
-        """() => {
-          const position = () => parseFloat(document.getElementById("position").textContent);
-          const before = position();
-          document.querySelectorAll("#candidates input")[1].click();
-          return [before, position()];
-        }"""
-    )
-    assert 0.0 <= between[1] - between[0] < 0.1
-    tab.page.keyboard.press("Space")
-    assert tab.page.inner_text("#status").startswith("Paused at ")
-
-
-# Keys and pointers
-
-
-def chosen(tab):
-    return tab.page.eval_on_selector_all(
-        "#candidates input", "(all) => all.findIndex((each) => each.checked)"
-    )
 
 
 def test_keys_choose_candidates_and_say_so(tab):
@@ -249,10 +73,6 @@ def view(tab):
     return float(texts[0].split()[0]), float(texts[-1].split()[0])
 
 
-def redrawn(tab):
-    tab.page.evaluate("() => new Promise((done) => requestAnimationFrame(() => requestAnimationFrame(done)))")
-
-
 def test_the_curves_zoom_and_move_by_keys_wheel_and_buttons(tab):
     whole = view(tab)
     assert whole[0] == 0.0
@@ -277,6 +97,43 @@ def test_the_curves_zoom_and_move_by_keys_wheel_and_buttons(tab):
     tab.page.click("text=Show all")
     redrawn(tab)
     assert view(tab) == whole
+
+
+def test_labels_of_pitches_are_whole_however_close_one_zooms(tab):
+    """Also on the pitch's twin; the names are longest between sharp notes and below octave 0."""
+    cut = """() => [...document.querySelectorAll("#graph .axis, #transfer .axis.end")]
+      .filter((each) => each.getBBox().x < 0).map((each) => each.textContent)"""
+    seen = set()
+    for _ in range(12):
+        assert tab.page.evaluate(cut) == []
+        seen.update(tab.page.locator("#graph .axis.end").all_text_contents())
+        tab.page.click("text=Pitch closer")
+        redrawn(tab)
+    assert any("#" in text and "\u2212" in text for text in seen)
+
+
+def test_zooming_keeps_the_chosen_pitch_in_view(tab):
+    """The line of the chosen candidate passes between the lane's borders at the play position."""
+    box = tab.page.locator("#graph").bounding_box()
+    inside = """() => {
+      const line = document.querySelector("#graph .line.chosen");
+      const lane = document.querySelector("#graph .lane").getBBox();
+      const mark = document.querySelector("#graph .play-mark").getAttribute("d");
+      const at = Number(/M([0-9.]+) 0V/.exec(mark)[1]);
+      for (let way = 0; way <= line.getTotalLength(); way += 0.5) {
+        const { x, y } = line.getPointAtLength(way);
+        if (Math.abs(x - at) < 2 && y >= lane.y && y <= lane.y + lane.height) return true;
+      }
+      return false;
+    }"""
+    for part, candidate in ((0.12, "1"), (0.62, "3"), (0.9, "2")):
+        tab.page.click("text=Show all")
+        tab.page.mouse.click(box["x"] + 46 + part * (box["width"] - 58), box["y"] + 100)
+        tab.page.keyboard.press(candidate)
+        for step in ["Pitch closer"] * 5 + ["Closer"] * 3 + ["Pitch wider"] * 2:
+            tab.page.click(f"#zoom >> text='{step}'")
+            redrawn(tab)
+            assert tab.page.evaluate(inside), (part, step)
 
 
 def test_dragging_along_the_ruler_loops_and_clicking_moves_the_position(tab):
@@ -305,6 +162,37 @@ def test_a_glide_in_the_table_is_shown_and_looped(tab, example):
     assert f"{glide['from']} → {glide['to']}" == name
     assert float(tab.page.input_value("#loop-start")) == pytest.approx(glide["start_s"] - 0.1, abs=0.001)
     assert view(tab)[0] > glide["start_s"] - 0.5
+    assert position(tab) == pytest.approx(glide["start_s"] - 0.1, abs=0.001)
+
+
+def test_the_player_stays_at_hand_where_it_is_scrolled_away(chromium, page):
+    screen = {"viewport": {"width": 360, "height": 740}, "reduced_motion": "reduce"}
+    with opened(chromium, page, held=True, **screen) as tab:
+        bar = tab.page.locator("#bar")
+        bar.wait_for(state="hidden")
+        tab.page.locator(".go").first.click()
+        bar.wait_for(state="visible")
+        place = bar.bounding_box()
+        assert place["y"] + place["height"] == pytest.approx(740, abs=1)
+        assert place["height"] < 130
+        tab.page.click("#bar-play")
+        assert tab.page.inner_text("#bar-play") == tab.page.text_content("#play") == "Pause"
+        tab.page.click("#bar-candidates button >> nth=2")
+        assert chosen(tab) == 2
+        assert tab.page.get_attribute("#bar-candidates button >> nth=2", "aria-pressed") == "true"
+        assert LABELS[2] in tab.page.inner_text("#bar-name")
+        # What has the focus is not under the bar (WCAG 2.2, 2.4.11).
+        tab.page.locator("#excerpt-end").evaluate("(each) => each.scrollIntoView({ block: 'end' })")
+        field = tab.page.locator("#excerpt-end").bounding_box()
+        assert field["y"] + field["height"] <= bar.bounding_box()["y"]
+        tab.page.locator("#level").focus()
+        tab.page.locator("#play").scroll_into_view_if_needed()
+        bar.wait_for(state="hidden")
+        begin(tab)
+        tab.page.mouse.wheel(0, 2000)
+        redrawn(tab)
+        assert not bar.is_visible()
+        assert tab.complaints == []
 
 
 # Figures
@@ -334,6 +222,7 @@ def test_gates_settings_and_loudness_are_told(tab):
     text = tab.page.inner_text("#figures-body")
     for words in ("edge clicks", "pitch.law", "cosine", "−23.00 LUFS", "−3.2 dB", "none was rescaled"):
         assert words in text
+    assert "made 3.2 dB quieter to match" in tab.page.inner_text("#candidates")
     assert "pitch.glide" not in text  # the same in all
 
 
@@ -356,6 +245,39 @@ def test_what_is_equal_what_limits_and_what_warns_is_said(chromium, example, tmp
         f"the true peak of {LABELS[1]} would pass −1 dBTP",
     ):  # fmt: skip
         assert words in text
+
+
+def test_a_pitch_that_is_still_on_its_way_from_earlier_glides_is_said_so(chromium, example, tmp_path):
+    data = json.loads(json.dumps(example[0]))
+    for facts in (candidate["facts"] for candidate in data["candidates"]):
+        for glide in facts["glides"]:
+            glide.update(landing_s=0.01, short_by_cents=0.0)
+    for candidate, short in zip(data["candidates"], (1294.0, 90.0, 0.0), strict=True):
+        candidate["facts"]["glides"][2].update(landing_s=None, short_by_cents=short, interval_semitones=-1.0)
+    path = tmp_path / "index.html"
+    write_page(path, data, example[1])
+    with opened(chromium, path) as tab:
+        lines = tab.page.locator("#figures-body ul.plain").first.locator("li").all_inner_texts()
+    assert "1294 cents away" in lines[0]
+    assert "still on its way from earlier glides" in lines[0]
+    assert "90 cents away" in lines[1]
+    assert "earlier glides" not in lines[1] + lines[2]
+
+
+def test_fields_and_choices_have_names_that_tell_them_apart(tab):
+    names = [f"{what} {side}, in seconds" for what in ("Loop", "Excerpt") for side in ("from", "to")]
+    names += ["Glides: in which order", "Gates: in which order", "Show which glides", "Show which gates"]
+    for name in names:
+        assert tab.page.get_by_label(name, exact=True).count() == 1, name
+
+
+def test_keys_are_not_shown_where_they_do_nothing(held_tab):
+    begin(held_tab)
+    assert held_tab.page.locator(".clip kbd:visible, .answers kbd:visible").count() == 5
+    held_tab.page.click("#give-up")
+    held_tab.page.uncheck("#single-keys")
+    begin(held_tab)
+    assert held_tab.page.locator(".clip kbd:visible, .answers kbd:visible").count() == 0
 
 
 # Safety and looks
@@ -442,6 +364,21 @@ def test_it_fits_every_width_and_is_readable_in_both_schemes(chromium, page, sch
         assert tab.complaints == []
 
 
+def test_long_labels_fit_a_narrow_screen(chromium, example, tmp_path):
+    data = json.loads(json.dumps(example[0]))
+    for number, candidate in enumerate(data["candidates"]):
+        candidate["label"] = f"{number} " + 14 * "rising "
+    data["candidates"][0]["label"] = 100 * "m"
+    path = tmp_path / "index.html"
+    write_page(path, data, example[1])
+    with opened(chromium, path, viewport={"width": 360, "height": 800}) as tab:
+        assert tab.page.evaluate("document.documentElement.scrollWidth") <= 360
+        for field in ("#first", "#second"):
+            box = tab.page.locator(field).bounding_box()
+            assert box["width"] > 100
+            assert box["x"] + box["width"] <= 360
+
+
 def test_each_candidates_line_differs_from_its_neighbours_in_colour_and_in_dashes(tab):
     """Colours of Okabe and Ito, "Color universal design", 2008 (from memory)."""
     looks = tab.page.eval_on_selector_all(
@@ -478,217 +415,3 @@ def test_the_position_moves_seldom_where_motion_is_not_wanted(chromium, page):
             })"""
         )
         assert changes[0] < changes[1] / 4
-
-
-# Blind listening
-
-
-def begin(tab, kind="abx", trials=5, listener="Ines"):
-    tab.page.fill("#listener", listener)
-    tab.page.check(f"#kind-{kind}")
-    if kind == "abx":
-        tab.page.fill("#trials", str(trials))
-    tab.page.click("#blind-form button[type=submit]")
-    assert tab.page.is_visible("#trial")
-
-
-def saved(tab, within="#result"):
-    """The sheet that is downloaded, accepted by what adds sheets up, and the name offered for its file."""
-    with tab.page.expect_download() as download:
-        tab.page.locator(f"{within} .save").last.click()
-    path = Path(download.value.path())
-    sheet = json.loads(path.read_text())
-    read = read_sheet(path)
-    assert (read.listener, read.finished) == (sheet["listener"], sheet["finished"])
-    return sheet, download.value.suggested_filename
-
-
-def test_an_abx_round_end_to_end(tab, example):
-    begin(tab, trials=12)
-    for trial in range(12):
-        assert tab.page.inner_text("#trial") == f"Trial {trial + 1} of 12"
-        tab.page.keyboard.press("1")  # not before X was heard
-        assert tab.page.inner_text("#trial") == f"Trial {trial + 1} of 12"
-        for key in "abx":
-            tab.page.keyboard.press(key)
-        tab.page.keyboard.press("1" if trial % 2 else "2")
-    sheet, name = saved(tab)
-    assert name.startswith("abx-ines-")
-    assert name.endswith(".json")
-    candidates = {each["settings_sha256"]: each["label"] for each in example[0]["candidates"]}
-    assert set(sheet) == {
-        "kind", "version", "set", "listener", "made", "test", "pair", "labels", "trials_planned", "trials",
-        "correct", "finished", "probability", "excerpt_s",
-    }  # fmt: skip
-    expected = {
-        "kind": "glidesmith listening sheet",
-        "version": 1,
-        "set": example[0]["set"],
-        "listener": "Ines",
-    }
-    expected |= {"test": "abx", "finished": True, "trials_planned": 12, "excerpt_s": sheet["excerpt_s"]}
-    assert expected.items() <= sheet.items()
-    assert [candidates[digest] for digest in sheet["pair"]] == sheet["labels"]
-    assert set(sheet["labels"]) == set(LABELS[:2])
-    assert [trial["answer"] for trial in sheet["trials"]] == [1, 0] * 6
-    assert all(trial["x"] in (0, 1) and trial["seconds"] >= 0.0 for trial in sheet["trials"])
-    assert sheet["correct"] == sum(trial["x"] == trial["answer"] for trial in sheet["trials"])
-    by_chance = binomtest(sheet["correct"], 12, 0.5, "greater").pvalue
-    assert sheet["probability"] == pytest.approx(by_chance, rel=1e-12)
-    assert f"{sheet['correct']} of 12 right" in tab.page.inner_text("#result")
-
-
-def test_x_is_what_the_sheet_says_and_switching_to_it_is_through_silence(chromium, tone_page, tones, example):
-    """Heard in each of five trials: A, X, B, with a silence before each that is the same for all."""
-    digests = [candidate["settings_sha256"] for candidate in example[0]["candidates"]]
-    clips = dict(zip(digests, map(decoded, tones), strict=True))
-    presses = []
-    for trial in range(5):
-        start_s = 1.5 + 1.2 * trial
-        presses += [(start_s, "a"), (start_s + 0.3, "x"), (start_s + 0.6, "b"), (start_s + 0.9, "1")]
-    with opened(chromium, tone_page, offline_s=8) as tab:
-        tab.page.click("#play")  # makes the context, so that the level has settled when the round begins
-        tab.page.click("#play")
-        begin(tab)
-        output, seen = tab.perform(presses)
-        sheet, _ = saved(tab)
-        assert tab.complaints == []
-    for trial, told in enumerate(sheet["trials"]):
-        begun_s = seen[4 * trial, 0] + AHEAD_S
-        for place, slot in ((0, 0), (1, told["x"]), (2, 1)):
-            pressed_s = seen[4 * trial + place, 0]
-            time = np.arange(round((pressed_s + 0.18) * SAMPLE_RATE), round((pressed_s + 0.28) * SAMPLE_RATE))
-            heard = at_position([clips[sheet["pair"][slot]]], 0, time / SAMPLE_RATE - begun_s)
-            np.testing.assert_allclose(output[time], LEVEL * heard, atol=1e-5)
-            if place:
-                silent_s = pressed_s + AHEAD_S + SWITCH_S + np.array([0.001, 0.074])
-                assert np.abs(output[slice(*np.round(silent_s * SAMPLE_RATE).astype(int))]).max() == 0.0
-    assert {trial["answer"] for trial in sheet["trials"]} == {0}
-
-
-def test_nothing_tells_which_is_which_during_a_round(tab, example):
-    tab.page.click(".go >> nth=0")
-    for kind in ("abx", "preference"):
-        begin(tab, kind)
-        tab.page.keyboard.press("a")
-        said = tab.page.evaluate("document.title + document.body.innerText").lower()
-        attributes = tab.page.inner_html("#blind").lower()
-        for candidate in example[0]["candidates"]:
-            digest = candidate["settings_sha256"][:12]
-            for secret in (candidate["label"], candidate["file"], digest, "−3.2", "−2.9"):
-                assert secret.lower() not in said
-                assert secret.lower() not in attributes
-        assert "night ferry" not in said
-        for part in ("#curves", "#transfer", "#figures", "#listen"):
-            assert not tab.page.is_visible(part)
-        tab.page.keyboard.press("2")
-        tab.page.click("#give-up")
-        assert tab.page.is_visible("#curves")
-        assert tab.page.title() == example[0]["title"]
-
-
-def test_a_round_given_up_is_recorded(tab):
-    begin(tab, trials=8)
-    for key in "xx1":
-        tab.page.keyboard.press(key)
-    tab.page.keyboard.press("x")
-    tab.page.click("#give-up")
-    assert "recorded as unfinished" in tab.page.inner_text("#result")
-    assert "right" not in tab.page.inner_text("#result")
-    sheet, _ = saved(tab)
-    assert sheet["finished"] is False
-    assert (len(sheet["trials"]), sheet["trials_planned"]) == (1, 8)
-
-
-def test_a_round_that_the_page_was_left_in_is_recorded(tab, page):
-    begin(tab, trials=8)
-    for key in "x1x2":
-        tab.page.keyboard.press(key)
-    tab.page.on("dialog", lambda dialog: dialog.accept())
-    tab.page.reload()
-    tab.wait_until_ready()
-    tab.requests[:] = tab.requests[:1]
-    assert "unfinished" in tab.page.inner_text("#record")
-    sheet, _ = saved(tab, "#record")
-    assert sheet["finished"] is False
-    assert len(sheet["trials"]) == 2
-
-
-def test_a_preference_round_end_to_end(tab, example):
-    begin(tab, "preference")
-    count = len(LABELS) * (len(LABELS) - 1) // 2
-    for pair in range(count):
-        assert tab.page.inner_text("#trial") == f"Pair {pair + 1} of {count}"
-        tab.page.keyboard.press("a")
-        tab.page.keyboard.press("1")  # not before both were heard
-        assert tab.page.inner_text("#trial") == f"Pair {pair + 1} of {count}"
-        tab.page.keyboard.press("b")
-        tab.page.keyboard.press("120"[pair])
-    sheet, name = saved(tab)
-    assert name.startswith("preference-ines-")
-    assert (sheet["test"], sheet["finished"]) == ("preference", True)
-    assert [each["label"] for each in sheet["candidates"]] == LABELS
-    digests = [each["settings_sha256"] for each in example[0]["candidates"]]
-    assert [each["settings_sha256"] for each in sheet["candidates"]] == digests
-    pairs = [(each["first"], each["second"]) for each in sheet["pairs"]]
-    assert {frozenset(pair) for pair in pairs} == {frozenset(pair) for pair in ((0, 1), (0, 2), (1, 2))}
-    assert [each["preferred"] for each in sheet["pairs"]] == [pairs[0][0], pairs[1][1], None]
-
-
-def test_orders_are_drawn_anew(chromium, page):
-    """Six rounds of each kind: that all were alike would have a chance under 1e-7."""
-    with opened(chromium, page) as tab:
-        orders, truths = set(), set()
-        for _ in range(6):
-            begin(tab, "preference")
-            for key in "ab1ab1ab1":
-                tab.page.keyboard.press(key)
-            orders.add(str([(each["first"], each["second"]) for each in saved(tab)[0]["pairs"]]))
-            begin(tab, "abx")
-            for key in "x1" * 5:
-                tab.page.keyboard.press(key)
-            truths.update(trial["x"] for trial in saved(tab)[0]["trials"])
-        assert len(orders) > 1
-        assert truths == {0, 1}
-
-
-def test_a_round_needs_a_listener_two_candidates_and_an_excerpt(tab):
-    def refused():
-        tab.page.click("#blind-form button[type=submit]")
-        assert not tab.page.is_visible("#trial")
-        assert tab.page.evaluate("document.activeElement.getAttribute('aria-invalid')") == "true"
-        return tab.page.inner_text("#blind-problem")
-
-    assert "listener's name" in refused()
-    tab.page.fill("#listener", "Ines")
-    tab.page.select_option("#second", "0")
-    assert "two different candidates" in refused()
-    tab.page.select_option("#second", "2")
-    for trials in ("4", "101", "7.5", ""):
-        tab.page.fill("#trials", trials)
-        assert "5 to 100 trials" in refused()
-    tab.page.fill("#trials", "5")
-    tab.page.fill("#excerpt-start", "3.0")
-    tab.page.fill("#excerpt-end", "3.1")
-    assert "an excerpt of at least 200 ms" in refused()
-
-
-def test_how_many_must_be_right_is_exact(tab):
-    """Every number of trials offered, by scipy; at 95 % also what tables of the sign test print: 9 of 10,
-    12 of 16, 15 of 20, 18 of 25, 32 of 50 (from memory)."""
-    tab.page.click("text=How many correct answers a given confidence needs")
-    rows = tab.page.locator("#needed-table tbody tr").all_inner_texts()
-    table = {int(row.split()[0]): row.split()[1:] for row in rows}
-    assert {n: int(table[n][0]) for n in (10, 16, 20, 25, 50)} == {10: 9, 16: 12, 20: 15, 25: 18, 50: 32}
-    for n in range(5, 101):
-        tab.page.fill("#trials", str(n))
-        told = tab.page.inner_text("#needed")
-        for confidence in (0.95, 0.99, 0.999):
-            tails = (binomtest(k, n, 0.5, "greater").pvalue for k in range(n + 1))
-            needed = next((k for k, tail in enumerate(tails) if tail <= 1.0 - confidence + 1e-12), None)
-            words = f"{needed} for {100 * confidence:g} %"
-            assert (needed is None) == (f"for {100 * confidence:g} %" not in told)
-            assert needed is None or words in told
-            if n in table:
-                place = (0.95, 0.99, 0.999).index(confidence)
-                assert table[n][place] == ("–" if needed is None else str(needed))

@@ -8,7 +8,7 @@ the sum matters, because a sum hides who heard what, and trials of one listener 
 other. Where the figures show nothing, the verdict says so.
 """
 
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from itertools import combinations
 from pathlib import Path
@@ -24,7 +24,15 @@ from glidesmith.binomial import (
     sign_test,
     trials_needed,
 )
-from glidesmith.sheets import AbxSheet, PreferenceSheet, Sheet, SheetError, accepted_sheets
+from glidesmith.sheets import (
+    AbxSheet,
+    EarlierRound,
+    PreferenceSheet,
+    Sheet,
+    SheetError,
+    accepted_sheets,
+    instant,
+)
 from glidesmith.text import shortened
 
 __all__ = [
@@ -53,6 +61,8 @@ REPEATED = (
     "more than one round of a listener is counted; rounds repeated until one turns out well prove nothing, "
     "so decide beforehand how many there are"
 )
+GIVEN_UP = "giving up when it goes badly makes the rest look better than it is"
+PICKED = "a result that is picked from several proves less than it seems"
 NO_PROOF_OF_SAMENESS = "this is no evidence that they sound the same"
 NO_PROOF_OF_EQUAL_LIKING = "this is no evidence that they are liked equally"
 
@@ -107,17 +117,69 @@ def tally_sheets(paths: Sequence[Path]) -> Tally:
     rounds = [sheet for sheet in sheets if isinstance(sheet, AbxSheet) and sheet.finished]
     given_up = [sheet for sheet in sheets if isinstance(sheet, AbxSheet) and not sheet.finished]
     preferences = [sheet for sheet in sheets if isinstance(sheet, PreferenceSheet) and sheet.finished]
+    missing, unlisted = _missing(sheets)
     facts: dict[str, object] = {
         "kind": "glidesmith tally",
         "version": 1,
         "set": sheets[0].set,
         "sheets": len(sheets),
-        "abx": _abx(rounds, given_up),
-        "preference": _preference(preferences),
+        "abx": _abx(rounds, given_up, missing),
+        "preference": _preference(preferences, missing),
         "unfinished": [_unfinished(sheet) for sheet in sheets if not sheet.finished],
+        "earlier_missing": {
+            "count": len(missing) + unlisted,
+            "rounds": [_missing_facts(round_) for round_ in missing],
+        },
         "refused": list(refused),
     }
     return Tally(facts, refused)
+
+
+def _missing(sheets: Sequence[Sheet]) -> tuple[list[EarlierRound], int]:
+    """Earlier rounds that sheets tell of and that are not among them, and how many more no sheet lists."""
+    told: dict[str, EarlierRound] = {}
+    for sheet in sorted(sheets, key=lambda sheet: instant(sheet.made)):
+        told.update((each.id, each) for each in sheet.earlier.rounds)
+    given = {sheet.id: sheet.made for sheet in sheets if sheet.id}
+    known = {each.id: each.made for each in told.values()} | given
+    missing = sorted((each for each in told.values() if each.id not in given), key=lambda each: each.made)
+    return missing, max(_unlisted(sheet, known) for sheet in sheets)
+
+
+def _unlisted(sheet: Sheet, known: Mapping[str, str]) -> int:
+    """How many of a sheet's earlier rounds neither it nor another sheet lists."""
+    listed = {each.id for each in sheet.earlier.rounds}
+    before = [
+        made for key, made in known.items() if key not in listed and instant(made) < instant(sheet.made)
+    ]
+    return max(sheet.earlier.count - len(listed) - len(before), 0)
+
+
+def _missing_facts(told: EarlierRound) -> dict[str, object]:
+    return {
+        "test": told.test,
+        "listener": told.listener,
+        "made": told.made,
+        "labels": list(told.labels),
+        "answered": told.answered,
+        "planned": told.planned,
+        "finished": told.finished,
+    }
+
+
+def _fewest(
+    trials: int, best: Callable[[int], float], place: int, probabilities: Sequence[float]
+) -> int | None:
+    """How many trials could show something, where so many can't; None where they can.
+
+    ``best(n)`` is the probability of the clearest result of n trials. It is corrected as the one at ``place``
+    among the ``probabilities`` of all pairs.
+    """
+
+    def could(n: int) -> bool:
+        return holm([*probabilities[:place], best(n), *probabilities[place + 1 :]])[place] < SIGNIFICANCE
+
+    return None if could(trials) else next(n for n in range(trials, 1000) if could(n))
 
 
 def _names(sheets: Sequence[Sheet]) -> list[str]:
@@ -131,8 +193,10 @@ def _names(sheets: Sequence[Sheet]) -> list[str]:
     ]
 
 
-def _abx(sheets: Sequence[AbxSheet], given_up: Sequence[AbxSheet]) -> dict[str, object] | None:
-    """Every pair of candidates that was listened to, with its listeners and how many rounds were given up."""
+def _abx(
+    sheets: Sequence[AbxSheet], given_up: Sequence[AbxSheet], missing: Sequence[EarlierRound]
+) -> dict[str, object] | None:
+    """Every pair of candidates that was listened to, with its listeners and what rounds are not counted."""
     if not sheets:
         return None
     names = _names(sheets)
@@ -140,11 +204,19 @@ def _abx(sheets: Sequence[AbxSheet], given_up: Sequence[AbxSheet]) -> dict[str, 
     for name, sheet in zip(names, sheets, strict=True):
         pairs.setdefault(frozenset(sheet.pair), []).append((name, sheet))
     pooled = [_score("", (sheet for _, sheet in members)) for members in pairs.values()]
-    corrected = holm([score.probability for score in pooled])
-    entries = [
-        _abx_pair(members, score, probability, len(pairs), sum(frozenset(s.pair) == pair for s in given_up))
-        for (pair, members), score, probability in zip(pairs.items(), pooled, corrected, strict=True)
-    ]
+    probabilities = [score.probability for score in pooled]
+    corrected = holm(probabilities)
+    entries = []
+    for place, (pair, members) in enumerate(pairs.items()):
+        entry = _abx_pair(members, pooled[place], corrected[place])
+        fewest = _fewest(pooled[place].trials, lambda n: guessing_probability(n, n), place, probabilities)
+        uncounted = _uncounted(
+            sum(frozenset(sheet.pair) == pair for sheet in given_up),
+            sum(each.pair == pair for each in missing),
+        )
+        entry["verdict"] = _abx_verdict(pooled[place], corrected[place], fewest)
+        entry["warnings"] = [*_abx_warnings([name for name, _ in members]), *uncounted]
+        entries.append(entry)
     return {"test": ABX_TEST, "confidence": CONFIDENCE, "pairs": entries}
 
 
@@ -153,10 +225,7 @@ def _score(name: str, sheets: Iterable[AbxSheet]) -> Score:
     return Score(name, len(rounds), sum(s.correct for s in rounds), sum(s.trials for s in rounds))
 
 
-def _abx_pair(
-    members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected: float, tests: int, given_up: int
-) -> dict[str, object]:
-    """One pair, of the ``tests`` that are corrected for; ``given_up`` rounds of it were not finished."""
+def _abx_pair(members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected: float) -> dict[str, object]:
     first = members[0][1]
     listeners = [
         _score(name, (sheet for member, sheet in members if member == name))
@@ -165,35 +234,35 @@ def _abx_pair(
     own = holm([score.probability for score in listeners])
     total = pooled.as_dict(corrected)
     del total["listener"]
-    warnings = [DEPENDENT] if len(listeners) > 1 else []
-    if any(score.rounds > 1 for score in listeners):
-        warnings.append(REPEATED)
-    if given_up:
-        warnings.append(
-            f"{_counted(given_up, 'round')} of this pair given up and not counted; giving up when it goes "
-            "badly makes the rest look better than it is"
-        )
     return {
         "pair": list(first.pair),
         "labels": list(first.labels),
         **total,
         "evidence": corrected < SIGNIFICANCE,
-        "verdict": _abx_verdict(pooled, corrected, tests),
         "listeners": [score.as_dict(value) for score, value in zip(listeners, own, strict=True)],
-        "warnings": warnings,
     }
 
 
-def _abx_verdict(score: Score, corrected: float, tests: int) -> str:
+def _abx_warnings(names: Sequence[str]) -> list[str]:
+    """What to bear in mind of rounds by these listeners."""
+    several = [DEPENDENT] if len(set(names)) > 1 else []
+    return [*several, REPEATED] if len(set(names)) < len(names) else several
+
+
+def _uncounted(given_up: int, missing: int) -> Iterator[str]:
+    """Warnings of a pair's rounds that are not counted."""
+    if given_up:
+        yield f"{_counted(given_up, 'round')} of this pair given up and not counted; {GIVEN_UP}"
+    if missing:
+        yield f"{_counted(missing, 'earlier round')} of this pair not among these files; {PICKED}"
+
+
+def _abx_verdict(score: Score, corrected: float, fewest: int | None) -> str:
+    """``fewest``: see `_fewest`."""
     if corrected < SIGNIFICANCE:
         return f"evidence that the two can be told apart: {_by_guessing(corrected)}"
-    needed = 1.0 - SIGNIFICANCE / tests
-    if critical_correct(score.trials, needed) is None:
-        fewest = next(n for n in range(score.trials, 1000) if critical_correct(n, needed))
-        return (
-            f"no evidence, and there could be none: {score.trials} trials are too few to show anything, "
-            f"{fewest} are the fewest"
-        )
+    if fewest is not None:
+        return f"no evidence, and there could be none: {_too_few(score.trials, 'trial', fewest)}"
     so_few = guessing_probability(score.trials - score.correct, score.trials)
     if so_few < SIGNIFICANCE:
         return (
@@ -201,6 +270,11 @@ def _abx_verdict(score: Score, corrected: float, tests: int) -> str:
             f"probability of only {_rounded(so_few)}: were the answers the wrong way round?"
         )
     return f"no evidence that the two can be told apart: {_by_guessing(corrected)}; {NO_PROOF_OF_SAMENESS}"
+
+
+def _too_few(count: int, noun: str, fewest: int) -> str:
+    verb = "is" if count == 1 else "are"
+    return f"{_counted(count, noun)} {verb} too few to show anything, {fewest} are the fewest"
 
 
 def _by_guessing(probability: float) -> str:
@@ -211,7 +285,9 @@ def _rounded(probability: float) -> str:
     return f"{probability:.3f}" if probability >= 0.001 else f"{probability:.1e}"
 
 
-def _preference(sheets: Sequence[PreferenceSheet]) -> dict[str, object] | None:
+def _preference(
+    sheets: Sequence[PreferenceSheet], missing: Sequence[EarlierRound]
+) -> dict[str, object] | None:
     """Every pair of candidates, with who won how often, and each listener's choices."""
     if not sheets:
         return None
@@ -225,35 +301,17 @@ def _preference(sheets: Sequence[PreferenceSheet]) -> dict[str, object] | None:
         for judgement in sheet.judgements:
             choices.setdefault(frozenset(judgement.pair), []).append((name, judgement.preferred))
     pairs = [pair for pair in combinations(labels, 2) if frozenset(pair) in choices]
-    wins = [[_count(choices[frozenset(pair)], digest) for digest in pair] for pair in pairs]
-    probabilities = [sign_test(*counts) for counts in wins]
-    corrected = holm(probabilities)
-    entries = []
-    for pair, counts, raw, probability in zip(pairs, wins, probabilities, corrected, strict=True):
-        judged = choices[frozenset(pair)]
-        both = [labels[digest] for digest in pair]
-        entries.append(
-            {
-                "pair": list(pair),
-                "labels": both,
-                "wins": counts,
-                "no_preference": _count(judged, None),
-                "probability": raw,
-                "probability_corrected": probability,
-                "evidence": probability < SIGNIFICANCE,
-                "verdict": _preference_verdict(both, counts, probability),
-                "listeners": [
-                    {"listener": name, "preferred": None if chosen is None else labels[chosen]}
-                    for name, chosen in judged
-                ],
-            }
-        )
+    entries = _preference_pairs(labels, {pair: choices[frozenset(pair)] for pair in pairs})
     totals = [
-        {"label": label, "settings_sha256": digest, "wins": _total_wins(digest, pairs, wins)}
+        {"label": label, "settings_sha256": digest, "wins": _total_wins(digest, entries)}
         for digest, label in labels.items()
     ]
     totals.sort(key=lambda total: -int(str(total["wins"])))
     warnings = [REPEATED] if len(set(names)) < len(names) else []
+    absent = sum(each.test == "preference" for each in missing)
+    if absent:
+        rounds = _counted(absent, "earlier round")
+        warnings.append(f"{rounds} of preferences not among these files; {PICKED}")
     return {
         "test": PREFERENCE_TEST,
         "rounds": len(sheets),
@@ -263,19 +321,56 @@ def _preference(sheets: Sequence[PreferenceSheet]) -> dict[str, object] | None:
     }
 
 
+def _preference_pairs(
+    labels: Mapping[str, str], choices: Mapping[tuple[str, str], Sequence[tuple[str, str | None]]]
+) -> list[dict[str, Any]]:
+    """What listeners chose of each pair of hashes, and what that shows."""
+    wins = [[_count(judged, digest) for digest in pair] for pair, judged in choices.items()]
+    probabilities = [sign_test(*counts) for counts in wins]
+    corrected = holm(probabilities)
+    entries = []
+    for place, (pair, judged) in enumerate(choices.items()):
+        both = [labels[digest] for digest in pair]
+        fewest = _fewest(sum(wins[place]), lambda n: sign_test(n, 0), place, probabilities)
+        entries.append(
+            {
+                "pair": list(pair),
+                "labels": both,
+                "wins": wins[place],
+                "no_preference": _count(judged, None),
+                "probability": probabilities[place],
+                "probability_corrected": corrected[place],
+                "evidence": corrected[place] < SIGNIFICANCE,
+                "verdict": _preference_verdict(both, wins[place], corrected[place], fewest),
+                "listeners": [
+                    {"listener": name, "preferred": None if chosen is None else labels[chosen]}
+                    for name, chosen in judged
+                ],
+            }
+        )
+    return entries
+
+
 def _count(judged: Sequence[tuple[str, str | None]], chosen: str | None) -> int:
     return sum(choice == chosen for _, choice in judged)
 
 
-def _total_wins(digest: str, pairs: Sequence[tuple[str, str]], wins: Sequence[Sequence[int]]) -> int:
-    return sum(counts[pair.index(digest)] for pair, counts in zip(pairs, wins, strict=True) if digest in pair)
+def _total_wins(digest: str, entries: Sequence[Mapping[str, Any]]) -> int:
+    return sum(each["wins"][each["pair"].index(digest)] for each in entries if digest in each["pair"])
 
 
-def _preference_verdict(labels: Sequence[str], wins: Sequence[int], probability: float) -> str:
-    if probability >= SIGNIFICANCE:
-        return f"no evidence of a preference (probability {_rounded(probability)})"
-    better = labels[0] if wins[0] > wins[1] else labels[1]
-    return f"{better} is preferred (probability {_rounded(probability)})"
+def _preference_verdict(
+    labels: Sequence[str], wins: Sequence[int], probability: float, fewest: int | None
+) -> str:
+    """``fewest``: see `_fewest`."""
+    if probability < SIGNIFICANCE:
+        better = labels[0] if wins[0] > wins[1] else labels[1]
+        return f"{better} is preferred (probability {_rounded(probability)})"
+    if fewest is not None:
+        return (
+            f"no evidence of a preference, and there could be none: {_too_few(sum(wins), 'choice', fewest)}"
+        )
+    return f"no evidence of a preference (probability {_rounded(probability)})"
 
 
 def _unfinished(sheet: Sheet) -> dict[str, object]:
@@ -302,6 +397,7 @@ def tally_text(tally: Tally) -> str:
     if facts["unfinished"]:
         lines += ["", "Not finished, and not counted:"]
         lines += [f"  {_unfinished_line(told)}" for told in facts["unfinished"]]
+    lines += _missing_lines(facts["earlier_missing"])
     if not facts["abx"] and not facts["preference"]:
         lines += ["", "No finished rounds: there is nothing to add up."]
     return "\n".join(lines)
@@ -359,3 +455,21 @@ def _unfinished_line(told: Mapping[str, Any]) -> str:
             f"correct, {told['trials_planned']} planned"
         )
     return f"{who}: preference, {told['pairs']} of {told['pairs_planned']} pairs"
+
+
+def _missing_lines(missing: Mapping[str, Any]) -> Iterator[str]:
+    if not missing["count"]:
+        return
+    yield ""
+    yield f"{_counted(missing['count'], 'earlier round')} not among these files, on the same devices:"
+    for told in missing["rounds"]:
+        test = "preference" if told["test"] == "preference" else "A/B/X"
+        between = f" {' or '.join(told['labels'])}," if told["labels"] else ""
+        state = "finished" if told["finished"] else "not finished"
+        yield (
+            f"  {test},{between} {told['listener'] or 'no name'}, {told['made']}: "
+            f"{told['answered']} of {told['planned']} answered, {state}"
+        )
+    unlisted = missing["count"] - len(missing["rounds"])
+    if unlisted:
+        yield f"  and {unlisted:,} that no sheet lists"

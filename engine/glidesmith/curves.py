@@ -27,10 +27,13 @@ if TYPE_CHECKING:
     Line = list[list[float]]
 
 MIDDLE_C = 60
-WIDTH, HEIGHT = 4800.0, 1200.0
-"""A wide screen's picture at fourfold zoom, in pixels: a line is at most one of them off."""
+WIDTH, HEIGHT = 38_400.0, 9600.0
+"""A wide screen's picture at thirty-twofold zoom, in pixels: a line is at most one of them off."""
 
-MOST_POINTS = 1500
+LONGEST_PIXEL_S = 0.0005
+"""What a pixel is at most in time, so that a single glide of a long phrase can be looked at too."""
+
+MOST_POINTS = 4000
 """Of one line; where it would have more, it is drawn more coarsely."""
 
 _LEAST_OCTAVES = 0.5
@@ -87,9 +90,10 @@ def line(
     ends = np.array([(s.begin_s, s.end_s, s.first, s.last) for s in stretches])
     ends[:, 2:] = shown(ends[:, 2:].reshape(-1)).reshape(-1, 2)
     moves = np.array([stretch.moves for stretch in stretches])
+    pixel_s, pixel_height = min(end_s / WIDTH, LONGEST_PIXEL_S), span / HEIGHT
     coarseness = 1.0
     while True:
-        points = _refined(course, shown, ends, moves, coarseness * end_s / WIDTH, coarseness * span / HEIGHT)
+        points = _refined(course, shown, ends, moves, coarseness * pixel_s, coarseness * pixel_height)
         if len(points) <= max(MOST_POINTS, 2 * len(stretches)) or coarseness > 64.0:
             return _rounded(points)
         coarseness *= 2.0

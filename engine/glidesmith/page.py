@@ -28,7 +28,11 @@ SCRIPTS = (
     "graph.js",
     "transfer.js",
     "figures.js",
+    "record.js",
     "rounds.js",
+    "setup.js",
+    "blind.js",
+    "bar.js",
     "page.js",
 )
 

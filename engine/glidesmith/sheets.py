@@ -1,8 +1,9 @@
-"""Listening sheets: the JSON files in which a comparison page saves one round of blind listening.
+"""Listening sheets: the JSON files in which a comparison page saves rounds of blind listening.
 
-A sheet is believed only where it says one thing throughout: hashes that are hashes, answers that add up to
-the number of correct ones, a probability that is theirs. Sheets come from other people's machines: their size
-is bounded, and whatever they hold is told in a line.
+A file holds one sheet, or all that a browser has kept of a set. A sheet is believed only where it says one
+thing throughout: hashes that are hashes, answers that add up to the number of correct ones, a probability
+that is theirs. Sheets come from other people's machines: their size is bounded, and whatever they hold is
+told in a line.
 """
 
 import json
@@ -18,11 +19,16 @@ from glidesmith.errors import GlidesmithError
 from glidesmith.text import decoded, printable, read_bytes, shortened, shown
 
 SHEET_KIND = "glidesmith listening sheet"
+SHEETS_KIND = "glidesmith listening sheets"
 SHEET_VERSION = 1
-MOST_SHEET_BYTES = 1_000_000
+MOST_SHEET_BYTES = 10_000_000
+MOST_SHEETS = 1000
 MOST_CANDIDATES = 256
+MOST_EARLIER = 100_000
 
 _LONGEST_NAME = 100
+_LONGEST_ID = 64
+_MOST_LISTED = 1000
 _HASH_DIGITS = 64
 _HEXADECIMAL = frozenset("0123456789abcdef")
 _PROBABILITY_AGREEMENT = 1e-6
@@ -33,14 +39,45 @@ class SheetError(GlidesmithError, ValueError):
 
 
 @dataclass(frozen=True, slots=True)
+class EarlierRound:
+    """What a sheet tells of a round that was begun before it on the same device.
+
+    ``pair`` are the settings' hashes of A and B, and ``labels`` their names; both are empty for preferences.
+    """
+
+    id: str
+    test: str
+    listener: str
+    made: str
+    finished: bool
+    answered: int
+    planned: int
+    pair: frozenset[str]
+    labels: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Earlier:
+    """How many rounds of the set were begun on the device before, and the latest of them, in order."""
+
+    count: int = 0
+    rounds: tuple[EarlierRound, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
 class AbxSheet:
-    """One round of A/B/X. ``pair`` are the settings' hashes and ``labels`` the names of A and B."""
+    """One round of A/B/X. ``pair`` are the settings' hashes and ``labels`` the names of A and B.
+
+    ``id`` is empty, and ``earlier`` tells of no rounds, where the page didn't save them.
+    """
 
     path: Path
     set: str
     listener: str
     made: str
     finished: bool
+    id: str
+    earlier: Earlier
     pair: tuple[str, str]
     labels: tuple[str, str]
     planned: int
@@ -66,6 +103,8 @@ class PreferenceSheet:
     listener: str
     made: str
     finished: bool
+    id: str
+    earlier: Earlier
     labels: Mapping[str, str]
     judgements: tuple[Judgement, ...]
 
@@ -78,23 +117,59 @@ def read_sheet(path: Path) -> Sheet:
 
     Raises SheetError, one line: no such file, no listening sheet, damaged or inconsistent.
     """
+    return _sheet(path, printable(str(path)), _content(path))
+
+
+def read_sheets(path: Path) -> tuple[list[Sheet], list[SheetError]]:
+    """The sheets of a file that holds one or several, and an error of one line for each that is no good.
+
+    Raises SheetError, one line, where the file itself is none.
+    """
+    where, content = printable(str(path)), _content(path)
+    if not isinstance(content, dict) or content.get("kind") != SHEETS_KIND:
+        return [_sheet(path, where, content)], []
+    _check_version(where, content)
+    rows = content.get("sheets")
+    if not isinstance(rows, list) or not 1 <= len(rows) <= MOST_SHEETS:
+        raise SheetError(f"{where}: is damaged: its sheets are not a list of 1 to {MOST_SHEETS:,}")
+    sheets: list[Sheet] = []
+    errors: list[SheetError] = []
+    for number, row in enumerate(rows, 1):
+        try:
+            sheets.append(_sheet(path, f"{where}: sheet {number}", row))
+        except SheetError as problem:
+            errors.append(problem)
+    return sheets, errors
+
+
+def _content(path: Path) -> object:
     where = printable(str(path))
     text = decoded(read_bytes(path, MOST_SHEET_BYTES, SheetError), where, SheetError)
     try:
-        content = json.loads(text, parse_constant=_no_constant)
+        content: object = json.loads(text, parse_constant=_no_constant)
     except RecursionError:
         raise SheetError(f"{where}: is nested far too deeply for a listening sheet") from None
     except ValueError as problem:
         raise SheetError(f"{where}: is damaged: no JSON ({shortened(str(problem), 80)})") from None
+    return content
+
+
+def _sheet(path: Path, where: str, content: object) -> Sheet:
     if not isinstance(content, dict) or content.get("kind") != SHEET_KIND:
         raise SheetError(f'{where}: is no listening sheet (its kind is not "{SHEET_KIND}")')
-    if content.get("version") != SHEET_VERSION or isinstance(content.get("version"), bool):
-        found = shown(content.get("version"))
-        raise SheetError(f"{where}: is a sheet of version {found}; this reads version {SHEET_VERSION}")
+    _check_version(where, content)
     try:
         return _checked_sheet(path, _Fields(content))
     except _FaultError as fault:
         raise SheetError(f"{where}: is damaged or inconsistent: {fault}") from None
+
+
+def _check_version(where: str, content: Mapping[str, object]) -> None:
+    version = content.get("version")
+    if version != SHEET_VERSION or isinstance(version, bool):
+        raise SheetError(
+            f"{where}: is a sheet of version {shown(version)}; this reads version {SHEET_VERSION}"
+        )
 
 
 def _no_constant(name: str) -> None:
@@ -150,6 +225,33 @@ class _Fields:
             raise _FaultError(f"{self._where}{name} has {len(rows):,} entries, and the most is {most:,}")
         return rows
 
+    def moment(self, name: str) -> str:
+        made = self.text(name)
+        try:
+            datetime.fromisoformat(made)
+        except ValueError:
+            raise _FaultError(f"{self._where}{name} is {shown(made)}, not a date and time") from None
+        return made
+
+    def name(self, name: str) -> str:
+        """What people call something: short, and without spaces that don't show."""
+        return " ".join(shortened(self.text(name), _LONGEST_NAME).split())
+
+    def names(self, name: str, most: int) -> tuple[str, ...]:
+        return tuple(shortened(str(value), _LONGEST_NAME) for value in self.rows(name, most))
+
+    def id(self) -> str:
+        text = self.text("id")
+        if not (0 < len(text) <= _LONGEST_ID and text.isascii() and text.isprintable()):
+            raise _FaultError(f"{self._where}id is {shown(text)}, not 1 to {_LONGEST_ID} plain characters")
+        return text
+
+    def part(self, name: str) -> "_Fields":
+        return _Fields(self._content[name], f"{self._where}{name}")
+
+    def has(self, name: str) -> bool:
+        return name in self._content
+
     def digest(self, name: str) -> str:
         return _digest(self.text(name), f"{self._where}{name}")
 
@@ -165,18 +267,14 @@ def _digest(value: object, name: str) -> str:
 
 
 def _checked_sheet(path: Path, fields: _Fields) -> Sheet:
-    made = fields.text("made")
-    try:
-        datetime.fromisoformat(made)
-    except ValueError:
-        raise _FaultError(f"made is {shown(made)}, not a date and time") from None
-    listener = " ".join(shortened(fields.text("listener"), _LONGEST_NAME).split())
     shared = {
         "path": path,
         "set": fields.digest("set"),
-        "listener": listener,
-        "made": made,
+        "listener": fields.name("listener"),
+        "made": fields.moment("made"),
         "finished": fields.flag("finished"),
+        "id": fields.id() if fields.has("id") else "",
+        "earlier": _earlier(fields.part("earlier")) if fields.has("earlier") else Earlier(),
     }
     test = fields.text("test")
     if test == "abx":
@@ -186,9 +284,33 @@ def _checked_sheet(path: Path, fields: _Fields) -> Sheet:
     raise _FaultError(f'test is {shown(test)}, not "abx" or "preference"')
 
 
+def _earlier(fields: _Fields) -> Earlier:
+    rows = fields.rows("rounds", _MOST_LISTED)
+    rounds = tuple(_earlier_round(_Fields(row, f"earlier round {n}")) for n, row in enumerate(rows, 1))
+    count = fields.whole("count", 0, MOST_EARLIER)
+    if count < len(rounds):
+        raise _FaultError(f"it tells of {count} earlier rounds, and lists {len(rounds)}")
+    return Earlier(count, rounds)
+
+
+def _earlier_round(fields: _Fields) -> EarlierRound:
+    pair = fields.rows("pair", 2) if fields.has("pair") else []
+    return EarlierRound(
+        id=fields.id(),
+        test=fields.name("test"),
+        listener=fields.name("listener"),
+        made=fields.moment("made"),
+        finished=fields.flag("finished"),
+        answered=fields.whole("answered", 0, MOST_CANDIDATES**2),
+        planned=fields.whole("planned", 0, MOST_CANDIDATES**2),
+        pair=frozenset(_digest(value, "pair") for value in pair),
+        labels=fields.names("labels", 2) if fields.has("labels") else (),
+    )
+
+
 def _abx_sheet(shared: dict[str, Any], fields: _Fields) -> AbxSheet:
     pair = tuple(_digest(value, "pair") for value in fields.rows("pair", 2))
-    labels = tuple(shortened(str(value), _LONGEST_NAME) for value in fields.rows("labels", 2))
+    labels = fields.names("labels", 2)
     if len(pair) != 2 or len(labels) != 2:
         raise _FaultError("pair and labels name not two candidates each")
     if pair[0] == pair[1]:
@@ -264,36 +386,52 @@ def accepted_sheets(paths: Sequence[Path]) -> tuple[list[Sheet], list[SheetError
     """
     sheets: list[Sheet] = []
     errors: list[SheetError] = []
-    seen: dict[object, Path] = {}
+    seen: dict[object, Sheet] = {}
     for path in paths:
-        where = printable(str(path))
         try:
-            sheet = read_sheet(path)
+            found, damaged = read_sheets(path)
         except SheetError as problem:
-            errors.append(problem)
-            continue
-        twin = seen.setdefault(_identity(sheet), path)
-        if sheets and sheet.set != sheets[0].set:
-            first = printable(str(sheets[0].path))
-            errors.append(SheetError(f"{where}: is of another set than {first}; tally each set by itself"))
-        elif twin is not path:
-            errors.append(SheetError(f"{where}: is the same round as {printable(str(twin))}; give it once"))
-        else:
-            sheets.append(sheet)
+            found, damaged = [], [problem]
+        errors += damaged
+        for sheet in found:
+            fault = _misfit(sheet, sheets, seen)
+            if fault:
+                errors.append(SheetError(f"{printable(str(path))}: {fault}"))
+            else:
+                sheets.append(sheet)
     return sheets, errors
 
 
-def _identity(sheet: Sheet) -> object:
+def _misfit(sheet: Sheet, sheets: Sequence[Sheet], seen: dict[object, Sheet]) -> str | None:
+    """Why a sheet can't be added to others, of which ``seen`` holds what makes each the only one."""
+    heard = _heard(sheet)
+    twin = seen.setdefault(heard, sheet)
+    namesake = seen.setdefault((sheet.set, sheet.id), sheet) if sheet.id else sheet
+    if sheets and sheet.set != sheets[0].set:
+        first = printable(str(sheets[0].path))
+        return f"is of another set than {first}; tally each set by itself"
+    if twin is not sheet:
+        return f"is the same round as {_where(twin, sheet)}; give it once"
+    if namesake is not sheet:
+        return f"is the same round as {_where(namesake, sheet)}, with other contents; find out which is right"
+    return None
+
+
+def _where(twin: Sheet, sheet: Sheet) -> str:
+    return "another in this file" if twin.path is sheet.path else f"in {printable(str(twin.path))}"
+
+
+def _heard(sheet: Sheet) -> object:
     """What two copies of one sheet have in common."""
     heard: object = None
     if isinstance(sheet, AbxSheet):
         heard = (frozenset(sheet.pair), sheet.trials, sheet.correct, sheet.seconds)
     else:
         heard = sheet.judgements
-    return (sheet.set, sheet.listener.strip().casefold(), _instant(sheet.made), heard)
+    return (sheet.set, sheet.listener.strip().casefold(), instant(sheet.made), heard)
 
 
-def _instant(made: str) -> float:
+def instant(made: str) -> float:
     """The moment that a date and time names, however it is written; one without a zone counts as UTC."""
     moment = datetime.fromisoformat(made)
     return (moment if moment.tzinfo else moment.replace(tzinfo=UTC)).timestamp()

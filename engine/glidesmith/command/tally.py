@@ -16,8 +16,9 @@ SOME_FAILED = 1
 def command(sheets: tuple[Path, ...], as_json: bool) -> int:
     """Add up the listening sheets that a comparison page saved.
 
-    Each FILE is one listener's round of A/B/X trials or of preferences; all are of one comparison set. A
-    sheet that is damaged, inconsistent, of another set or there twice is named and left out.
+    Each FILE holds one listener's round of A/B/X trials or of preferences, or all rounds that a browser
+    kept; all are of one comparison set. A sheet that is damaged, inconsistent, of another set or there twice
+    is named and left out, and earlier rounds that are not among the files are told.
 
     \b
     Example:

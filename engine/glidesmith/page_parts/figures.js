@@ -50,7 +50,8 @@ class Figures {
     }
     const worst = never.reduce((one, other) => (other.short_by_cents > one.short_by_cents ? other : one));
     const many = `${never.length} of ${counted(glides.length, "glide")} never land${never.length === 1 ? "s" : ""}`;
-    return `${many} before the next change; the farthest off stops ${cents(worst.short_by_cents)} short (${placeOf(worst)}).`;
+    const late = worst.short_by_cents > 100 * Math.abs(worst.interval_semitones) ? ", where the pitch is still on its way from earlier glides" : "";
+    return `${many} before the next change; the one farthest from its note is then still ${cents(worst.short_by_cents)} away (${placeOf(worst)}${late}).`;
   }
 
   equalWords() {
@@ -140,6 +141,8 @@ class Figures {
     const said = element("caption", {}, agreement(differing, rows.length, noun));
     const table = element("table", { class: "compared" }, said, this.heads(head, "Apart by"), body);
     const controls = element("p", { class: "row choices" }, element("label", {}, `${caption}: `, order), element("label", {}, "Show ", extent));
+    order.setAttribute("aria-label", `${caption}: in which order`);
+    extent.setAttribute("aria-label", `Show which ${noun}s`);
     return [element("h3", {}, caption), element("p", { class: "aside" }, note), controls, scrolled(table, caption)];
   }
 
@@ -154,7 +157,7 @@ class Figures {
 
   loudnessTable() {
     const { loudness } = this.data;
-    const columns = ["Candidate", "Loudness", "True peak", "Gain applied", "File"];
+    const columns = ["Candidate", "Loudness", "True peak", "Gain for equal loudness", "File"];
     const head = element("tr", {}, ...columns.map((text) => element("th", { scope: "col" }, text)));
     const rows = this.candidates.map((candidate, index) => element("tr", {},
       element("th", { scope: "row" }, ...this.whose(index)),
@@ -274,7 +277,7 @@ function comparedRow(row, first, cell) {
 function glideCell(glide) {
   const landed = glide.landing_s !== null;
   const words = landed ? [glide.landing_s === 0 ? "at once" : duration(glide.landing_s)]
-    : [element("b", { class: "never" }, "never"), `, ${cents(glide.short_by_cents)} short`];
+    : [element("b", { class: "never" }, "never"), `, ${cents(glide.short_by_cents)} away`];
   const bar = element("span", { class: "bar", "aria-hidden": "true" }, element("span"));
   bar.firstChild.style.width = `${100 * glide.in_tune_fraction}%`;
   const inTune = element("small", { class: "share" }, bar, element("span", {}, `${share(glide.in_tune_fraction)} in tune`));

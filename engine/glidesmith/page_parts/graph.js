@@ -1,6 +1,6 @@
 // The curves over time: a ruler, pitch, gain. All that is drawn is drawn anew when the view changes.
 
-const LEFT = 46;
+const [LEFT, LEFT_WITH_CENTS] = [46, 68]; // room for the labels of pitches: "C#4", "C#4 +40"
 const RIGHT = 12;
 const RULER = 24;
 const LANE_GAP = 12;
@@ -51,13 +51,25 @@ class Graph {
     const span = clamp((this.view.end - this.view.start) / factor, SHORTEST_VIEW_S, this.length);
     const part = (about - this.view.start) / (this.view.end - this.view.start);
     this.place(about - part * span, span);
+    this.keepPitchInView();
   }
 
-  zoomPitch(factor, about = (this.view.low + this.view.high) / 2) {
+  zoomPitch(factor, about) {
     const { low, high } = this.view;
     const span = clamp((high - low) / factor, LEAST_OCTAVES, this.whole.high - this.whole.low);
-    const part = (about - low) / (high - low);
-    this.placePitch(about - part * span, span);
+    if (about === undefined) this.placePitch(this.chosenPitch() - span / 2, span);
+    else this.placePitch(about - ((about - low) / (high - low)) * span, span);
+  }
+
+  // The chosen candidate's, where keys zoom about.
+  chosenPitch() {
+    return valueAt(this.data.candidates[this.sound.chosen].curves.pitch, this.centre());
+  }
+
+  keepPitchInView() {
+    const { low, high } = this.view;
+    const pitch = this.chosenPitch();
+    if (pitch < low || pitch > high) this.placePitch(pitch - (high - low) / 2, high - low);
   }
 
   pan(seconds, octaves = 0) {
@@ -107,12 +119,14 @@ class Graph {
     this.gainTop = this.pitchBottom + LANE_GAP;
     this.gainBottom = this.height - AXIS;
     const { start, end, low, high } = this.view;
-    const across = (this.width - LEFT - RIGHT) / (end - start);
+    this.pitchStep = pitchStep((this.pitchBottom - this.pitchTop) / (12 * (high - low)) / 15);
+    this.left = this.pitchStep < 1 ? LEFT_WITH_CENTS : LEFT;
+    const across = (this.width - this.left - RIGHT) / (end - start);
     const up = (this.pitchBottom - this.pitchTop) / (high - low);
-    this.x = (time) => LEFT + (time - start) * across;
+    this.x = (time) => this.left + (time - start) * across;
     this.y = (octaves) => this.pitchBottom - (octaves - low) * up;
     this.yGain = (gain) => this.gainBottom - 2 - gain * (this.gainBottom - this.gainTop - 4);
-    this.timeAt = (x) => start + (x - LEFT) / across;
+    this.timeAt = (x) => start + (x - this.left) / across;
     this.octavesAt = (y) => low + (this.pitchBottom - y) / up;
   }
 
@@ -133,7 +147,7 @@ class Graph {
 
   clips() {
     const clip = (id, top, bottom) => {
-      const area = { x: LEFT, y: top, width: this.width - LEFT - RIGHT, height: bottom - top };
+      const area = { x: this.left, y: top, width: this.width - this.left - RIGHT, height: bottom - top };
       return drawn("clipPath", { id }, drawn("rect", area));
     };
     return drawn(
@@ -144,20 +158,20 @@ class Graph {
 
   frame() {
     const lane = (top, bottom, name) =>
-      drawn("rect", { class: name, x: LEFT, y: top, width: this.width - LEFT - RIGHT, height: bottom - top });
+      drawn("rect", { class: name, x: this.left, y: top, width: this.width - this.left - RIGHT, height: bottom - top });
     return drawn(
       "g", {}, lane(0, RULER - 4, "ruler"), lane(this.pitchTop, this.pitchBottom, "lane"),
       lane(this.gainTop, this.gainBottom, "lane"),
-      drawn("text", { x: LEFT - 6, y: RULER - 9, class: "axis end" }, "loop"),
-      drawn("text", { x: LEFT - 6, y: this.yGain(1) + 9, class: "axis end" }, "1"),
-      drawn("text", { x: LEFT - 6, y: this.yGain(0), class: "axis end" }, "0"),
-      drawn("text", { x: LEFT - 6, y: (this.gainTop + this.gainBottom) / 2 + 4, class: "axis end" }, "gain"),
+      drawn("text", { x: this.left - 6, y: RULER - 9, class: "axis end" }, "loop"),
+      drawn("text", { x: this.left - 6, y: this.yGain(1) + 9, class: "axis end" }, "1"),
+      drawn("text", { x: this.left - 6, y: this.yGain(0), class: "axis end" }, "0"),
+      drawn("text", { x: this.left - 6, y: (this.gainTop + this.gainBottom) / 2 + 4, class: "axis end" }, "gain"),
     );
   }
 
   timeAxis() {
     const { start, end } = this.view;
-    const step = roundStep((70 / (this.width - LEFT - RIGHT)) * (end - start));
+    const step = roundStep((70 / (this.width - this.left - RIGHT)) * (end - start));
     const digits = Math.max(0, -Math.floor(Math.log10(step) + 1e-9));
     const group = drawn("g", {});
     for (let count = Math.ceil(start / step - 1e-9); count * step <= end + 1e-9; count++) {
@@ -173,16 +187,15 @@ class Graph {
   // Lines at notes; between them, at round cents, once there is room.
   pitchAxis() {
     const { low, high } = this.view;
-    const pixels = (this.pitchBottom - this.pitchTop) / (12 * (high - low));
-    const step = [0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 3, 6, 12, 24].find((size) => size * pixels >= 15) ?? 24;
+    const step = this.pitchStep;
     const group = drawn("g", {});
     for (let count = Math.ceil((12 * low) / step); count * step <= 12 * high; count++) {
       const y = this.y((count * step) / 12);
       const isC = Math.abs(((count * step) / 12) % 1) < 1e-9;
-      group.append(drawn("path", { d: `M${LEFT} ${y}H${this.width - RIGHT}`, class: isC ? "grid strong" : "grid" }));
+      group.append(drawn("path", { d: `M${this.left} ${y}H${this.width - RIGHT}`, class: isC ? "grid strong" : "grid" }));
       if (y > this.pitchTop + 5 && y < this.pitchBottom - 2) {
         const label = noteText((count * step) / 12);
-        group.append(drawn("text", { x: LEFT - 6, y: y + 4, class: `axis end${isC ? " strong" : ""}` }, label));
+        group.append(drawn("text", { x: this.left - 6, y: y + 4, class: `axis end${isC ? " strong" : ""}` }, label));
       }
     }
     return group;
@@ -262,7 +275,7 @@ class Graph {
     this.loopMark.replaceChildren();
     const loop = this.dragged ?? this.sound.loop;
     if (!loop) return;
-    const [left, right] = loop.map((time) => clamp(this.x(time), LEFT, this.width - RIGHT));
+    const [left, right] = loop.map((time) => clamp(this.x(time), this.left, this.width - RIGHT));
     if (right <= left) return;
     const band = { x: left, width: right - left };
     this.loopMark.append(
@@ -273,7 +286,7 @@ class Graph {
 
   drawPlay(position) {
     const x = this.x(position);
-    const inside = x >= LEFT - 0.5 && x <= this.width - RIGHT + 0.5;
+    const inside = x >= this.left - 0.5 && x <= this.width - RIGHT + 0.5;
     const head = `M${x - 5} 0H${x + 5}L${x} 8Z`;
     this.playMark.setAttribute("d", inside ? `${head}M${x} 0V${this.gainBottom}` : "");
   }
@@ -311,7 +324,7 @@ class Graph {
   move(event) {
     const place = this.placeOf(event);
     if (!this.pointers.has(event.pointerId)) {
-      this.point(place.x >= LEFT && place.x <= this.width - RIGHT ? this.timeAt(place.x) : null);
+      this.point(place.x >= this.left && place.x <= this.width - RIGHT ? this.timeAt(place.x) : null);
       return;
     }
     const before = this.pointers.get(event.pointerId);
@@ -388,4 +401,9 @@ class Graph {
     const position = this.sound.position;
     return position > start && position < end ? position : (start + end) / 2;
   }
+}
+
+// How many semitones lie between two labels, where there is room for so many labels per semitone.
+function pitchStep(labels) {
+  return [0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 3, 6, 12, 24].find((size) => size * labels >= 1) ?? 24;
 }

@@ -16,6 +16,7 @@ class Page {
     this.showCandidates();
     this.showLegend();
     this.showKeys();
+    this.bar = new Bar(this);
     this.graph = new Graph(byId("graph"), data, this.sound, (what, value) => this.graphTells(what, value));
     this.transfers = [["target", "pitch"], ["gate", "control"]].map((pair) =>
       new Transfer(byId(`transfer-${pair[1] === "pitch" ? "pitch" : "gain"}`), data, this.graph, pair));
@@ -33,7 +34,7 @@ class Page {
     this.blind = new BlindListening(byId("blind-body"), this.data, this.sound, this.clips, {
       enter: () => this.enterRound(), leave: () => this.leaveRound(), excerpt: () => this.loopStretch(),
     });
-    byId("play").disabled = false;
+    for (const id of ["play", "bar-play"]) byId(id).disabled = false;
     this.say("Ready.");
   }
 
@@ -56,7 +57,7 @@ class Page {
     const rows = this.data.candidates.map(({ label, gain_db }, index) => {
       const radio = element("input", { type: "radio", name: "candidate", value: index, checked: index === 0, change: () => this.choose(index) });
       const key = index < 9 ? element("kbd", {}, String(index + 1)) : element("span", { class: "number" }, String(index + 1));
-      return element("label", { class: "candidate" }, radio, key, swatch(index), named(label), element("small", {}, `${signed(gain_db)} dB`));
+      return element("label", { class: "candidate" }, radio, key, swatch(index), named(label), element("small", {}, matchedBy(gain_db)));
     });
     byId("candidates").append(...rows);
     this.radios = rows.map((row) => row.querySelector("input"));
@@ -97,9 +98,10 @@ class Page {
     byId("play").addEventListener("click", () => this.toggle());
     byId("level").addEventListener("input", () => this.setLevel());
     byId("loop").addEventListener("change", () => this.applyLoop());
-    for (const id of ["loop-start", "loop-end"]) byId(id).addEventListener("change", () => this.takeLoopFields());
-    byId("loop-starts-here").addEventListener("click", () => this.moveLoop(0));
-    byId("loop-ends-here").addEventListener("click", () => this.moveLoop(1));
+    ["loop-start", "loop-end"].forEach((id, side) => byId(id).addEventListener("change", () => this.takeLoopField(side)));
+    byId("single-keys").addEventListener("change", () => this.showKeyCaps());
+    byId("loop-starts-here").addEventListener("click", () => this.placeLoop(0, this.sound.position));
+    byId("loop-ends-here").addEventListener("click", () => this.placeLoop(1, this.sound.position));
     this.stretch = [0, this.length];
     this.showLoop();
     this.sound.addEventListener("change", (event) => this.soundTells(event.detail));
@@ -107,7 +109,7 @@ class Page {
   }
 
   toggle() {
-    if (this.sound.playing) this.sound.pause();
+    if (this.sound.wanted) this.sound.pause();
     else this.sound.play();
   }
 
@@ -123,6 +125,11 @@ class Page {
     byId("level-text").textContent = words;
     byId("level").setAttribute("aria-valuetext", words);
     this.sound.setLevel(level);
+  }
+
+  // Keys that do nothing are not shown beside what they would do.
+  showKeyCaps() {
+    document.body.classList.toggle("no-single-keys", !byId("single-keys").checked);
   }
 
   // The stretch of the fields is kept while the loop is off.
@@ -142,17 +149,35 @@ class Page {
     this.showLoop();
   }
 
-  takeLoopFields() {
-    const [start, end] = ["loop-start", "loop-end"].map((id) => Number(byId(id).value));
-    if (Number.isFinite(start) && Number.isFinite(end) && start < end) this.setLoop(start, end);
-    else this.showLoop();
+  takeLoopField(side) {
+    const text = byId(["loop-start", "loop-end"][side]).value;
+    if (text === "") this.refuseLoop("Give a time in seconds");
+    else this.placeLoop(side, clamp(Number(text), 0, this.length), Number(text) > this.length ? ` The sound ends at ${clock(this.length)}.` : "");
   }
 
-  moveLoop(side) {
-    const { position } = this.sound;
+  // Begins the loop at a time (side 0) or ends it there (1). Where the loop's other end is in the way, that goes to
+  // the sound's own. What is refused leaves the loop as it was, and what is changed is said.
+  placeLoop(side, time, more = "") {
     const [start, end] = this.stretch;
-    if (side === 0) this.setLoop(position, end > position + SHORTEST_LOOP_S ? end : this.length);
-    else this.setLoop(start < position - SHORTEST_LOOP_S ? start : 0, position);
+    const least = `a loop lasts at least ${duration(SHORTEST_LOOP_S)}`;
+    if ((side === 0 ? this.length - time : time) < SHORTEST_LOOP_S) {
+      this.refuseLoop(`No loop can ${side === 0 ? "begin" : "end"} at ${clock(time)}: ${least}.${more}`);
+      return;
+    }
+    const fits = (side === 0 ? end - time : time - start) >= SHORTEST_LOOP_S - 1e-9;
+    if (side === 0) this.setLoop(time, fits ? end : this.length);
+    else this.setLoop(fits ? start : 0, time);
+    const moved = side === 0 ? `Its end went to the end of the sound: ${least}.` : `Its start went to the beginning: ${least}.`;
+    this.say(`Loop: ${this.loopWords()}.${more}${fits ? "" : ` ${moved}`}`);
+  }
+
+  refuseLoop(words) {
+    this.say(`${words.replace(/\.$/, "")}. The loop stays at ${this.loopWords()}.`);
+    this.showLoop();
+  }
+
+  loopWords() {
+    return this.stretch.map(clock).join(" to ");
   }
 
   showLoop() {
@@ -164,34 +189,45 @@ class Page {
     const margin = 0.15 * (end - start);
     this.graph.showStretch(Math.max(start - margin, 0), Math.min(end + margin, this.length));
     this.setLoop(start, end);
+    this.sound.seek(start);
     byId("graph").focus({ preventScroll: true });
     byId("curves").scrollIntoView({ behavior: STILL.matches ? "auto" : "smooth", block: "start" });
-    this.say(`Curves and loop: ${clock(start)} to ${clock(end)}.`);
+    this.say(`Curves and loop: ${this.loopWords()}.`);
   }
 
   // What follows what
 
   soundTells(what) {
     if (this.blind?.round) {
-      this.blind.showPlaying();
+      this.blind.soundTells(what);
       return;
     }
     const { label } = this.data.candidates[this.chosen];
     const name = `${this.chosen + 1}, ${label}`;
-    byId("play").textContent = this.sound.playing ? "Pause" : "Play";
+    for (const id of ["play", "bar-play"]) byId(id).textContent = this.sound.wanted ? "Pause" : "Play";
     if (what === "start") this.say(`Playing ${name}.`);
     if (what === "stop") this.say(`Paused at ${clock(this.sound.position)}.`);
+    if (what === "end") this.say("Played to the end; Play starts from the beginning.");
     if (what === "choose") this.say(`${this.sound.playing ? "Playing" : "Chosen:"} ${name}.`);
+    if (what === "choose") this.bar.show();
     if (what === "choose") this.graph.changed();
     if (what === "loop" && this.graph.loopMark) this.graph.drawLoop();
-    if (what === "loop") this.blind?.offerExcerpt();
+    if (what === "loop") this.blind?.setup.takeExcerpt();
     this.showPosition();
   }
 
   graphTells(what, value) {
     if (what === "view") for (const transfer of this.transfers ?? []) transfer.draw();
-    if (what === "loop" && value[1] - value[0] >= SHORTEST_LOOP_S) this.setLoop(...value);
+    if (what === "loop") this.takeDraggedLoop(value);
     if (what === "point") this.showReadout();
+  }
+
+  takeDraggedLoop([start, end]) {
+    if (end - start < SHORTEST_LOOP_S) this.refuseLoop(`That is too short: a loop lasts at least ${duration(SHORTEST_LOOP_S)}`);
+    else {
+      this.setLoop(start, end);
+      this.say(`Loop: ${this.loopWords()}.`);
+    }
   }
 
   // Without motion the position moves twice a second, else with every frame.
@@ -206,7 +242,7 @@ class Page {
 
   showPosition() {
     const { position } = this.sound;
-    byId("position").textContent = clock(position);
+    for (const id of ["position", "bar-position"]) byId(id).textContent = clock(position);
     if (this.graph.pointedAt === null) this.showReadout();
     if (!this.graph.playMark) return;
     this.graph.drawPlay(position);
@@ -238,6 +274,7 @@ class Page {
 
   showRest(shown) {
     for (const part of document.querySelectorAll(".open-only, .skip")) part.hidden = !shown;
+    this.bar.follow();
   }
 
   // Keys
@@ -261,8 +298,8 @@ class Page {
     else if (event.key === " " && this.clips) this.toggle();
     else if (event.key === "Home" && !isTheirs) this.sound.seek(this.loopStretch()?.[0] ?? 0);
     else if (event.key === "l") this.toggleLoop();
-    else if (event.key === "[") this.moveLoop(0);
-    else if (event.key === "]") this.moveLoop(1);
+    else if (event.key === "[") this.placeLoop(0, this.sound.position);
+    else if (event.key === "]") this.placeLoop(1, this.sound.position);
     else return false;
     return true;
   }
@@ -270,8 +307,14 @@ class Page {
   toggleLoop() {
     byId("loop").checked = !byId("loop").checked;
     this.applyLoop();
-    this.say(byId("loop").checked ? `Loop on: ${clock(this.stretch[0])} to ${clock(this.stretch[1])}.` : "Loop off.");
+    this.say(byId("loop").checked ? `Loop on: ${this.loopWords()}.` : "Loop off.");
   }
+}
+
+// What the gain that brought a candidate to the common loudness did to it.
+function matchedBy(gain_db) {
+  const size = fixed(Math.abs(gain_db));
+  return Number(size) === 0 ? "matches as it is" : `made ${size} dB ${gain_db > 0 ? "louder" : "quieter"} to match`;
 }
 
 const page = new Page(JSON.parse(byId("data").textContent));

@@ -5,6 +5,7 @@ const SEAM_S = 0.005; // where a loop closes, and where a clip begins or is cut
 const AHEAD_S = 0.03; // how far ahead of the clock a change is asked for, so that none comes late
 const PLANNED_S = 2.5; // passes of a loop are planned this far ahead, for tabs whose timers are slowed down
 const SILENT_S = 0.075; // blind: how long nothing is heard when the clip is changed
+const HEARD_S = 0.5; // a clip that was heard for so long counts as heard
 const SHORTEST_LOOP_S = 0.05;
 const LOWEST_DB = -60;
 
@@ -115,6 +116,8 @@ class Sound extends EventTarget {
     this.sampleRate = sampleRate;
     this.context = null;
     this.run = null;
+    this.wish = null; // stands for a start that is still wanted while the audio starts
+    this.counted = 0;
     this.levelDb = -20;
     this.load([], 0);
     setInterval(() => this.tend(), 200);
@@ -123,7 +126,7 @@ class Sound extends EventTarget {
   // What is to be played, all of it cut to one length. Discreet: see Run.
   load(clips, length, { discreet = false } = {}) {
     this.pause();
-    Object.assign(this, { clips, length, discreet, chosen: 0, loop: null, rest: 0 });
+    Object.assign(this, { clips, length, discreet, chosen: 0, loop: null, rest: 0, listened: clips.map(() => 0) });
   }
 
   // On the nearest sample: between two, a clip would have to be interpolated.
@@ -141,6 +144,10 @@ class Sound extends EventTarget {
     return this.run !== null;
   }
 
+  get wanted() {
+    return this.playing || this.wish !== null;
+  }
+
   // Where the listener is now: what the clock says, less the way to the ear.
   get position() {
     if (!this.playing) return this.rest;
@@ -149,56 +156,93 @@ class Sound extends EventTarget {
   }
 
   async play() {
-    if (this.playing || this.clips.length === 0 || this.starting) return;
-    this.starting = true;
-    this.prepare();
-    clearTimeout(this.sleep);
-    await this.context.resume();
-    this.starting = false;
-    const [start, end] = this.loop ?? [0, this.length];
-    this.startRun(this.rest < start || this.rest >= end - SEAM_S ? start : this.rest);
-    this.tell("start");
+    if (this.playing || this.clips.length === 0) return;
+    const wish = Symbol("start");
+    this.wish = wish;
+    try {
+      this.prepare();
+      clearTimeout(this.sleep);
+      this.tell("wish");
+      await this.context.resume();
+      if (this.wish !== wish) return;
+      this.startRun(this.inside(this.rest));
+      this.tell("start");
+    } finally {
+      if (this.wish === wish) this.wish = null;
+    }
   }
 
+  // Also takes back the wish to play, where the audio has not started yet.
   pause() {
-    if (!this.playing) return;
-    this.rest = this.position;
-    this.run.finish(this.soon);
-    this.run = null;
+    if (!this.wanted) return;
+    this.account();
+    this.wish = null;
+    if (this.playing) {
+      this.rest = this.position;
+      this.run.finish(this.soon);
+      this.run = null;
+    }
+    clearTimeout(this.sleep);
     this.sleep = setTimeout(() => this.context.suspend(), 2000);
     this.tell("stop");
   }
 
+  // While a loop plays, what is outside of it can't be gone to: the loop begins anew.
   seek(position) {
     this.rest = clamp(position, 0, this.length);
-    if (this.playing) this.restartRun(() => this.rest);
+    if (this.playing) {
+      if (this.loop) this.rest = this.inside(this.rest);
+      this.restartRun(() => this.rest);
+    }
     this.tell("move");
   }
 
+  // Where playing goes on from a position: outside the loop, or at its very end, from the loop's start.
+  inside(position) {
+    const [start, end] = this.loop ?? [0, this.length];
+    return position >= start && position < end - SEAM_S ? position : start;
+  }
+
   choose(index) {
+    this.account();
+    if (this.playing && index !== this.chosen) this.counted = this.soon + SWITCH_S + (this.discreet ? SILENT_S : 0);
     this.chosen = index;
     this.run?.choose(index, this.soon);
     this.tell("choose");
   }
 
+  // Adds to the chosen clip's seconds what has reached the ear since the last time. `counted` may lie ahead of
+  // the clock: until then the clip is not there yet. A clock that stands still adds nothing.
+  account() {
+    if (!this.playing) return;
+    const now = this.context.currentTime - (this.context.outputLatency || 0);
+    if (now <= this.counted) return;
+    const before = this.listened[this.chosen];
+    if (this.levelDb > LOWEST_DB) this.listened[this.chosen] += now - this.counted;
+    this.counted = now;
+    if (before < HEARD_S && this.heard(this.chosen)) this.tell("heard");
+  }
+
+  heard(index) {
+    return this.listened[index] >= HEARD_S;
+  }
+
   // A stretch [start, end] in seconds, or null. What plays inside the stretch plays on there.
   setLoop(loop) {
     this.loop = loop?.map((time) => this.onSample(time)) ?? null;
-    if (this.playing) {
-      this.restartRun((position) => {
-        const [start, end] = this.loop ?? [0, this.length];
-        return position >= start && position < end - SEAM_S ? position : start;
-      });
-    }
+    if (this.playing) this.restartRun((position) => this.inside(position));
     this.tell("loop");
   }
 
-  // The level moves to where it is set within some tenths of a second, never at once.
+  // Once there is sound, the level moves to where it is set within some tenths of a second, never at once.
   setLevel(levelDb) {
+    this.account();
     this.levelDb = levelDb;
-    if (this.context === null) return;
-    const gain = levelDb <= LOWEST_DB ? 0 : 10 ** (levelDb / 20);
-    this.master.gain.setTargetAtTime(gain, this.context.currentTime, 0.1);
+    if (this.context !== null) this.master.gain.setTargetAtTime(this.masterGain, this.context.currentTime, 0.1);
+  }
+
+  get masterGain() {
+    return this.levelDb <= LOWEST_DB ? 0 : 10 ** (this.levelDb / 20);
   }
 
   // A context may be made only when the listener asks for sound; at the set's own rate nothing is resampled.
@@ -210,16 +254,18 @@ class Sound extends EventTarget {
       this.context = new AudioContext();
     }
     this.master = this.context.createGain();
-    this.master.gain.value = 0;
+    this.master.gain.value = this.masterGain; // at once: every run rises from silence by itself
     this.master.connect(this.context.destination);
-    this.setLevel(this.levelDb);
   }
 
   startRun(position, when = this.soon) {
     const start = this.onSample(position);
-    this.run = new Run(this.context, this.master, this.clips, this.chosen, this.discreet);
-    this.run.addPass(when, start, (this.loop?.[1] ?? this.length) - start);
-    this.run.begin(when);
+    const run = new Run(this.context, this.master, this.clips, this.chosen, this.discreet);
+    run.addPass(when, start, Math.max((this.loop?.[1] ?? this.length) - start, 0));
+    run.begin(when);
+    this.account();
+    this.run = run;
+    this.counted = when;
     this.tend();
   }
 
@@ -233,12 +279,13 @@ class Sound extends EventTarget {
   // Keep a loop going, and notice the end.
   tend() {
     if (!this.playing) return;
+    this.account();
     const now = this.context.currentTime;
     if (this.loop === null) {
       if (now >= this.run.end + SEAM_S) {
         this.pause();
         this.rest = 0;
-        this.tell("move");
+        this.tell("end");
       }
       return;
     }

@@ -21,12 +21,16 @@ class Transfer {
     const { start, end, low, high } = this.graph.view;
     const [least, most] = this.isPitch ? [low, high] : [-0.03, 1.03];
     const [width, height] = [this.box.clientWidth, this.box.clientHeight];
-    this.x = (value) => SIDE_MARGIN + ((value - least) / (most - least)) * (width - SIDE_MARGIN - 8);
+    this.stepUp = this.stepOf((most - least) / ((height - FOOT_MARGIN) / 20));
+    const hasCents = this.isPitch && this.stepUp < 0.99 / 12;
+    this.left = hasCents ? LEFT_WITH_CENTS : SIDE_MARGIN;
+    this.stepAcross = this.stepOf((most - least) / ((width - this.left) / (hasCents ? 72 : 48)));
+    this.x = (value) => this.left + ((value - least) / (most - least)) * (width - this.left - 8);
     this.y = (value) => height - FOOT_MARGIN - ((value - least) / (most - least)) * (height - FOOT_MARGIN - 8);
     this.svg.setAttribute("viewBox", `0 0 ${width} ${height}`);
     this.dot = drawn("circle", { r: 5, class: "dot" });
-    const id = `transfer-${this.output}`;
-    const lane = { x: SIDE_MARGIN, y: 8, width: width - SIDE_MARGIN - 8, height: height - FOOT_MARGIN - 8 };
+    const id = `lane-of-${this.output}`;
+    const lane = { x: this.left, y: 8, width: width - this.left - 8, height: height - FOOT_MARGIN - 8 };
     const lines = drawn("g", { "clip-path": `url(#${id})` }, this.diagonal(least, most), this.band(least, most));
     const chosen = this.graph.sound.chosen;
     const others = this.data.candidates.map((_, index) => index).filter((index) => index !== chosen);
@@ -81,12 +85,12 @@ class Transfer {
 
   axes(least, most, width, height) {
     const group = drawn("g", {});
-    for (const value of this.ticks(least, most, (height - FOOT_MARGIN) / 20)) {
+    for (const value of ticks(least, most, this.stepUp)) {
       const y = this.y(value);
-      group.append(drawn("path", { d: `M${SIDE_MARGIN} ${y}H${width - 8}`, class: "grid" }));
-      group.append(drawn("text", { x: SIDE_MARGIN - 6, y: y + 4, class: "axis end" }, this.label(value)));
+      group.append(drawn("path", { d: `M${this.left} ${y}H${width - 8}`, class: "grid" }));
+      group.append(drawn("text", { x: this.left - 6, y: y + 4, class: "axis end" }, this.label(value)));
     }
-    for (const value of this.ticks(least, most, (width - SIDE_MARGIN) / 48)) {
+    for (const value of ticks(least, most, this.stepAcross)) {
       const x = this.x(value);
       group.append(drawn("path", { d: `M${x} 8V${height - FOOT_MARGIN}`, class: "grid" }));
       group.append(drawn("text", { x, y: height - 8, class: "axis middle" }, this.label(value)));
@@ -94,12 +98,10 @@ class Transfer {
     return group;
   }
 
-  ticks(least, most, room) {
+  // The step between labels, where it must be at least so much.
+  stepOf(room) {
     const unit = this.isPitch ? 1 / 12 : 0.25;
-    const steps = this.isPitch ? [0.05, 0.1, 0.2, 0.5, 1, 3, 6, 12, 24] : [1, 2];
-    const step = unit * (steps.find((size) => (most - least) / (size * unit) <= room) ?? steps.at(-1));
-    const first = Math.ceil(least / step);
-    return Array.from({ length: Math.floor(most / step) - first + 1 }, (_, count) => (first + count) * step);
+    return unit * (this.isPitch ? pitchStep(unit / room) : room <= unit ? 1 : 2);
   }
 
   label(value) {
@@ -114,4 +116,9 @@ class Transfer {
     this.dot.setAttribute("cy", this.y(valueAt(curves[this.output], position)));
     this.dot.style.stroke = lineStyle(index).ink;
   }
+}
+
+function ticks(least, most, step) {
+  const first = Math.ceil(least / step);
+  return Array.from({ length: Math.floor(most / step) - first + 1 }, (_, count) => (first + count) * step);
 }
