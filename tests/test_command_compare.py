@@ -201,3 +201,31 @@ def test_mistakes_are_in_the_json_too(here):
     result = run("compare", "bad.toml", "-o", "laws", "--vary", "pitch.law=rc,exp", "--json")
     assert result.exit_code == 2
     assert "nonsense" in json.loads(result.stdout)["errors"][0]
+
+
+def test_paths_to_vary_count_from_where_they_are_written(here):
+    """On the command line from the working folder, in a sheet from the sheet's; the set tells names only."""
+    import numpy as np
+    import soundfile
+
+    (here / "bank").mkdir()
+    cycles = {"bell": here / "bell.wav", "horn": here / "bank" / "horn.wav"}
+    for harmonic, path in enumerate(cycles.values(), 1):
+        wave = 0.5 * np.sin(2 * np.pi * harmonic * np.arange(256) / 256)
+        soundfile.write(path, wave, 48000, subtype="FLOAT")
+    wave = '[oscillator]\nwave = "file"\nfile = "horn.wav"\n'
+    (here / "bank" / "lead.toml").write_text(wave + (here / "lead.toml").read_text().partition("\n")[2])
+    files = ("--vary", "oscillator.file=bell.wav,bank/horn.wav")
+    result = run("compare", "bank/lead.toml", "-o", "cycles", *files, "--phrase", "line.toml")
+    assert (result.exit_code, result.stderr) == (0, "")
+    told = json.loads((here / "cycles" / "comparison.json").read_text())
+    varied = [candidate["varied"]["oscillator.file"] for candidate in told["candidates"]]
+    assert varied == ["bell.wav", "horn.wav"]
+    assert str(here) not in (here / "cycles" / "comparison.json").read_text()
+    (here / "bank" / "bell.toml").write_text(
+        '[a]\n"oscillator.file" = "horn.wav"\n[b]\n"oscillator.file" = "../bell.wav"\n'
+    )
+    result = run(
+        "compare", "bank/lead.toml", "-o", "sheet", "--sheet", "bank/bell.toml", "--phrase", "line.toml"
+    )
+    assert (result.exit_code, result.stderr) == (0, "")

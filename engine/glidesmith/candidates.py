@@ -66,7 +66,8 @@ class Candidate:
 def axes_from_texts(texts: Iterable[str]) -> Axes:
     """The axes that a command line gives as ``KEY=A,B,C``, each value with its unit if it has one.
 
-    A value in double quotes may hold commas. Raises SettingError with a line a mistake.
+    A value in double quotes may hold commas. Paths count from the working folder, as they do for a shell.
+    Raises SettingError with a line a mistake.
     """
     mistakes = Mistakes()
     axes: dict[str, tuple[object, ...]] = {}
@@ -79,7 +80,8 @@ def axes_from_texts(texts: Iterable[str]) -> Axes:
             mistakes.add(f"--vary {shortened(name)}: is given twice; give all its values in one --vary")
         elif (key := _key_to_vary(name, mistakes)) is not None:
             parts = [part.strip() for part in _split(values)]
-            axes[name] = _checked_axis(key, parts, key.parse, mistakes)
+            found = _checked_axis(key, parts, key.parse, mistakes)
+            axes[name] = tuple(_anchored(key, value, Path()) for value in found)
     mistakes.raise_as(SettingError)
     return axes
 
@@ -101,6 +103,11 @@ def axes_from_values(vary: Mapping[str, Sequence[object]]) -> Axes:
         axes[name] = _checked_axis(key, list(values), key.check, mistakes)
     mistakes.raise_as(SettingError)
     return axes
+
+
+def _anchored(key: Key, value: object, folder: Path) -> object:
+    """A path as seen from a folder other than the preset's own; any other value as it is."""
+    return str((folder / str(value)).expanduser().absolute()) if key.kind == "file" else value
 
 
 def _split(values: str) -> list[str]:
@@ -169,7 +176,7 @@ def varied_candidates(presets: Sequence[Preset], axes: Axes, most: int) -> tuple
         for values in product(*axes.values()):
             changes = dict(zip(axes, values, strict=True))
             label = _label(name if len(presets) > 1 else "", axes, changes)
-            varied = {key: KEY[key].plain(value) for key, value in changes.items()}
+            varied = _told(changes)
             candidates.append(Candidate(label, changed.made(label, preset, changes), varied))
     changed.raise_mistakes(len(candidates))
     return tuple(_with_differences(candidates) if len(presets) > 1 else _distinct_labels(candidates))
@@ -177,6 +184,8 @@ def varied_candidates(presets: Sequence[Preset], axes: Axes, most: int) -> tuple
 
 def read_sheet(preset: Preset, path: Path, most: int) -> tuple[str, tuple[Candidate, ...]]:
     """The title, which may be empty, and the candidates of a sheet file, each made from ``preset``.
+
+    Paths count from the sheet's folder.
 
     Raises SettingError, a line a mistake, where the file can't be used.
     """
@@ -187,17 +196,30 @@ def read_sheet(preset: Preset, path: Path, most: int) -> tuple[str, tuple[Candid
     title = mapping.pop("title", "")
     if not isinstance(title, str):
         mistakes.add(f"title = {shown(title)}: must be text, in quotes")
-    tables = {name: _sheet_settings(name, table, mistakes) for name, table in mapping.items()}
+    tables = {
+        name: {
+            key: _anchored(KEY[key], value, path.parent)
+            for key, value in _sheet_settings(name, table, mistakes).items()
+        }
+        for name, table in mapping.items()
+    }
     mistakes.raise_as(SettingError)
     require_fit(len(tables), most, [], where)
     changed = _Changes(where)
     candidates = [
-        Candidate(shortened(name.strip(), _LONGEST_LABEL), changed.made(name, preset, changes),
-                  {key: KEY[key].plain(value) for key, value in changes.items()})
+        Candidate(shortened(name.strip(), _LONGEST_LABEL), changed.made(name, preset, changes), _told(changes))
         for name, changes in tables.items()
     ]  # fmt: skip
     changed.raise_mistakes(len(candidates))
     return title, tuple(_distinct_labels(candidates))
+
+
+def _told(changes: Mapping[str, object]) -> dict[str, object]:
+    """Changes as they are told: plain values, and files by name, since a set is mailed to others."""
+    return {
+        key: Path(str(value)).name if KEY[key].kind == "file" else KEY[key].plain(value)
+        for key, value in changes.items()
+    }
 
 
 def _sheet_settings(name: str, table: object, mistakes: Mistakes) -> dict[str, object]:
@@ -301,12 +323,15 @@ def _preset_names(presets: Sequence[Preset]) -> list[str]:
 
 def _label(name: str, axes: Axes, changes: Mapping[str, object]) -> str:
     """What sets a candidate apart, in a few words: ``"rc, rise 60 ms"``."""
-    told = [
-        f"{_key_text(key)} {_value_text(KEY[key], value)}".strip()
-        for key, value in changes.items()
-        if len(axes[key]) > 1
-    ]
-    return shortened(": ".join(part for part in (name, ", ".join(told)) if part), _LONGEST_LABEL)
+    told = settings_text({key: value for key, value in changes.items() if len(axes[key]) > 1})
+    return shortened(": ".join(part for part in (name, told) if part), _LONGEST_LABEL)
+
+
+def settings_text(changes: Mapping[str, object]) -> str:
+    """Checked settings by dotted key, in a few words: ``"rc, rise 60 ms"``."""
+    return ", ".join(
+        f"{_key_text(key)} {_value_text(KEY[key], value)}".strip() for key, value in changes.items()
+    )
 
 
 def _key_text(name: str) -> str:
@@ -387,9 +412,14 @@ def require_different(candidates: Sequence[Candidate]) -> None:
 def file_name(number: int, label: str, count: int = 0) -> str:
     """The name of a candidate's WAV: ``"01-rc-rise-60ms.wav"``; sorts by number, plain on any file system."""
     width = max(2, len(str(count)))
+    plain = plain_name(label)
+    return f"{number:0{width}d}{'-' if plain else ''}{plain}.wav"
+
+
+def plain_name(label: str) -> str:
+    """A label as part of a file's name: small ASCII letters, digits, dots and hyphens, and not too long."""
     plain = label.replace("µ", "u").replace("μ", "u").replace("#", "sharp")
     plain = unicodedata.normalize("NFKD", plain).encode("ascii", "ignore").decode("ascii").lower()
     plain = re.sub(r"(?<![0-9a-z.])-(?=[0-9.])", "minus", plain)
     plain = re.sub(r"(?<=[0-9.]) (?=(?:us|ms|s|db|hz|v|cents)\b)", "", plain)
-    plain = re.sub(r"(?:[^a-z0-9.]|\.(?![0-9]))+", "-", plain)[:_LONGEST_FILE_NAME].strip("-.")
-    return f"{number:0{width}d}{'-' if plain else ''}{plain}.wav"
+    return re.sub(r"(?:[^a-z0-9.]|\.(?![0-9]))+", "-", plain)[:_LONGEST_FILE_NAME].strip("-.")
