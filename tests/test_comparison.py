@@ -510,7 +510,9 @@ def test_what_is_not_the_sets_stays_even_when_it_is_replaced(tmp_path):
 
 def test_sheets_hidden_files_and_parts_of_a_killed_run_are_no_hindrance(tmp_path):
     (tmp_path / ".hidden").write_text("x")
+    (tmp_path / "Thumbs.db").write_text("x")
     (tmp_path / "ann.json").write_text(json.dumps({"kind": "glidesmith listening sheet"}))
+    (tmp_path / "all.json").write_text(json.dumps({"kind": "glidesmith listening sheets"}))
     begun = {
         "01-rc.wav.part": "RIFF....WAVELIST....Glidesmith",
         "index.html.part": "<!doctype html><title>Glidesmith",

@@ -23,12 +23,13 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 KIND = "glidesmith comparison"
-SHEET_KIND = "glidesmith listening sheet"
+SHEET_KINDS = ("glidesmith listening sheet", "glidesmith listening sheets")
 VERSION = 1
 FACTS_FILE, PAGE_FILE = "comparison.json", "index.html"
 
 _MOST_FACTS_BYTES = 500_000_000
-_MOST_SHEET_BYTES = 1_000_000
+_MOST_SHEET_BYTES = 10_000_000
+_LEFT_BY_SYSTEMS = ("Thumbs.db", "ehthumbs.db", "desktop.ini", "Icon\r")
 _OWN_WAV = re.compile(r"[0-9]{2,3}(?:-[a-z0-9.-]*)?\.wav")
 _MOST_NAMED = 3
 _HEAD_BYTES = 200
@@ -102,8 +103,11 @@ class SetFolder:
         self._others = [name for name in names if name not in own and not self._is_bystander(name)]
 
     def _is_bystander(self, name: str) -> bool:
-        """Hidden files, part files that a killed run left, and listening sheets may be there."""
-        return name.startswith(".") or _is_part(name) or _is_sheet(self.path / name)
+        """Hidden files, those that desktops leave in every folder, part files of a killed run, and listening
+        sheets may be there.
+        """
+        left = name.startswith(".") or name in _LEFT_BY_SYSTEMS or _is_part(name)
+        return left or _is_sheet(self.path / name)
 
     def require_free(self, ground: Mapping[str, object], settings: Sequence[str]) -> None:
         """Raise OutputError where a set may not be written here without being told to replace.
@@ -231,7 +235,7 @@ def _is_sheet(path: Path) -> bool:
         found = json.loads(read_bytes(path, _MOST_SHEET_BYTES, GlidesmithError))
     except (GlidesmithError, ValueError, RecursionError):
         return False
-    return isinstance(found, dict) and found.get("kind") == SHEET_KIND
+    return isinstance(found, dict) and found.get("kind") in SHEET_KINDS
 
 
 def _read_facts(path: Path) -> tuple[Mapping[str, Any], dict[str, Earlier]]:
