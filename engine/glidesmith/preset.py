@@ -158,10 +158,14 @@ class Preset:
         path where it can't be read. Optional tables that are left out have no keys here, nor have keys
         without a value.
         """
-        values = {key.name: key.plain(value) for key, value in _values_of(self)}
         return {
-            name: _fingerprint(value) if isinstance(value, Path) else value for name, value in values.items()
+            name: _fingerprint(value) if isinstance(value, Path) else value
+            for name, value in self.values().items()
         }
+
+    def values(self) -> dict[str, object]:
+        """The same by dotted key, with files as paths; none is opened."""
+        return {key.name: key.plain(value) for key, value in _values_of(self)}
 
     def changed(self, changes: Mapping[str, object]) -> "Preset":
         """The same preset with other values, checked by the same rules; None takes a key or a table out.

@@ -68,7 +68,7 @@ class Job:
 
 
 @click.command("render")
-@click.argument("presets", nargs=-1, required=True, type=FilePath(), metavar="PRESET...")
+@click.argument("presets", nargs=-1, type=FilePath(), metavar="PRESET...")
 @click.option(
     "-o",
     "--output",
@@ -114,15 +114,32 @@ class Job:
     metavar="VOLTS",
     help="What your interface puts out for a full-scale sample, 10 by default.",
 )
+@click.option(
+    "--replay",
+    type=FilePath(),
+    metavar="LOG",
+    help="Instead of presets: play a live session again from its log, and write what was captured last.",
+)
+@click.option("--all", "whole", is_flag=True, help="With --replay: write the whole session.")
 @click.option("--progress/--no-progress", default=None, help="Show progress; by default on a terminal only.")
 @click.option("--quiet", is_flag=True, help="Print no facts and no progress, only warnings and errors.")
 @json_option
+@click.pass_context
 def command(
-    presets: tuple[Path, ...], output: Path | None, quiet: bool, as_json: bool, **options: Any
+    context: click.Context,
+    /,
+    presets: tuple[Path, ...],
+    output: Path | None,
+    replay: Path | None,
+    whole: bool,
+    quiet: bool,
+    as_json: bool,
+    **options: Any,
 ) -> int:
     """Render each PRESET with its phrase to a WAV file.
 
-    A file that is already there is replaced once the new one is whole.
+    A file that is already there is replaced once the new one is whole. With --replay the samples of a live
+    session come again, bit for bit.
 
     \b
     Example:
@@ -131,7 +148,16 @@ def command(
       glidesmith render presets/*.toml -o takes
       glidesmith render lead.toml --trace lead.csv --cv lead-cv.wav --cv-full-scale 5
       glidesmith render lead.toml -o - > lead.wav
+      glidesmith render --replay take.log.jsonl -o again.wav
     """
+    if replay is not None:
+        from glidesmith.command.replaying import render_replay
+
+        return render_replay(context, replay, whole, quiet, as_json)
+    if not presets:
+        raise click.UsageError("missing argument 'PRESET...': name a preset, or give --replay LOG")
+    if whole:
+        raise click.UsageError("--all is about a session: give --replay LOG too")
     choices = _choices(options, quiet)
     jobs = _jobs(presets, output)
     _check_extras(jobs, choices)
