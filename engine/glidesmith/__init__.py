@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 __version__ = "0.1.0"
 
 if TYPE_CHECKING:
+    from glidesmith.batching import batch as batch
     from glidesmith.comparison import compare as compare
     from glidesmith.errors import GlidesmithError as GlidesmithError
     from glidesmith.errors import OutputError as OutputError
@@ -30,6 +31,7 @@ _HOME = {
     "PresetError": "glidesmith.errors",
     "SettingError": "glidesmith.errors",
     "Slew": "glidesmith.slew",
+    "batch": "glidesmith.batching",
     "compare": "glidesmith.comparison",
     "load_phrase": "glidesmith.phrase",
     "load_preset": "glidesmith.preset",
@@ -45,6 +47,7 @@ __all__ = [
     "SettingError",
     "Slew",
     "__version__",
+    "batch",
     "compare",
     "load_phrase",
     "load_preset",

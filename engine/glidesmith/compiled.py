@@ -44,7 +44,8 @@ def _cache_root() -> Path:
     return root / "glidesmith"
 
 
-def _sources_digest() -> str:
+def sources_digest() -> str:
+    """A short hash of the kernels' sources and of the compiler's version."""
     digest = hashlib.sha256(numba.__version__.encode())
     for source in sorted(Path(__file__).parent.rglob("*.py")):
         text = source.read_bytes()
@@ -59,7 +60,7 @@ def _private_folder() -> str | None:
     None where it can't be had or others could write to it.
     """
     try:
-        folder = _cache_root() / _sources_digest()
+        folder = _cache_root() / sources_digest()
         folder.mkdir(mode=0o700, parents=True, exist_ok=True)
         if hasattr(os, "getuid"):
             facts = folder.stat()

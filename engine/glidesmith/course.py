@@ -7,6 +7,7 @@ in which the output only rises, only falls or rests.
 """
 
 from abc import ABC, abstractmethod
+from bisect import bisect_right
 from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from fractions import Fraction
@@ -88,6 +89,7 @@ class Course(ABC):
     def __init__(self, starts_s: "NDArray[np.float64]", forms: "NDArray[Any]") -> None:
         self.starts_s = starts_s
         self.forms = forms
+        self._starts: list[float] = starts_s.tolist()
 
     @abstractmethod
     def _values(self, indices: "NDArray[np.intp]", times_s: "NDArray[np.float64]") -> "NDArray[np.float64]":
@@ -100,14 +102,15 @@ class Course(ABC):
     def at(self, times_s: "ArrayLike") -> "NDArray[np.float64]":
         """The value at each of ``times_s`` (n,), in any order; before what happens at that moment."""
         times = np.ascontiguousarray(times_s, dtype=np.float64).reshape(-1)
-        return self._values(np.maximum(np.searchsorted(self.starts_s, times, "left") - 1, 0), times)
+        return self._values(np.maximum(self.starts_s.searchsorted(times, "left") - 1, 0), times)
 
     def stretches(self, begin_s: float, end_s: float) -> Iterator[Stretch]:
         """The stretches between two moments, in order; together they cover all the time between them."""
-        index = max(int(np.searchsorted(self.starts_s, begin_s, "right")) - 1, 0)
+        starts = self._starts
+        index = max(bisect_right(starts, begin_s) - 1, 0)
         while begin_s < end_s:
-            more = index + 1 < self.starts_s.size
-            next_s = min(float(self.starts_s[index + 1]), end_s) if more else end_s
+            more = index + 1 < len(starts)
+            next_s = min(starts[index + 1], end_s) if more else end_s
             if begin_s < next_s:
                 yield from self._parts(index, begin_s, next_s)
             begin_s = next_s
@@ -193,7 +196,7 @@ class GlideCourse(Course):
         return values
 
     def _parts(self, index: int, begin_s: float, end_s: float) -> Iterator[Stretch]:
-        glide, start_s = self.forms[index], float(self.starts_s[index])
+        glide, start_s = self.forms[index], self._starts[index]
         target = float(glide["target"])
         arrival_s = start_s if glide["law"] == HELD else start_s + float(glide["lasts"])
         if begin_s < arrival_s:
@@ -207,8 +210,12 @@ class GlideCourse(Course):
 
     def fastest(self, begin_s: float, end_s: float) -> float:
         """The largest rate of change, up or down, per second, between two moments. A jump has no rate."""
-        stretches = self.stretches(begin_s, end_s)
-        return max((part.fastest() for part in stretches if isinstance(part, GlideStretch)), default=0.0)
+        return fastest(self.stretches(begin_s, end_s))
+
+
+def fastest(stretches: Iterable[Stretch]) -> float:
+    """The largest rate of change, up or down, per second, in these stretches of a glide's course."""
+    return max((part.fastest() for part in stretches if isinstance(part, GlideStretch)), default=0.0)
 
 
 def follow(slew: Slew, initial: float, events: "Iterable[tuple[Fraction, float, bool]]") -> GlideCourse:

@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING
 from glidesmith.course import (
     GlideCourse,
     Stretch,
+    fastest,
     gain_courses,
     heard_octaves,
     octaves_per_volt,
@@ -32,6 +33,7 @@ if TYPE_CHECKING:
 
     from glidesmith.phrase import Phrase
     from glidesmith.preset import Preset
+    from glidesmith.program import GateChange, Program
 
 __all__ = ["Facts", "GateFacts", "GlideFacts", "measure", "table"]
 
@@ -119,7 +121,25 @@ def measure(
     rate = check_sample_rate(sample_rate)
     changes = pitch_changes(preset, phrase)
     course = pitch_course(slew_of(preset.pitch.slew), changes)
-    gates = gate_changes(preset, phrase)
+    return _facts(preset, phrase, tolerance, rate, changes, course, gate_changes(preset, phrase))
+
+
+def measure_program(program: "Program", course: GlideCourse, tolerance_cents: float = 5.0) -> Facts:
+    """What `measure` finds of a program's preset and phrase; ``course`` is the program's `pitch_course`."""
+    tolerance = _check_tolerance(tolerance_cents)
+    changes, gates = program.pitch_changes, program.gate_changes
+    return _facts(program.preset, program.phrase, tolerance, program.sample_rate, changes, course, gates)
+
+
+def _facts(
+    preset: "Preset",
+    phrase: "Phrase",
+    tolerance: float,
+    rate: int,
+    changes: "Sequence[PitchChange]",
+    course: GlideCourse,
+    gates: "Sequence[GateChange]",
+) -> Facts:
     unslewed, slewed = gain_courses(preset, gates)
     return Facts(
         title_of(preset),
@@ -158,7 +178,8 @@ def _glide_facts(
         end = phrase.end if following is None else changes[following].time
         tuned = TuneRange.of(preset, change.volts, tolerance_cents)
         begin_s, end_s = float(change.time), float(end)
-        parts = _tuned_parts(course, tuned, begin_s, end_s)
+        stretches = tuple(course.stretches(begin_s, end_s))
+        parts = _tuned_parts(tuned, stretches)
         landing_s = parts[-1][0] - begin_s if parts and parts[-1][1] == end_s else None
         gate_s = min(end_s, float(phrase.notes[change.note].end))
         numbers = phrase.notes[before.note].number, phrase.notes[change.note].number
@@ -169,18 +190,16 @@ def _glide_facts(
             note_name(numbers[1]),
             float(numbers[1] - numbers[0]),
             landing_s,
-            *_own_course(course, change, end_s),
+            *_own_course(course, change, end_s, stretches),
             _cents_off(preset, course, change, end_s) if landing_s is None else 0.0,
             _fraction_within(parts, begin_s, gate_s),
         )
 
 
-def _tuned_parts(
-    course: GlideCourse, tuned: TuneRange, begin_s: float, end_s: float
-) -> list[tuple[float, float]]:
-    """From when to when the pitch is in tune between two moments, in order; parts that abut are joined."""
+def _tuned_parts(tuned: TuneRange, stretches: "Iterable[Stretch]") -> list[tuple[float, float]]:
+    """From when to when the pitch is in tune in these stretches, in order; parts that abut are joined."""
     parts: list[tuple[float, float]] = []
-    for stretch in course.stretches(begin_s, end_s):
+    for stretch in stretches:
         part = tuned.part_of(stretch)
         if part is None:
             continue
@@ -196,24 +215,29 @@ def _fraction_within(parts: "Iterable[tuple[float, float]]", begin_s: float, end
 
 
 def _own_course(
-    course: GlideCourse, change: PitchChange, end_s: float
+    course: GlideCourse, change: PitchChange, end_s: float, stretches: "Sequence[Stretch]"
 ) -> tuple[float | None, float | None, float]:
-    """Midpoint and 10 to 90 % of the glide's own interval in seconds, fastest rate in semitones a second."""
+    """Midpoint and 10 to 90 % of the glide's own interval in seconds, fastest rate in semitones a second.
+
+    ``stretches`` are the course's from the change to ``end_s``.
+    """
     come_s = float(change.held_time)
     if come_s >= end_s:
         return None, None, 0.0
+    if come_s != float(change.time):
+        stretches = tuple(course.stretches(come_s, end_s))
     origin = float(course.at([come_s])[0])
     way = change.held_volts - origin
     tenth, middle, nine_tenths = (
-        _first_at(course, origin + share * way, way >= 0.0, come_s, end_s) for share in (0.1, 0.5, 0.9)
+        _first_at(stretches, origin + share * way, way >= 0.0, end_s) for share in (0.1, 0.5, 0.9)
     )
     rise_s = nine_tenths - tenth if tenth is not None and nine_tenths is not None else None
     midpoint_s = middle - float(change.time) if middle is not None else None
-    return midpoint_s, rise_s, 12.0 * course.fastest(come_s, end_s)
+    return midpoint_s, rise_s, 12.0 * fastest(stretches)
 
 
-def _first_at(course: GlideCourse, level: float, upwards: bool, begin_s: float, end_s: float) -> float | None:
-    for stretch in course.stretches(begin_s, end_s):
+def _first_at(stretches: "Iterable[Stretch]", level: float, upwards: bool, end_s: float) -> float | None:
+    for stretch in stretches:
         at = stretch.reaches(level, upwards)
         if at is not None:
             return at if at < end_s else None

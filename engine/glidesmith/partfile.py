@@ -206,7 +206,7 @@ class PartFile(Outlet):
                 raise in_the_way
             with os.fdopen(os.open(part, os.O_RDWR | _SAFELY), "rb") as file:
                 _lock(file, self.name)
-                if not _begins_as_ours(file.read(_HEAD_BYTES)):
+                if not begins_as_ours(file.read(_HEAD_BYTES)):
                     raise in_the_way
                 facts = os.fstat(file.fileno())
                 if _identity(part) == (facts.st_dev, facts.st_ino):
@@ -252,11 +252,11 @@ def is_leftover(part: Path) -> bool:
     with contextlib.suppress(OSError):
         if _may_be_leftover(part.lstat()):
             with os.fdopen(os.open(part, os.O_RDONLY | _SAFELY), "rb") as file:
-                return _begins_as_ours(file.read(_HEAD_BYTES))
+                return begins_as_ours(file.read(_HEAD_BYTES))
     return False
 
 
-def _begins_as_ours(head: bytes) -> bool:
+def begins_as_ours(head: bytes) -> bool:
     """Whether a file's first bytes are those of a file that is written here, or there are none."""
     named = head.startswith(_BEGINNINGS) and b"glidesmith" in head.lower()
     return not head or named or head.startswith(_TRACE_BEGINNING)

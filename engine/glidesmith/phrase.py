@@ -98,7 +98,17 @@ def load_phrase(
     Raises PhraseError, a line for each mistake, each naming the file.
     """
     path = Path(path)
-    data = read_bytes(path, MOST_MIDI_BYTES, PhraseError)
+    return parse_phrase_file(read_bytes(path, MOST_MIDI_BYTES, PhraseError), path, track, channel, longest_s)
+
+
+def parse_phrase_file(
+    data: bytes,
+    path: Path,
+    track: int | None = None,
+    channel: int | None = None,
+    longest_s: float = LONGEST_S,
+) -> Phrase:
+    """What `load_phrase` makes of a file's content; ``path`` is its name. Raises PhraseError."""
     if data.startswith((b"MThd", b"RIFF")) or path.suffix.lower() in _MIDI_SUFFIXES:
         from glidesmith.midi import read_midi
 

@@ -29,7 +29,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-    from glidesmith.phrase import Phrase
+    from glidesmith.phrase import Note, Phrase
     from glidesmith.preset import Preset, SlewSettings
 
 LOWEST_RATE, HIGHEST_RATE = 8_000, 384_000
@@ -144,10 +144,22 @@ def _glides(change: KeyChange, glide: str) -> bool:
     return glide == "always"
 
 
+_latest: "tuple[tuple[Note, ...], tuple[KeyChange, ...]]" = ((), ())
+
+
+def _key_changes(notes: "tuple[Note, ...]") -> "tuple[KeyChange, ...]":
+    """The changes of the sounding key; those of the latest phrase are kept, for many presets play one."""
+    global _latest
+    latest = _latest
+    if latest[0] is not notes:
+        _latest = latest = (notes, tuple(key_changes(notes)))
+    return latest[1]
+
+
 def pitch_changes(preset: "Preset", phrase: "Phrase") -> tuple[PitchChange, ...]:
     """Every change of the pitch's target, the first note's included (which jumps)."""
     changes: list[PitchChange] = []
-    for change in key_changes(phrase.notes):
+    for change in _key_changes(phrase.notes):
         if change.kind == RELEASE:
             continue
         volts = note_volts(preset, phrase.notes[change.note].number)
@@ -166,7 +178,7 @@ def gate_changes(preset: "Preset", phrase: "Phrase") -> tuple[GateChange, ...]:
     """Every change of the gate's level; velocity lowers it by up to the preset's ``velocity_db``."""
     changes: list[GateChange] = []
     retrigger = preset.envelope is not None and preset.envelope.retrigger
-    for change in key_changes(phrase.notes):
+    for change in _key_changes(phrase.notes):
         if change.kind == RELEASE:
             changes.append(GateChange(change.time, change.note, 0.0, False, False))
             continue

@@ -63,7 +63,8 @@ class Rendering:
         return self.report.warnings
 
 
-def _report(program: Program, voice: Voice) -> Report:
+def report_of(program: Program, voice: Voice) -> Report:
+    """What there is to say about a program that a voice has played to its end."""
     warnings = list(program.warnings)
     if voice.clipped:
         over_db = 20.0 * np.log10(voice.peak)
@@ -103,7 +104,7 @@ def stream(
             watch(seen)
         if progress is not None:
             progress(voice.sample, program.length)
-    return _report(program, voice)
+    return report_of(program, voice)
 
 
 def _room_for_traces(count: int) -> Traces:
@@ -116,10 +117,10 @@ def render_program(program: Program, trace: bool = False) -> Rendering:
     audio = np.empty(program.length, np.float32)
     if not trace:
         voice.play(audio)
-        return Rendering(audio, program.sample_rate, _report(program, voice))
+        return Rendering(audio, program.sample_rate, report_of(program, voice))
     traces = _room_for_traces(program.length)
     voice.play(audio, traces)
-    return Rendering(audio, program.sample_rate, _report(program, voice), *traces)
+    return Rendering(audio, program.sample_rate, report_of(program, voice), *traces)
 
 
 def render(

@@ -190,6 +190,11 @@ class _Format:
         return read_back
 
 
+def wav_header(sample_rate: int, depth: Depth, frames: int, title: str = "", comment: str = "") -> bytes:
+    """What `WavSink` puts before the samples of a file of one channel and ``frames`` frames."""
+    return _Format(_checked_rate(sample_rate, 1), 1, depth, title, comment).header(frames)
+
+
 def _checked_rate(sample_rate: int, channels: int) -> int:
     """The rate itself where a WAV's header can state it, and the bytes of one second."""
     most = 0xFFFF_FFFF // (4 * channels)

@@ -59,7 +59,7 @@ _SMALLEST_BITS = 8
 _NO_PARTIAL = 1e-12
 _SILENT = 1e-6
 _WAV_MARKS = (b"RIFF", b"RIFX", b"RF64")
-_MOST_WAV_BYTES = 16_000_000
+MOST_WAV_BYTES = 16_000_000
 _UNKNOWN_SIZE = 0xFFFFFFFF
 _TO_MEND_LENGTH = "cut the recording to a single cycle"
 
@@ -160,16 +160,23 @@ def read_cycle(path: str | Path, where: str = "") -> "NDArray[np.float64]":
     SettingError
         One line: no such file, no WAV file, cut off, too short, too long, silent or not finite.
     """
-    import soundfile
-
-    begin = f"{where}: oscillator.file" if where else "oscillator.file"
 
     def refuse(line: str) -> SettingError:
-        return SettingError(f"{begin}: {line}")
+        return SettingError(f"{_cycle_prefix(where)}: {line}")
 
     place = Path(path)
-    data = read_bytes(place, _MOST_WAV_BYTES, refuse, _TO_MEND_LENGTH)
-    begin_with_name = f"{begin}: {file_name(place)}"
+    return parse_cycle(read_bytes(place, MOST_WAV_BYTES, refuse, _TO_MEND_LENGTH), place, where)
+
+
+def _cycle_prefix(where: str) -> str:
+    return f"{where}: oscillator.file" if where else "oscillator.file"
+
+
+def parse_cycle(data: bytes, path: Path, where: str = "") -> "NDArray[np.float64]":
+    """What `read_cycle` makes of a file's content; ``path`` is its name. Raises SettingError."""
+    import soundfile
+
+    begin_with_name = f"{_cycle_prefix(where)}: {file_name(path)}"
     _check_wav(data, begin_with_name)
     try:
         with soundfile.SoundFile(io.BytesIO(data)) as wav:

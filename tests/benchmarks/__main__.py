@@ -12,7 +12,7 @@ import sys
 from pathlib import Path
 
 HERE = Path(__file__).resolve().parent
-BENCHMARKS = ("voice", "slew", "processes", "memory", "loudness", "comparison")
+BENCHMARKS = ("voice", "slew", "processes", "memory", "loudness", "comparison", "batch", "cluster", "panel", "live")
 
 
 def main() -> None:

@@ -21,7 +21,7 @@ import click
 from glidesmith import __version__
 from glidesmith.errors import GlidesmithError
 
-COMMANDS = ("render", "measure", "compare", "tally", "check", "completion")
+COMMANDS = ("render", "measure", "compare", "batch", "live", "tally", "check", "devices", "completion")
 
 BAD_INPUT = 2
 INTERRUPTED = 130

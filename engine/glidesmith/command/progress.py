@@ -19,12 +19,16 @@ class Progress:
     """Shows how far a job is once it has taken a second; the instance is the callback.
 
     On a terminal it is one line that changes in place and is gone at the end. Elsewhere nothing is shown
-    unless ``wanted``, and then it is a plain line each second.
+    unless ``wanted``, and then it is a plain line each second. ``done`` and ``total`` are those told last.
     """
 
-    def __init__(self, label: str, wanted: bool | None = None) -> None:
-        """``wanted``: True always, False never, None on a terminal only."""
-        self._label = label
+    def __init__(self, label: str, wanted: bool | None = None, unit: str = "") -> None:
+        """``wanted``: True always, False never, None on a terminal only.
+
+        ``unit``: what is counted, where its rate is to be shown.
+        """
+        self._label, self._unit = label, unit
+        self.done = self.total = 0
         self._in_place = sys.stderr.isatty()
         self._on = self._in_place if wanted is None else wanted
         self._begun = self._shown = time.monotonic()
@@ -32,14 +36,17 @@ class Progress:
 
     def __call__(self, done: int, total: int) -> None:
         """``done`` of ``total`` units of work are made."""
+        self.done, self.total = done, total
         now = time.monotonic()
         pause_s = 0.1 if self._drawn else _PATIENCE_S
         if not self._on or now - self._shown < (pause_s if self._in_place else _PATIENCE_S):
             return
         self._shown = now
         part = done / total if total else 1.0
-        left_s = (now - self._begun) * (1.0 - part) / part if part else 0.0
-        self._draw(f": {100.0 * part:3.0f} %, {left_s:.0f} s left", part)
+        passed_s = now - self._begun
+        left_s = passed_s * (1.0 - part) / part if part else 0.0
+        rate = f", {done / passed_s:.3g} {self._unit}/s" if self._unit and passed_s else ""
+        self._draw(f": {100.0 * part:3.0f} %{rate}, {_spoken(left_s)} left", part)
 
     def _draw(self, text: str, part: float) -> None:
         if not self._in_place:
@@ -61,6 +68,10 @@ class Progress:
     ) -> None:
         if self._drawn:
             click.echo("\r" + " " * min(self._drawn, _columns() - 1) + "\r", err=True, nl=False)
+
+
+def _spoken(seconds: float) -> str:
+    return f"{seconds:.0f} s" if seconds < 120.0 else f"{seconds / 60.0:.0f} min"
 
 
 def _columns() -> int:
