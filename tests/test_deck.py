@@ -290,6 +290,28 @@ class TestSwapping:
             assert np.abs(np.diff(rows["pitch_volts"])).max() <= 1 - math.exp(-0.004 / 0.06)
             assert np.abs(np.diff(rows["control"])).max() <= 0.02 + 1e-12
 
+    @pytest.mark.parametrize("at", [21_000, 30_000])
+    def test_another_tuning_is_continuous_in_pitch_though_not_in_volts(self, at):
+        """0 V on C5, not C4: every voltage is a volt lower, and nothing is to be heard, in a glide or out
+        of one. The blend and the phase's last place may round.
+        """
+        deck = started(PRESETS["rc"])
+        played(deck, at)
+        deck.send(Swap(snapshot_of(preset(tuning={"zero_volts": "C5"}), LINE, RATE)))
+        expected = played(started(PRESETS["rc"]), at + 20_000)[at:]
+        np.testing.assert_allclose(played(deck, 20_000), expected, rtol=0, atol=1e-5)
+
+    def test_a_higher_reference_is_glided_to(self):
+        """A4 from 440 to 466.16 Hz while D3 is held: rc over a semitone, from the old pitch on; 1e-12 V."""
+        deck = started(PRESETS["rc"])
+        played(deck, 19_000 - 19_000 % 192)
+        cursor, _ = deck.rows(0)
+        deck.send(Swap(snapshot_of(preset(tuning={"a4_hz": 466.16}), LINE, RATE)))
+        played(deck, 192)
+        _, rows = deck.rows(cursor)
+        assert rows["pitch_volts"][0] == pytest.approx(-10 / 12 - math.log2(466.16 / 440), abs=1e-12)
+        assert rows["target_volts"][0] == pytest.approx(-10 / 12)
+
     def test_tempo_keeps_the_place_in_the_phrase(self):
         deck = started(PRESETS["rc"])
         played(deck, 24_000)

@@ -81,6 +81,11 @@ def _same_slew(one: Any, other: Any) -> bool:
 
 
 @inlined
+def _same_tuning(one: Any, other: Any) -> bool:
+    return one.octaves_at_zero == other.octaves_at_zero and one.octaves_per_volt == other.octaves_per_volt
+
+
+@inlined
 def _same_envelope(one: Any, other: Any) -> bool:
     return (
         one.attack == other.attack
@@ -106,13 +111,18 @@ def first_from(events: Any, sample: int) -> int:
 
 @kernel
 def _turn_pitch(before: Any, settings: Any, voice: Any, volts: float) -> None:
-    """Go on to ``volts`` under new settings, from where the pitch is."""
+    """Go on to ``volts`` under new settings, from where the pitch is; in another tuning at other volts."""
     glide = voice.pitch
     sample = voice.sample
-    if volts == glide.target and _same_slew(before.pitch, settings.pitch):
+    retuned = not _same_tuning(before, settings)
+    if volts == glide.target and not retuned and _same_slew(before.pitch, settings.pitch):
         return
     elapsed = elapsed_s(before, voice.pitch_sample, voice.pitch_fraction, sample, 0.0)
-    if volts == glide.target:
+    if retuned:
+        octaves = before.octaves_at_zero + before.octaves_per_volt * glide_volts(glide, elapsed)
+        origin = (octaves - settings.octaves_at_zero) / settings.octaves_per_volt
+        glide_begin(glide, settings.pitch, origin, volts)
+    elif volts == glide.target:
         glide_resettle(glide, settings.pitch, elapsed)
     else:
         glide_begin(glide, settings.pitch, glide_volts(glide, elapsed), volts)

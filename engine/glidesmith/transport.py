@@ -527,7 +527,9 @@ def _bit(place: int) -> Any:
 
 @kernel
 def _publish(parts: Any) -> None:
-    """Tell the other side how far things are; the places in use before the commands taken."""
+    """Tell the other side how far things are: the places in use before the commands taken, and last the
+    samples, so that whoever has heard a sample knows of every command behind it.
+    """
     deck, channels, words = parts.deck[0], parts.channels, parts.words
     state = parts.states[deck.states & (parts.states.size - 1)]
     place = channels[0].place
@@ -546,9 +548,9 @@ def _publish(parts: Any) -> None:
         used |= _bit(channels[1].place)
     store_release(words, STATES, deck.states)
     store_release(words, ROWS, deck.rows)
-    store_release(words, MADE, deck.sample)
     store_release(words, IN_USE, used)
     store_release(words, TAKEN, deck.taken)
+    store_release(words, MADE, deck.sample)
 
 
 @kernel
