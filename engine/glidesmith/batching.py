@@ -181,6 +181,8 @@ class Round:
         self._desk.sweep()
         self._make(run)
         self._desk.require_held()
+        if self.outcome.failed:
+            self._desk.sweep()
         if self.outcome.stopped:
             return self.outcome
         self._look_at_others()
@@ -283,9 +285,11 @@ class Round:
             title = printable(self._survey.request.folder.absolute().name) or "Batch"
             write_summary(desk.folder / SUMMARY_FILE, desk.records, told, title=title)
             desk.publish()
-            desk.journal.settle(desk.folder / MANIFEST_FILE)
-        elif self._plan.inputs.changed:
-            desk.journal.settle(desk.folder / MANIFEST_FILE)
+        elif not self._plan.inputs.changed:
+            return
+        begun = (item for item in desk.journal.begun if item not in desk.records)
+        unlisted = sorted(item for item in begun if desk.stamp(item) is not None)
+        desk.journal.settle(desk.folder / MANIFEST_FILE, unlisted)
 
     def _count(self, count: int) -> None:
         self._handled += count

@@ -15,7 +15,7 @@ import json
 import os
 import stat
 import sys
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from types import NoneType
@@ -407,8 +407,10 @@ class Journal:
             raise output_error(str(self.path), problem) from None
         return offset
 
-    def settle(self, manifest: Path) -> None:
+    def settle(self, manifest: Path, begun: Iterable[str] = ()) -> None:
         """Write the file anew, once the manifest holds all records: stamps alone are left in it.
+
+        What is still ``begun`` is an output that is there, and of which there is no record.
 
         In place, since the lock is on the file itself. Raises OutputError.
         """
@@ -422,12 +424,13 @@ class Journal:
                 digest.update(line)
                 self._file.write(line)
             self._file.write(line_of({"settled": digest.hexdigest()}))
+            self._file.writelines(line_of({"begun": item}) for item in begun)
             self._file.flush()
         except OSError as problem:
             raise output_error(str(self.path), problem) from None
-        self.begun.clear()
+        self.begun = set(begun)
         self.lines.clear()
-        self.is_clean = True
+        self.is_clean = not self.begun
 
     def _lines(self) -> Iterator[bytes]:
         yield _HEAD

@@ -12,7 +12,18 @@ import sys
 from pathlib import Path
 
 HERE = Path(__file__).resolve().parent
-BENCHMARKS = ("voice", "slew", "processes", "memory", "loudness", "comparison", "batch", "cluster", "panel", "live")
+BENCHMARKS = (
+    "voice",
+    "slew",
+    "processes",
+    "memory",
+    "loudness",
+    "comparison",
+    "batch",
+    "cluster",
+    "panel",
+    "live",
+)
 
 
 def main() -> None:

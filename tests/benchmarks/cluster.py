@@ -156,8 +156,9 @@ def _projection(client_us: float, task_us: float, stored: float, held: float) ->
     return (
         f"{MANY:,} items of {1e3 * ITEM_S:.0f} ms on {WORKERS:,} workers, on paper / measured constants: "
         f"{minutes['work']:.0f} min of work; scheduler {minutes['scheduler']:.1f} min (errands of "
-        f"{length_s:.1f} s, {task_us:.0f} µs a task); client {minutes['client']:.0f} min ({client_us:.0f} µs an "
-        f"item) and {MANY * held / 1e9:.1f} GB ({held:.0f} bytes an item); manifest {MANY * stored / 1e9:.1f} GB "
-        f"({stored:.0f} bytes an item); summary {minutes['summary']:.0f} min, "
-        f"{MOST_ROWS * row_bytes / 1e6:.0f} MB ({MOST_ROWS:,} rows at most)"
+        f"{length_s:.1f} s, {task_us:.0f} µs a task); client {minutes['client']:.0f} min "
+        f"({client_us:.0f} µs an item) and {MANY * held / 1e9:.1f} GB ({held:.0f} bytes an item); "
+        f"manifest {MANY * stored / 1e9:.1f} GB ({stored:.0f} bytes an item); "
+        f"summary {minutes['summary']:.0f} min, {MOST_ROWS * row_bytes / 1e6:.0f} MB "
+        f"({MOST_ROWS:,} rows at most)"
     )

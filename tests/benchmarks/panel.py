@@ -24,11 +24,11 @@ def report(runs: int, scale: float) -> Iterator[str]:
     with tempfile.TemporaryDirectory() as folder, served(Path(folder)) as found:
         found.session.play()
         share = _share(found, seconds, 1)
-        yield f"panel, server side, one panel at 30 frames a second: {share:.1%} of a core"
+        yield f"panel threads / one core, one panel at 30 frames a second: {share:.3f} (at most 0.15)"
         share = _share(found, seconds, 2)
-        yield f"panel, server side, two panels: {share:.1%} of a core"
+        yield f"panel threads / one core, two panels: {share:.3f}"
         share = _share(found, seconds, 1, _mover(found))
-        yield f"panel, server side, a setting moved 30 times a second, with figures: {share:.1%} of a core"
+        yield f"panel threads / one core, a setting moved 30 times a second: {share:.3f}"
         if CHROMIUM is None:
             yield "panel, from the browser's event to the sound: needs Debian's chromium"
             return
@@ -108,8 +108,8 @@ def _way_line(what: str, ways: list[float]) -> str:
     limit = BLOCK / SAMPLE_RATE + 0.010
     median = statistics.median(ways)
     return (
-        f"panel, {what}, {len(ways)} moves: median {1000 * median:.1f} ms, "
-        f"{median / limit:.2f} of one block and 10 ms; worst {1000 * max(ways):.1f} ms"
+        f"panel, {what} / one block and 10 ms, median of {len(ways)}: {median / limit:.2f} (at most 1) "
+        f"— {1000 * median:.1f} ms, worst {1000 * max(ways):.1f} ms"
     )
 
 

@@ -22,7 +22,7 @@ class Notes {
     byId("octave-down").addEventListener("click", () => this.shift(-12));
     byId("octave-up").addEventListener("click", () => this.shift(12));
     byId("velocity").addEventListener("input", () => setText(byId("velocity-text"), Number(byId("velocity").value).toFixed(2)));
-    
+    addEventListener("blur", () => this.releaseAll());
     document.addEventListener("visibilitychange", () => document.hidden && this.releaseAll());
     this.build();
     this.readPrint();
