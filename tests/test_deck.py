@@ -580,3 +580,36 @@ class TestSnapshot:
         )
         snapshot = snapshot_of(settings, notes, RATE)
         assert snapshot.pitch_events["sample"].max() == snapshot.loop_samples == math.ceil(0.95 * RATE)
+
+    @pytest.mark.parametrize("loop", [True, False])
+    @pytest.mark.parametrize(
+        "changes",
+        [
+            {"pitch.rise": 0.3},
+            {"pitch.law": "cosine", "gain.law": "rc", "gain.fall": 0.9},
+            {"envelope.attack": 0.2, "envelope.sustain": 0.1},
+            {"envelope.retrigger": False},
+            {"pitch.glide": "never"},
+            {"oscillator.width": 0.2, "oscillator.wave": "pulse"},
+            {"tuning.a4_hz": 442.0},
+            {"amplifier.velocity_db": 6.0},
+            {"envelope": None},
+            {"pitch.steps_per_octave": 5},
+        ],
+    )
+    def test_what_an_earlier_one_is_used_for_changes_nothing(self, changes, loop):
+        before = PRESETS["retrigger"]
+        after = before.changed(changes)
+        earlier = snapshot_of(before, LINE, RATE, loop=loop)
+        quick = snapshot_of(after, LINE, RATE, loop=loop, earlier=earlier, slot=2, gain_db=-3.0)
+        whole = snapshot_of(after, LINE, RATE, loop=loop, slot=2, gain_db=-3.0)
+        for name in ("settings", "pitch_events", "later_pitch_events", "gate_events"):
+            np.testing.assert_array_equal(getattr(quick, name), getattr(whole, name))
+        assert quick.program.wavetables is whole.program.wavetables
+        assert quick.program.cut_off == whole.program.cut_off
+        assert (quick.slot, quick.gain_db, quick.loop_samples) == (2, -3.0, whole.loop_samples)
+        slews_only = all(
+            key.startswith(("pitch.law", "pitch.rise", "gain.", "envelope.a", "envelope.s"))
+            for key in changes
+        )
+        assert (quick.gate_events is earlier.gate_events) == slews_only

@@ -12,6 +12,7 @@ import numpy as np
 
 from glidesmith.commands import Level, Match, Note, Panic, Play, Release, Stop, Swap
 from glidesmith.played import Keys, Sounding
+from glidesmith.program import only_slews_differ
 from glidesmith.snapshot import snapshot_of
 
 if TYPE_CHECKING:
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
     from glidesmith.console import Console, View
     from glidesmith.moves import Move
     from glidesmith.preset import Preset
+    from glidesmith.snapshot import Snapshot
 
 
 class Cues:
@@ -30,6 +32,7 @@ class Cues:
         self.later: View | None = None
         self.warnings: tuple[str, ...] = ()
         self._keys = Keys()
+        self._latest: Snapshot | None = None
 
     def next(self, console: "Console") -> "Command | None":
         """The next thing that the deck must be told of the settings, or None where it knows all.
@@ -93,7 +96,9 @@ class Cues:
             slot=view.slot,
             gain_db=view.gain_db,
             cycle=None if view.cycle is None else np.frombuffer(view.cycle, "<f8"),
+            earlier=self._latest,
         )
+        self._latest = snapshot
         volts = self._keys.volts(view.preset)
         return Swap(snapshot, when, smooth, math.nan if volts is None else volts)
 
@@ -134,11 +139,7 @@ def _slews_on(one: "View", other: "View") -> bool:
     """Whether only slews and envelope times differ, so that each goes on from where it is."""
     if not _sounds_as(replace(one, slot=other.slot), replace(other, preset=one.preset)):
         return False
-    old, new = one.preset, other.preset
-    if (old.envelope is None) != (new.envelope is None):
-        return False
-    same_pitch = replace(old.pitch, slew=new.pitch.slew) == new.pitch
-    return same_pitch and _heard(old)[3] == _heard(new)[3] and _heard(old)[5:] == _heard(new)[5:]
+    return only_slews_differ(one.preset, other.preset)
 
 
 def command_name(command: "Command") -> str:

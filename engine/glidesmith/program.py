@@ -6,7 +6,7 @@ through two lists of events.
 """
 
 import math
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import TYPE_CHECKING, Any
 
@@ -338,9 +338,7 @@ def compile_program(
     )
     tables = build_wavetables(preset.oscillator.wave, preset.oscillator.width, cycle, lowest_hz, rate)
     pitch_events, gate_events = _pitch_events(pitch, rate), _gate_events(gate, rate)
-    latest = int(gate_events["sample"][-1]) + 1 + math.ceil(tail_s * rate)
-    quiet = quiet_sample(settings, gate_events, latest)
-    settings["length"] = min(quiet, latest)
+    cut_off = _set_length(settings, gate_events, tail_s)
     warnings = _clip_warnings(preset, phrase, pitch)
     return Program(
         preset,
@@ -352,6 +350,44 @@ def compile_program(
         tables,
         pitch,
         gate,
-        quiet > latest,
+        cut_off,
         warnings,
     )
+
+
+def _set_length(settings: "NDArray[Any]", gate_events: "NDArray[Any]", tail_s: float) -> bool:
+    """Settle the program's length in samples; whether the sound would go on after it."""
+    latest = int(gate_events["sample"][-1]) + 1 + math.ceil(tail_s * float(settings["sample_rate"][0]))
+    quiet = quiet_sample(settings, gate_events, latest)
+    settings["length"] = min(quiet, latest)
+    return quiet > latest
+
+
+def only_slews_differ(one: "Preset", other: "Preset") -> bool:
+    """Whether two presets differ in nothing but slew settings and the times and sustain of an envelope.
+
+    Then a phrase's events and the waves are the same, and what is playing can go on in place. Titles, paths
+    and phrases don't count.
+    """
+    envelopes = one.envelope, other.envelope
+    if (envelopes[0] is None) != (envelopes[1] is None):
+        return False
+    return (
+        one.oscillator == other.oscillator
+        and one.pitch.glide == other.pitch.glide
+        and one.pitch.steps_per_octave == other.pitch.steps_per_octave
+        and one.amplifier == other.amplifier
+        and one.tuning == other.tuning
+        and one.converter == other.converter
+        and one.drone == other.drone
+        and all(e is None or e.retrigger == getattr(envelopes[0], "retrigger", None) for e in envelopes)
+    )
+
+
+def resettled(program: Program, preset: "Preset", tail_s: float = 30.0) -> Program:
+    """A program as `compile_program` would make it for a preset of which `only_slews_differ`, in a fraction
+    of the time: events and waves are kept.
+    """
+    settings = _settings(preset, program.sample_rate, program.pitch_changes[0].held_volts)
+    cut_off = _set_length(settings, program.gate_events, tail_s)
+    return replace(program, preset=preset, settings=settings, cut_off=cut_off)

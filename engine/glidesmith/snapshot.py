@@ -8,7 +8,14 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from glidesmith.errors import SettingError
-from glidesmith.program import PITCH_EVENT, Program, compile_program, sample_position
+from glidesmith.program import (
+    PITCH_EVENT,
+    Program,
+    compile_program,
+    only_slews_differ,
+    resettled,
+    sample_position,
+)
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -30,6 +37,7 @@ class Snapshot:
     ``program`` is that of a render; ``later_pitch_events`` are those of a loop's second round and all after
     it, which has no first note. ``loop_samples``: the length of a round, 0 without a loop. ``unit_samples``:
     samples that a second of the phrase, at its own tempo, takes. ``gain_db``: the slot's level match.
+    ``source``: the phrase at its own tempo and pitch, the tempo, the transposition, and whether it loops.
     """
 
     program: Program
@@ -41,6 +49,7 @@ class Snapshot:
     unit_samples: float
     slot: int
     gain_db: float
+    source: "tuple[Phrase, Fraction, int, bool]"
 
 
 def moved_phrase(phrase: "Phrase", tempo: Fraction = Fraction(1), transpose: int = 0) -> "Phrase":
@@ -90,6 +99,7 @@ def snapshot_of(
     slot: int = 0,
     gain_db: float = 0.0,
     cycle: "NDArray[np.float64] | None" = None,
+    earlier: Snapshot | None = None,
 ) -> Snapshot:
     """Settle what a slot plays.
 
@@ -111,12 +121,21 @@ def snapshot_of(
         The gain that matches the slot's loudness to the others'.
     cycle : float64 (n,), optional
         What `read_cycle` gives of the oscillator's file, where that was read already.
+    earlier : Snapshot, optional
+        One whose events and waves are used again where only slews differ; the result is the same.
 
     Raises
     ------
     SettingError
         As `compile_program` does, and for a transposition that leaves MIDI's notes.
     """
+    source = (phrase, tempo, transpose, loop)
+    if earlier is not None and _goes_on(earlier, preset, source, sample_rate):
+        program = resettled(earlier.program, preset)
+        settings = program.settings.copy()
+        if loop:
+            settings["length"] = ENDLESS
+        return replace(earlier, program=program, settings=settings, slot=slot, gain_db=gain_db)
     moved = moved_phrase(phrase, tempo, transpose)
     program = compile_program(preset, moved, sample_rate, cycle=cycle, lowest_hz=LOWEST_KEY_HZ)
     settings = program.settings.copy()
@@ -135,6 +154,21 @@ def snapshot_of(
         float(sample_rate / tempo),
         slot,
         gain_db,
+        source,
+    )
+
+
+def _goes_on(earlier: Snapshot, preset: "Preset", source: "tuple[Any, ...]", sample_rate: int) -> bool:
+    """Whether an earlier snapshot's events and waves are those of ``preset`` too.
+
+    A file's content may have changed under its name, so waves from files are always made anew.
+    """
+    same_phrase = earlier.source[0] is source[0] and earlier.source[1:] == source[1:]
+    return (
+        same_phrase
+        and earlier.program.sample_rate == sample_rate
+        and preset.oscillator.wave != "file"
+        and only_slews_differ(earlier.program.preset, preset)
     )
 
 
