@@ -1,7 +1,6 @@
 """Comparison sets: candidates, equal loudness, curves, and a folder that never holds two sets.
 
-Loudness is checked with `pyloudnorm` (DeMan filters), an independent meter, to 0.1 LU, on phrases long enough
-that a block more or less at the end, which it counts otherwise, does not matter; true peak by polyphase
+Loudness is checked with `pyloudnorm` (DeMan filters), an independent meter, to 0.1 LU; true peak by polyphase
 interpolation (`scipy.signal.resample_poly`, 16 times), to 0.2 dB.
 """
 
@@ -19,13 +18,14 @@ import numpy as np
 import pyloudnorm
 import pytest
 import soundfile
-from scipy.signal import resample_poly
+from scipy.signal import resample_poly, sosfilt
 
 import glidesmith.comparison as comparison
 from conftest import PRESETS
 from glidesmith import OutputError, PresetError, SettingError, compare, load_preset, measure, render
 from glidesmith.candidates import axes_from_texts, axes_from_values, file_name, read_sheet, varied_candidates
 from glidesmith.curves import curves
+from glidesmith.loudness import k_weighting
 from glidesmith.program import compile_program
 from making import make_phrase, make_preset, random_phrase
 
@@ -229,6 +229,31 @@ def test_sheets_that_can_not_be_used_are_refused_in_a_line(tmp_path, text, words
     assert words in line
 
 
+@pytest.mark.parametrize(
+    ("names", "labels"),
+    [
+        (["a", "a ", "a (1)"], ["a (2)", "a (3)", "a (1)"]),
+        (["a", " a", "a  (2)", "a (2)"], ["a (1)", "a (3)", "a  (2)", "a (2)"]),
+        (["a (1)", "a", "a ", "b"], ["a (1)", "a (2)", "a (3)", "b"]),
+    ],
+)
+def test_no_two_labels_are_alike(tmp_path, names, labels):
+    path = tmp_path / "sheet.toml"
+    path.write_text("".join(f'["{name}"]\n"pitch.rise" = 0.{n}\n' for n, name in enumerate(names, 1)))
+    assert [candidate.label for candidate in read_sheet(make_preset(), path, 16)[1]] == labels
+
+
+def test_a_preset_given_as_a_sheet_is_told_as_that(tmp_path):
+    path = PRESETS / "night-ferry-lead.toml"
+    with pytest.raises(SettingError) as caught:
+        read_sheet(make_preset(), path, 16)
+    (line,) = caught.value.lines
+    assert line.startswith(f"{path}: is a preset, not a sheet")
+    (tmp_path / "sheet.toml").write_text("[pitch]\npitch.rise = 0.1\n[gain]\ngain.rise = 0.2\n")
+    found = read_sheet(make_preset(), tmp_path / "sheet.toml", 16)[1]
+    assert [candidate.label for candidate in found] == ["pitch", "gain"]
+
+
 def test_several_presets_are_compared_by_what_differs(tmp_path, pages):
     one, two = (
         make_preset(title="Lead"),
@@ -279,6 +304,7 @@ def test_the_target_is_reached_where_the_peaks_allow_it(tmp_path):
         "target_lufs": -23.0,
         "limited_by": None,
         "gated": True,
+        "metered_s": pytest.approx(facts["candidates"][0]["frames"] / 48_000),
     }
 
 
@@ -303,6 +329,7 @@ def test_the_gain_told_is_the_gain_applied_to_the_render(tmp_path):
     done = compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=LAWS)
     for entry in done.facts["candidates"]:
         plain = render(make_preset().changed(entry["varied"]), PHRASE).audio
+        plain = np.pad(plain, (0, entry["frames"] - plain.size))
         expected = np.rint(
             (plain * np.float64(10.0 ** (entry["gain_db"] / 20.0))).astype(np.float32) * 2.0**23
         )
@@ -319,6 +346,99 @@ def test_a_phrase_shorter_than_a_block_is_matched_without_the_gate(tmp_path):
     assert all(
         entry["lufs"] == pytest.approx(facts["loudness"]["common_lufs"]) for entry in facts["candidates"]
     )
+
+
+BRIEF = [
+    (make_phrase((0, "0.6", 57), ("0.6", "1.3", 64)), {"gain.rise": [0, 10, 60]}),
+    (make_phrase((0, "0.6", 57)), {"gain.rise": [0.04, 0.3, 0.8]}),
+    (make_phrase((0, "0.45", 57), ("0.45", "0.93", 64)), {"gain.fall": [0.001, 0.3, 2]}),
+    (make_phrase((0, "0.51", 57)), {"oscillator.wave": ["saw", "sine"], "gain.law": ["rc", "linear"]}),
+]
+
+
+@pytest.mark.parametrize(("phrase", "vary"), BRIEF)
+@pytest.mark.parametrize("rate", [8000, 44_100, 48_000])
+def test_brief_phrases_are_as_loud_by_an_independent_meter_however_they_end(tmp_path, phrase, vary, rate):
+    """What ends in the middle of a hop counts as much as what ends on one: all clips are of one length.
+
+    At 8 kHz the meters' filters are farther apart, at the top of the shelf's slope (see `k_weighting`).
+    """
+    facts = compare(make_preset(), tmp_path, phrase=phrase, vary=vary, sample_rate=rate).facts
+    assert facts["loudness"]["gated"]
+    assert len({entry["frames"] for entry in facts["candidates"]}) == 1
+    for entry in facts["candidates"]:
+        audio, _ = soundfile.read(tmp_path / entry["file"])
+        assert len(audio) == entry["frames"]
+        assert len(audio) * 10 % rate == 0
+        assert not audio[-3 * rate // 10 + 1 :].any(), "a gating block's reach of silence"
+        assert lufs(audio, rate) == pytest.approx(facts["loudness"]["common_lufs"], abs=0.1), entry["label"]
+
+
+def weighted_energy(audio, rate):
+    """The sum of the squares of the K-weighted signal, by scipy's filter with the standard's coefficients."""
+    weighted = sosfilt(k_weighting(rate), np.pad(np.asarray(audio, float), (0, rate)))
+    return float((weighted**2).sum())
+
+
+@pytest.mark.parametrize("fall", [["rc", "linear"], ["linear", "rc"]])
+def test_candidates_on_both_sides_of_a_block_are_measured_one_way(tmp_path, fall):
+    """0.72 s and 0.399 s: by one energy over one time, the longer one's; no gate for either."""
+    brief = make_phrase((0, "0.1", 57))
+    preset = make_preset(gain={"rise": 0.004, "fall": 0.3})
+    facts = compare(preset, tmp_path, phrase=brief, vary={"gain.law": fall}).facts
+    lengths = [render(preset.changed(entry["varied"]), brief).audio.size for entry in facts["candidates"]]
+    assert min(lengths) < 0.4 * 48_000 < max(lengths)
+    assert facts["loudness"]["gated"] is False
+    assert facts["loudness"]["metered_s"] == pytest.approx(max(lengths) / 48_000)
+    assert {entry["rendered"]["gated"] for entry in facts["candidates"]} == {False}
+    for entry in facts["candidates"]:
+        audio, _ = soundfile.read(tmp_path / entry["file"])
+        level = -0.691 + 10.0 * math.log10(weighted_energy(audio, 48_000) / max(lengths))
+        assert level == pytest.approx(facts["loudness"]["common_lufs"], abs=0.01), entry["label"]
+
+
+def test_a_longer_candidate_lengthens_the_clips_that_are_there(tmp_path):
+    """They are not rendered again, and the set is to the byte what it would be made at once."""
+    short = {"gain.fall": [0.08, 0.09]}
+    longer = {"gain.fall": [0.08, 0.09, 0.8]}
+    before = compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=short).facts["candidates"][0]
+    done = compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=longer)
+    assert done.facts["candidates"][0]["frames"] > before["frames"]
+    assert done.kept == ("gain fall 80 ms", "gain fall 90 ms")
+    compare(make_preset(), tmp_path / "fresh", phrase=PHRASE, vary=longer)
+    assert contents(tmp_path / "set") == contents(tmp_path / "fresh")
+    compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=short, replace=True)
+    compare(make_preset(), tmp_path / "short", phrase=PHRASE, vary=short)
+    assert contents(tmp_path / "set") == contents(tmp_path / "short")
+
+
+def test_a_longer_candidate_of_a_set_without_the_gate_has_the_others_made_again(tmp_path):
+    brief = make_phrase((0, "0.1", 57))
+    short, longer = {"gain.fall": [0.05, 0.06]}, {"gain.fall": [0.05, 0.06, 0.9]}
+    compare(make_preset(), tmp_path / "set", phrase=brief, vary=short)
+    assert compare(make_preset(), tmp_path / "set", phrase=brief, vary=longer).kept == ()
+    compare(make_preset(), tmp_path / "fresh", phrase=brief, vary=longer)
+    assert contents(tmp_path / "set") == contents(tmp_path / "fresh")
+
+
+@pytest.mark.parametrize("rate", [65_536, 65_537, 96_001, 192_001])
+def test_rates_that_flac_does_not_have_are_refused_in_a_line(tmp_path, rate):
+    with pytest.raises(SettingError) as caught:
+        compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=LAWS, sample_rate=rate)
+    (line,) = caught.value.lines
+    below = rate // 10 * 10
+    assert "multiples of 10" in line
+    assert f"take {below} or {below + 10}" in line
+    assert not (tmp_path / "set").exists()
+
+
+@pytest.mark.parametrize("rate", [8001, 65_535, 65_540, 192_010])
+def test_all_other_rates_make_a_set(tmp_path, rate):
+    brief = make_phrase((0, "0.2", 57), ("0.2", "0.45", 64))
+    facts = compare(make_preset(), tmp_path, phrase=brief, vary=LAWS, sample_rate=rate).facts
+    for entry in facts["candidates"]:
+        audio, found = soundfile.read(tmp_path / entry["file"])
+        assert (found, len(audio)) == (rate, entry["frames"])
 
 
 def test_a_silent_candidate_is_refused(tmp_path):
@@ -448,17 +568,67 @@ def test_a_candidate_that_lowers_the_loudness_has_the_others_made_again(tmp_path
     assert contents(tmp_path / "set") == contents(tmp_path / "fresh")
 
 
+def harmed(path, harm):
+    data = path.read_bytes()
+    made = {"short": data[: len(data) // 2], "other": data[:-3] + b"abc", "rubbish": b"rubbish"}
+    path.unlink() if harm == "gone" else path.write_bytes(made[harm])
+
+
+@pytest.mark.parametrize("harm", ["short", "other", "rubbish"])
+def test_a_wav_that_was_changed_since_is_written_over_only_when_asked(tmp_path, harm):
+    folder = tmp_path / "set"
+    compare(make_preset(), folder, phrase=PHRASE, vary=LAWS)
+    made = contents(folder)
+    harmed(folder / "02-exp.wav", harm)
+    before = snapshot(folder)
+    for vary in (LAWS, {"pitch.law": [*LAWS["pitch.law"], "log"]}):
+        with pytest.raises(OutputError) as caught:
+            compare(make_preset(), folder, phrase=PHRASE, vary=vary)
+        (line,) = caught.value.lines
+        assert '"02-exp.wav" was changed since' in line
+        assert "--replace" in line
+        assert snapshot(folder) == before
+    done = compare(make_preset(), folder, phrase=PHRASE, vary=LAWS, replace=True)
+    assert any("02-exp.wav" in line and "written anew" in line for line in done.warnings)
+    assert done.rendered == ("exp",)
+    assert contents(folder) == made
+    assert compare(make_preset(), folder, phrase=PHRASE, vary=LAWS).warnings == ()
+
+
 @pytest.mark.parametrize("harm", ["gone", "short", "other", "rubbish"])
-def test_a_wav_that_is_not_what_was_written_is_made_again(tmp_path, harm):
+def test_a_wav_of_a_run_that_did_not_end_is_made_again(tmp_path, harm):
+    """The page is what a run writes last; a WAV that is gone is made again in any case."""
     compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=LAWS)
     before = contents(tmp_path / "set")
-    path = tmp_path / "set" / "02-exp.wav"
-    data = path.read_bytes()
-    harmed = {"short": data[: len(data) // 2], "other": data[:-3] + b"abc", "rubbish": b"rubbish"}
-    path.unlink() if harm == "gone" else path.write_bytes(harmed[harm])
+    harmed(tmp_path / "set" / "02-exp.wav", harm)
+    if harm != "gone":
+        (tmp_path / "set" / "index.html").unlink()
     done = compare(make_preset(), tmp_path / "set", phrase=PHRASE, vary=LAWS)
     assert done.rendered == ("exp",)
+    assert done.warnings == ()
     assert contents(tmp_path / "set") == before
+
+
+def test_a_run_killed_while_it_writes_wavs_anew_is_finished_by_the_next(tmp_path, monkeypatch):
+    """A candidate that lowers the loudness: the facts are new already, the WAVs not yet. That is no change."""
+    clicks = make_phrase(*((k, k + Fraction(1, 100), 33) for k in range(4)))
+    preset = make_preset(gain={"rise": 0.0, "fall": 0.001}, oscillator={"width": 0.05})
+    waves = {"oscillator.wave": ["sine", "triangle", "pulse"]}
+    compare(preset, tmp_path / "set", phrase=clicks, vary={"oscillator.wave": ["sine", "triangle"]})
+
+    class Killed(BaseException):
+        pass
+
+    def killed(self):
+        raise Killed
+
+    with monkeypatch.context() as broken:
+        broken.setattr(comparison.WavSink, "close", killed)
+        with pytest.raises(Killed):
+            compare(preset, tmp_path / "set", phrase=clicks, vary=waves)
+    assert compare(preset, tmp_path / "set", phrase=clicks, vary=waves).warnings == ()
+    compare(preset, tmp_path / "fresh", phrase=clicks, vary=waves)
+    assert contents(tmp_path / "set") == contents(tmp_path / "fresh")
 
 
 OTHER_SETS = [
@@ -648,6 +818,21 @@ def test_no_presets_and_a_sheet_for_several_are_refused(tmp_path):
     two = [make_preset(title="A"), make_preset(title="B", pitch={"law": "exp"})]
     with pytest.raises(SettingError, match="one preset"):
         compare(two, tmp_path / "set", phrase=PHRASE, sheet="sheet.toml")
+
+
+@pytest.mark.parametrize("name", ["", "comparison.json"])
+def test_a_link_that_leads_nowhere_is_told_as_that(tmp_path, name):
+    folder = tmp_path / "set"
+    if name:
+        folder.mkdir()
+    (folder / name).symlink_to(tmp_path / "gone")
+    for replace in (False, True):
+        with pytest.raises(OutputError) as caught:
+            compare(make_preset(), folder, phrase=PHRASE, vary=LAWS, replace=replace)
+        (line,) = caught.value.lines
+        assert line.startswith(f"{folder / name}: is a link to ")
+        assert "not there" in line
+    assert not (tmp_path / "gone").exists()
 
 
 def test_a_file_in_place_of_the_folder_is_told(tmp_path):

@@ -128,7 +128,10 @@ def test_a_run_tells_as_json_how_it_went(tmp_path):
     assert facts["callback_p999_us"] <= facts["callback_worst_us"] + quarter_us
     assert facts["latency_s"] > 0.0
     assert "turn your amplifier or headphones down first" in told
-    assert soundfile.info(str(tmp_path / "take.wav")).frames == facts["capture"]["frames"] >= RATE
+    samples, _ = soundfile.read(tmp_path / "take.wav", dtype="float32")
+    assert len(samples) == facts["capture"]["frames"] >= RATE
+    assert samples[-RATE // 10 :].any()
+    assert not samples[-RATE // 200 :].any()  # it ends by a fade, not in mid-wave
 
 
 @needs_jack

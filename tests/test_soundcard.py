@@ -229,7 +229,7 @@ def test_revoking_waits_for_the_call_that_is_under_way():
     assert Lease(0, 0, 1).revoke()  # compiles what revokes
     words = np.zeros(2, np.int64)
     lease = Lease(_wait_for_a_word.address, words.ctypes.data, 1)
-    playing = threading.Thread(target=call, args=(lease, np.zeros((1, 1), np.float32)))
+    playing = threading.Thread(target=call, args=(lease, np.zeros((1, 1), np.float32)), daemon=True)
     playing.start()
     while not words[1]:
         time.sleep(0.001)

@@ -20,7 +20,7 @@ from glidesmith.errors import OutputError, SettingError
 from glidesmith.manifest import MANIFEST_FILE, OutputFacts, Record, write_manifest
 from glidesmith.outcome import SUMMARY_FILE, NeverLands, Outcome
 from glidesmith.planning import Plan, Survey, checked_request
-from glidesmith.production import Failure, Options, Order, Place, Runner, run_here
+from glidesmith.production import Failure, Options, Order, Place, Runner, get_ready, run_here
 from glidesmith.text import printable, shown
 
 if TYPE_CHECKING:
@@ -134,22 +134,33 @@ def checked_jobs(jobs: object) -> int:
 
 
 @contextmanager
-def local_runner(jobs: int) -> Iterator[Runner]:
-    """What makes items on this machine, for as long as it is needed; nothing is started before it is."""
+def local_runner(jobs: int, at_once: bool = False) -> Iterator[Runner]:
+    """What makes items on this machine, for as long as it is needed.
+
+    Nothing is loaded or started before it is needed, unless ``at_once``.
+    """
     if jobs == 1 or not sys.executable:
+        if at_once:
+            get_ready()
         yield run_here
         return
     with ExitStack() as stack:
         crew: list[Crew] = []
 
+        def start() -> None:
+            from glidesmith.crew import Crew
+
+            crew.append(stack.enter_context(Crew(jobs)))
+            crew[0].start()
+
         def run(orders: Iterator[Order], place: Place) -> Iterator[tuple[int, Record | Failure]]:
             for first in orders:
                 if not crew:
-                    from glidesmith.crew import Crew
-
-                    crew.append(stack.enter_context(Crew(jobs)))
+                    start()
                 yield from crew[0].run(chain((first,), orders), place)
 
+        if at_once:
+            start()
         yield run
 
 

@@ -18,7 +18,7 @@ import re
 import unicodedata
 from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
-from itertools import product
+from itertools import count, product
 from pathlib import Path
 from typing import Any
 
@@ -192,6 +192,7 @@ def read_sheet(preset: Preset, path: Path, most: int) -> tuple[str, tuple[Candid
     where = printable(str(path))
     text = decoded(read_bytes(path, MOST_SHEET_BYTES, SettingError), where, SettingError)
     mapping = toml_mapping(text, where, SettingError)
+    _require_no_preset(mapping, where)
     mistakes = Mistakes(where)
     title = mapping.pop("title", "")
     if not isinstance(title, str):
@@ -212,6 +213,21 @@ def read_sheet(preset: Preset, path: Path, most: int) -> tuple[str, tuple[Candid
     ]  # fmt: skip
     changed.raise_mistakes(len(candidates))
     return title, tuple(_distinct_labels(candidates))
+
+
+def _require_no_preset(mapping: Mapping[str, object], where: str) -> None:
+    """Raise SettingError for a preset: its tables hold settings by their short names."""
+    tables = {name: table for name, table in mapping.items() if name != "title"}
+    short = [
+        name
+        for name, table in tables.items()
+        if isinstance(table, Mapping) and any(f"{name}.{leaf}" in KEY for leaf in table)
+    ]
+    if short and len(short) == len(tables):
+        raise SettingError(
+            f"{where}: is a preset, not a sheet, whose tables each name a candidate; to compare presets name "
+            "them one after the other, without --sheet"
+        )
 
 
 def _told(changes: Mapping[str, object]) -> dict[str, object]:
@@ -383,16 +399,19 @@ def heard_settings(preset: Preset) -> dict[str, object]:
 
 
 def _distinct_labels(candidates: Sequence[Candidate]) -> list[Candidate]:
-    """The same candidates; labels that more than one has get a number."""
+    """The same candidates; labels that more than one has get a number, such that no two are alike."""
     labels = [candidate.label for candidate in candidates]
-    if len(set(labels)) == len(labels):
+    taken = {label for label in labels if labels.count(label) == 1}
+    if len(taken) == len(labels):
         return list(candidates)
-    return [
-        replace(candidate, label=f"{candidate.label} ({number})")
-        if labels.count(candidate.label) > 1
-        else candidate
-        for number, candidate in enumerate(candidates, 1)
-    ]
+    distinct: list[Candidate] = []
+    for number, candidate in enumerate(candidates, 1):
+        label = candidate.label
+        if labels.count(label) > 1:
+            label = next(told for n in count(number) if (told := f"{label} ({n})") not in taken)
+            taken.add(label)
+        distinct.append(replace(candidate, label=label))
+    return distinct
 
 
 def require_different(candidates: Sequence[Candidate]) -> None:

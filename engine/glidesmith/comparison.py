@@ -51,7 +51,7 @@ from glidesmith.setfolder import (
     SetFolder,
     ground_of,
 )
-from glidesmith.takes import TARGET_LUFS, Take, common_loudness, warnings_of
+from glidesmith.takes import TARGET_LUFS, Span, Take, check_rate, common_loudness, common_span, warnings_of
 from glidesmith.text import printable, shown
 from glidesmith.wav import WavSink
 
@@ -59,6 +59,7 @@ if TYPE_CHECKING:
     from glidesmith.facts import Facts
     from glidesmith.partfile import PartFile
     from glidesmith.phrase import Phrase
+    from glidesmith.program import Program
 
 MOST_FRAMES = 100_000_000
 """Of all candidates together: some 35 minutes at 48 kHz. A page can't hold much more."""
@@ -173,7 +174,7 @@ def compare(
         The reference glide: semitones, over 0 to 120, by default an octave; and a note name or MIDI number,
         by default the phrase's median note.
     sample_rate : int
-        Hz, 8,000 to 384,000.
+        Hz, 8,000 to 384,000; over 65,535 in multiples of 10, since the page holds FLAC.
     tolerance_cents : float
         How near to its note a glide has landed, 0.01 to 1200 cents.
     most : int
@@ -211,6 +212,12 @@ def compare(
         place.require_names_free({*plan.files, FACTS_FILE, PAGE_FILE})
     else:
         place.require_free(ground_of(heading), [candidate.digest for candidate in plan.candidates])
+    changed = place.changed_wavs()
+    if changed and not replace:
+        raise OutputError(
+            f"{place.name}: {_listed(changed)} changed since the set was made and would be written anew; "
+            "choose another folder, move what you changed elsewhere, or write there all the same with --replace"
+        )
     steps = _Steps(progress, 2 * len(plan.candidates))
     takes = _takes(plan)
     earlier = place.earlier if place.has_ground(ground_of(heading)) else {}
@@ -222,8 +229,18 @@ def compare(
         facts,
         tuple(take.label for take in takes if take.kept is None),
         tuple(take.label for take in takes if take.kept is not None),
-        (*warnings_of(takes), *place.left_warnings()),
+        (*warnings_of(takes), *place.left_warnings(), *_anew_warnings(place, changed)),
     )
+
+
+def _listed(names: Sequence[str]) -> str:
+    return f"{', '.join(shown(name) for name in names)} {'was' if len(names) == 1 else 'were'}"
+
+
+def _anew_warnings(place: SetFolder, changed: Sequence[str]) -> list[str]:
+    if not changed:
+        return []
+    return [f"{place.name}: {_listed(changed)} changed since the set was made, and written anew"]
 
 
 class _Steps:
@@ -265,6 +282,7 @@ def _planned(
     if not played.notes:
         raise SettingError("the phrase has no notes: there is nothing to hear")
     base_facts = measure(base, played, tolerance_cents, sample_rate)
+    check_rate(base_facts.sample_rate)
     set_apart = list(vary or {}) if sheet is None else [key for c in candidates for key in c.varied]
     asked = equality(*equal, played, tolerance_cents, set_apart)
     candidates = equalised(base, candidates, asked, tolerance_cents)
@@ -316,22 +334,28 @@ def _require_inputs_kept(plan: _Plan, folder: Path) -> None:
 
 def _takes(plan: _Plan) -> list[Take]:
     """What is known of each candidate without its audio."""
+    programs: list[Program] = []
+    for candidate in plan.candidates:
+        programs.append(compile_program(candidate.preset, plan.phrase, plan.sample_rate))
+        _require_fit_for_page(programs[-1].length, plan)
+    span = common_span([program.length for program in programs], plan.sample_rate)
     takes: list[Take] = []
-    frames = 0
-    for candidate, file in zip(plan.candidates, plan.files, strict=True):
-        program = compile_program(candidate.preset, plan.phrase, plan.sample_rate)
-        frames += program.length
-        if frames > MOST_FRAMES:
-            raise SettingError(
-                f"{len(plan.candidates)} candidates of {program.length / plan.sample_rate:.0f} s make more "
-                f"than {MOST_FRAMES / plan.sample_rate / 60:.0f} minutes of audio, too much for one page; "
-                "take a shorter phrase, fewer candidates or a lower rate"
-            )
+    for candidate, file, program in zip(plan.candidates, plan.files, programs, strict=True):
         facts = measure(candidate.preset, plan.phrase, plan.tolerance_cents, plan.sample_rate)
         differs = remaining_differences(facts, plan.base_facts, plan.equal.mode)
-        lines = curves(candidate.preset, plan.phrase, program.length / plan.sample_rate)
-        takes.append(Take(candidate, file, program, facts, differs, lines))
+        lines = curves(candidate.preset, plan.phrase, span.frames / plan.sample_rate)
+        takes.append(Take(candidate, file, program, facts, differs, lines, span))
     return takes
+
+
+def _require_fit_for_page(frames: int, plan: _Plan) -> None:
+    """Raise SettingError where all candidates, each so long, are more than a page can hold."""
+    if frames * len(plan.candidates) > MOST_FRAMES:
+        raise SettingError(
+            f"{len(plan.candidates)} candidates of {frames / plan.sample_rate:.0f} s make more "
+            f"than {MOST_FRAMES / plan.sample_rate / 60:.0f} minutes of audio, too much for one page; "
+            "take a shorter phrase, fewer candidates or a lower rate"
+        )
 
 
 def _workers() -> int:
@@ -345,6 +369,10 @@ def _match_loudness(
 
     ``earlier`` are candidates in the folder that were rendered from the same.
     """
+    span, sample_rate = takes[0].span, takes[0].sample_rate
+    metered_s = span.metered_frames / sample_rate
+    if place.facts is None or not _metered_alike(place.facts["loudness"], span, metered_s):
+        earlier = {}
     with ThreadPoolExecutor(_workers()) as pool:
         steps.made([pool.submit(take.measure, earlier.get(take.digest)) for take in takes])
         common, limit = common_loudness(takes)
@@ -355,8 +383,17 @@ def _match_loudness(
         "common_lufs": common,
         "target_lufs": TARGET_LUFS,
         "limited_by": limit,
-        "gated": all(take.rendered.gated for take in takes),
+        "gated": span.gated,
+        "metered_s": metered_s,
     }
+
+
+def _metered_alike(loudness: Mapping[str, Any], span: Span, metered_s: float) -> bool:
+    """Whether an earlier set's loudness is what would be measured now. Silence more or less changes nothing
+    where it is gated."""
+    if "metered_s" not in loudness or loudness.get("gated") is not span.gated:
+        return False
+    return span.gated or bool(loudness["metered_s"] == metered_s)
 
 
 def _write(place: SetFolder, takes: Sequence[Take], facts: dict[str, Any], steps: _Steps) -> None:
@@ -385,8 +422,9 @@ def _stands(place: SetFolder, take: Take, facts: Mapping[str, Any]) -> bool:
     """Whether a take's WAV is in the folder already, to the last byte."""
     if take.kept is None or place.facts is None:
         return False
-    same_name = take.kept.file == take.file and take.kept.entry["label"] == take.label
-    return same_name and place.facts["title"] == facts["title"]
+    entry = take.kept.entry
+    same = take.kept.file == take.file and entry["label"] == take.label and entry["frames"] == take.codes.size
+    return same and place.facts["title"] == facts["title"]
 
 
 def _written(place: SetFolder, take: Take, facts: Mapping[str, Any]) -> WavSink:
@@ -416,7 +454,8 @@ def _commit(
     waiting = list(sinks)
     try:
         facts_file.close()
-        if place.facts is None or place.facts.get("set") != facts["set"]:
+        # Without its page a set was not finished: what is otherwise than its facts say is no one's own work.
+        if sinks or place.facts is None or place.facts.get("set") != facts["set"]:
             page.unlink(missing_ok=True)
         with ThreadPoolExecutor(_workers()) as pool:
             closing = [pool.submit(sink.close) for sink in sinks]

@@ -19,7 +19,7 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import IO, TypeAlias
 
-from glidesmith.production import Failure, Order, Place, StoppedError, attempt
+from glidesmith.production import Failure, Order, Place, StoppedError, attempt, get_ready
 from glidesmith.production import Outcome as Outcome
 from glidesmith.production import Runner as Runner
 
@@ -41,7 +41,10 @@ class _Channel:
 
 
 class Crew:
-    """Several jobs, started when the first order comes, and kept until `close`; `run` is a `Runner`."""
+    """Several jobs, started when the first order comes or before, and kept until `close`.
+
+    Its `run` is a `Runner`.
+    """
 
     def __init__(self, jobs: int, forks: bool | None = None) -> None:
         """``forks``: whether one process becomes several; by default on Linux."""
@@ -67,7 +70,7 @@ class Crew:
         out = 0
         for number, order in enumerate(orders):
             if not self._channels:
-                self._start()
+                self.start()
             self._waiting.put((number, (order, place)))
             out += 1
             while out and (out >= _AHEAD * self._jobs or not self._done.empty()):
@@ -82,7 +85,8 @@ class Crew:
             raise found
         return found
 
-    def _start(self) -> None:
+    def start(self) -> None:
+        """Start the jobs, so that they are ready when orders come."""
         groups = [self._jobs] if self._forks else [1] * self._jobs
         with _interrupts_ignored():
             for count in groups:
@@ -234,10 +238,9 @@ def labour(pipes: list[tuple[int, int]] | None) -> None:
     if pipes is None:
         outcomes = os.dup(1)
         os.dup2(2, 1)  # what anything prints must not get among the outcomes
+        get_ready()
         _work(0, outcomes)
         return
-    from glidesmith.production import get_ready
-
     get_ready()
     children = []
     own = pipes[0]

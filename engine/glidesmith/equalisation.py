@@ -38,6 +38,7 @@ AGREEMENT_S = 1e-6
 
 OCTAVE_SEMITONES = 12.0
 _LARGEST_INTERVAL = 120.0
+_HIGHEST_NOTE = 127
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,6 +105,11 @@ def equality(
             "it is in tune from its start; give a larger one (--interval)"
         )
     note = median_note(phrase) if from_note is None else note_number(from_note)
+    if note + interval > _HIGHEST_NOTE:
+        raise SettingError(
+            f"an interval of {interval:g} semitones up from {note_name(note)} ends above "
+            f"{note_name(_HIGHEST_NOTE)}, the highest note; give a lower one (--from) or less (--interval)"
+        )
     return Equality(str(mode), interval, note)
 
 

@@ -18,6 +18,7 @@ import sys
 import tempfile
 import threading
 from collections.abc import Callable, Iterator, Sequence
+from ctypes.util import find_library
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any, TextIO
@@ -167,6 +168,8 @@ def library() -> Any:
     if "sounddevice" not in sys.modules and sys.platform.startswith("linux"):
         _try_out()
     with quiet():
+        if (found := find_library("portaudio")) is not None:
+            _pin(found)  # before anything can interrupt the start
         try:
             import sounddevice
         except ModuleNotFoundError as problem:
@@ -178,15 +181,16 @@ def library() -> Any:
         except Exception as problem:
             said = printable(str(problem))
             raise NoSoundError(f"PortAudio does not start ({said}): is your sound system running?") from None
+    _pin(str(_library_file(sounddevice)))
     # Its own way out terminates PortAudio, which is not always survived.
     atexit.unregister(sounddevice._exit_handler)
-    _pin(_library_file(sounddevice))
     return sounddevice
 
 
-def _pin(file: Path) -> None:
+def _pin(file: str) -> None:
     """Never unload a library: threads and callbacks of its own may run to the process's end."""
-    ctypes.CDLL(str(file))
+    with contextlib.suppress(OSError):  # whoever needs it will say so
+        ctypes.CDLL(file)
 
 
 def has_jack(sounddevice: Any) -> bool:
@@ -220,7 +224,7 @@ def _fresh_copy(sounddevice: Any) -> Any:
         os.close(descriptor)
         shutil.copyfile(source, name)
         copy = sounddevice._ffi.dlopen(name)
-        _pin(Path(name))
+        _pin(name)
     except OSError as problem:
         raise DeviceError(
             f"PortAudio can't be loaded afresh ({printable(str(problem))}); end live and start it anew"

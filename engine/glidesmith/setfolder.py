@@ -80,8 +80,10 @@ class SetFolder:
         self.problem = ""
         self._is_damaged_set = False
         self._others: list[str] = []
+        self._codes: dict[str, NDArray[np.int32] | None] = {}
         self._stamp = _stamp(path / FACTS_FILE)
         try:
+            _require_no_dead_link(path)
             if path.exists():
                 self._look()
         except OSError as problem:
@@ -92,6 +94,7 @@ class SetFolder:
     def _look(self) -> None:
         names = sorted(entry.name for entry in os.scandir(self.path))
         if FACTS_FILE in names:
+            _require_no_dead_link(self.path / FACTS_FILE)
             try:
                 self.facts, self.earlier = _read_facts(self.path / FACTS_FILE)
             except GlidesmithError as problem:
@@ -151,8 +154,21 @@ class SetFolder:
         """Whether what is here was rendered from the same phrase at the same rate by the same engine."""
         return self.facts is not None and all(self.facts.get(name) == value for name, value in ground.items())
 
+    def changed_wavs(self) -> list[str]:
+        """WAVs of a set that was finished whose samples are not those written. One that is gone is none."""
+        if not os.path.lexists(self.path / PAGE_FILE):
+            return []
+        found = []
+        for earlier in self.earlier.values():
+            self._codes[earlier.file] = self.untouched_codes(earlier)
+            if self._codes[earlier.file] is None and os.path.lexists(self.path / earlier.file):
+                found.append(earlier.file)
+        return found
+
     def untouched_codes(self, earlier: Earlier) -> "NDArray[np.int32] | None":
         """The samples of a candidate's WAV as 24-bit numbers; None where they are not those written."""
+        if earlier.file in self._codes:
+            return self._codes.pop(earlier.file)
         import soundfile
 
         try:
@@ -211,6 +227,16 @@ def codes_digest(codes: "NDArray[np.int32]") -> str:
 def ground_of(facts: Mapping[str, Any]) -> dict[str, object]:
     """What candidates must share to be of one set, out of a set's facts."""
     return {name: facts[name] for name in _GROUND_WORDS}
+
+
+def _require_no_dead_link(path: Path) -> None:
+    """Raise OutputError for a link that leads nowhere: it exists and yet can't be written or looked into."""
+    if path.is_symlink() and not path.exists():
+        target = shown(os.readlink(path))
+        raise OutputError(
+            f"{printable(str(path))}: is a link to {target}, which is not there; remove the link or make what "
+            "it leads to"
+        )
 
 
 def _stamp(path: Path) -> tuple[int, int, int] | None:

@@ -1,11 +1,16 @@
 """One candidate on its way into a comparison set: rendered, measured, brought to the common loudness.
 
 Loudness and true peak are those of ITU-R BS.1770, target and ceiling those of EBU R 128.
+
+All clips of a set are equally long: silence follows the shorter ones, and the longest too, for as long as a
+gating block still holds some of its sound. So every sound is in as many blocks as any other, however it ends,
+every meter finds the same blocks, and a clip's length tells nothing.
 """
 
 import hashlib
 import math
 from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
 from io import BytesIO
 from typing import TYPE_CHECKING, Any
 
@@ -32,6 +37,10 @@ TARGET_LUFS = -23.0
 CEILING_DBTP = -1.0
 """Every true peak stays under this."""
 
+FLAC_HIGHEST_ODD_HZ = 65_535
+"""Up to here FLAC has every rate, beyond only multiples of 10 (RFC 9639, "sample rate bits"; from memory)."""
+
+_HOPS_A_SECOND, _HOPS_A_BLOCK = 10, 4
 _HEADROOM_DB = 0.01
 _CLOSE_LU = 0.005
 _LARGE_GAIN_DB = 30.0
@@ -39,6 +48,42 @@ _MOST_PASSES = 6
 _FAINT = 0.01
 _NO_RENDER = Rendered(-math.inf, -math.inf, True, "")
 _NO_CODES = np.zeros(0, np.int32)
+
+
+@dataclass(frozen=True, slots=True)
+class Span:
+    """How long all clips of a set are, and how all are metered.
+
+    ``frames``: of every WAV, a whole number of the meter's hops of 100 ms. ``gated``: as BS.1770 has it, else
+    by the energy over ``metered_frames`` without gates.
+    """
+
+    frames: int
+    gated: bool
+    metered_frames: int
+
+
+def common_span(lengths: Sequence[int], sample_rate: int) -> Span:
+    """The span of clips that are ``lengths`` frames long as rendered.
+
+    The gate is left out for all where any is shorter than its block of 400 ms: it would leave some of one
+    clip's sound out and all of another's in, and what is heard side by side must be metered in one way.
+    """
+    longest = max(lengths)
+    hops = -(-longest * _HOPS_A_SECOND // sample_rate) + _HOPS_A_BLOCK - 1
+    frames = (hops * sample_rate + _HOPS_A_SECOND // 2) // _HOPS_A_SECOND
+    gated = min(lengths) * _HOPS_A_SECOND >= _HOPS_A_BLOCK * sample_rate
+    return Span(frames, gated, frames if gated else longest)
+
+
+def check_rate(sample_rate: int) -> None:
+    """Raise SettingError for a rate that the page's audio can't have."""
+    if sample_rate > FLAC_HIGHEST_ODD_HZ and sample_rate % 10:
+        below = sample_rate - sample_rate % 10
+        raise SettingError(
+            f"sample rate {sample_rate} Hz: the page holds its audio as FLAC, which has rates over "
+            f"{FLAC_HIGHEST_ODD_HZ:,} Hz in multiples of 10 only; take {below} or {below + 10}"
+        )
 
 
 class Take:
@@ -57,10 +102,11 @@ class Take:
         facts: "Facts",
         differs: Sequence[str],
         lines: dict[str, Any],
+        span: Span,
     ) -> None:
         self.candidate, self.label, self.digest = candidate, candidate.label, candidate.digest
         self.file = file
-        self.sample_rate = program.sample_rate
+        self.sample_rate, self.span = program.sample_rate, span
         self.facts, self.differs, self.lines = facts, list(differs), lines
         self.rendered = _NO_RENDER
         self.gain_db = 0.0
@@ -80,14 +126,16 @@ class Take:
         if earlier is not None:
             self.rendered = earlier.rendered
         else:
-            self.rendered = _measured(self._rendered_audio(), self.sample_rate, self.label)
+            audio = self._rendered_audio()
+            digest = hashlib.sha256(audio[: self._program.length].astype("<f4").tobytes()).hexdigest()
+            self.rendered = _measured(audio, self.sample_rate, self.span, self.label, digest)
 
     def finish(self, common_lufs: float, earlier: Earlier | None, place: SetFolder) -> None:
         """Bring the candidate to a loudness, by what stands in ``place`` if ``earlier`` says that it may be
         used."""
         codes = None if earlier is None else place.untouched_codes(earlier)
         if earlier is not None and codes is not None:
-            self.kept, self.codes, entry = earlier, codes, earlier.entry
+            self.kept, self.codes, entry = earlier, _of_length(codes, self.span.frames), earlier.entry
             self.gain_db, self.lufs = entry["gain_db"], entry["lufs"]
             self.true_peak_dbtp, self.warnings = entry["true_peak_dbtp"], tuple(entry["warnings"])
         else:
@@ -97,24 +145,22 @@ class Take:
     def _rendered_audio(self) -> "Audio":
         if self._audio is None:
             rendering = render_program(self._program)
-            self._audio, self.warnings = rendering.audio, rendering.warnings
+            self._audio, self.warnings = _of_length(rendering.audio, self.span.frames), rendering.warnings
         return self._audio
 
     def _apply_gain(self, common_lufs: float) -> None:
         """One gain, on the samples as rendered, and what is measured afterwards."""
-        from glidesmith.loudness import measure_loudness
-
         audio = self._rendered_audio()
         self.gain_db = common_lufs - self.rendered.lufs
         louder = _scaled(audio, self.gain_db)
-        found = measure_loudness(louder, self.sample_rate)
+        lufs, peak_dbtp = _metered(louder, self.sample_rate, self.span)
         # Far under the target the meter's gate may decide otherwise than near it: then once more.
-        if abs(found.integrated_lufs - common_lufs) > _CLOSE_LU:
-            room = CEILING_DBTP - _HEADROOM_DB - found.true_peak_dbtp
-            self.gain_db += min(common_lufs - found.integrated_lufs, room)
+        if abs(lufs - common_lufs) > _CLOSE_LU:
+            room = CEILING_DBTP - _HEADROOM_DB - peak_dbtp
+            self.gain_db += min(common_lufs - lufs, room)
             louder = _scaled(audio, self.gain_db)
-            found = measure_loudness(louder, self.sample_rate)
-        self.lufs, self.true_peak_dbtp = float(found.integrated_lufs), float(found.true_peak_dbtp)
+            lufs, peak_dbtp = _metered(louder, self.sample_rate, self.span)
+        self.lufs, self.true_peak_dbtp = lufs, peak_dbtp
         self.codes = quantise(louder, 24)[0].astype(np.int32)
         self._audio = None
 
@@ -144,29 +190,46 @@ def _scaled(audio: "Audio", gain_db: float) -> "Audio":
     return scaled
 
 
-def _measured(audio: "Audio", sample_rate: int, label: str) -> Rendered:
+def _of_length(samples: Any, frames: int) -> Any:
+    """Samples with silence after them, or without some of the silence that they end with."""
+    if samples.size >= frames:
+        return samples[:frames]
+    return np.concatenate([samples, np.zeros(frames - samples.size, samples.dtype)])
+
+
+def _metered(audio: "Audio", sample_rate: int, span: Span) -> tuple[float, float]:
+    """Loudness in LUFS and true peak in dBTP."""
+    from glidesmith.loudness import LoudnessMeter
+
+    meter = LoudnessMeter(sample_rate)
+    meter.add(audio)
+    found = meter.result()
+    if span.gated:
+        return float(found.integrated_lufs), float(found.true_peak_dbtp)
+    energy = float(meter.arrays.squares[: int(meter.meter["steps"][0])].sum())
+    lufs = -0.691 + 10.0 * math.log10(energy / span.metered_frames) if energy > 0.0 else -math.inf
+    return lufs, float(found.true_peak_dbtp)
+
+
+def _measured(audio: "Audio", sample_rate: int, span: Span, label: str, digest: str) -> Rendered:
     """Loudness and true peak of audio at its own level.
 
     The meter's gate has an absolute threshold, so that loudness does not quite move with the level: it is
     taken near the target, where the audio will be heard, and told back to the level as rendered.
     """
-    from glidesmith.loudness import measure_loudness
-
     peak = float(np.abs(audio).max(initial=0.0))
     if peak == 0.0:
         raise _silent(label)
     gain_db = 0.0 if peak > _FAINT else -20.0 * math.log10(peak) - 6.0
     for _ in range(_MOST_PASSES):
-        found = measure_loudness(_scaled(audio, gain_db), sample_rate)
-        if not math.isfinite(found.integrated_lufs):
+        lufs, peak_dbtp = _metered(_scaled(audio, gain_db), sample_rate, span)
+        if not math.isfinite(lufs):
             raise _silent(label)
-        off = TARGET_LUFS - found.integrated_lufs
+        off = TARGET_LUFS - lufs
         if abs(off) < _CLOSE_LU:
             break
         gain_db += off
-    digest = hashlib.sha256(audio.astype("<f4").tobytes()).hexdigest()
-    lufs, peak_dbtp = found.integrated_lufs - gain_db, found.true_peak_dbtp - gain_db
-    return Rendered(float(lufs), float(peak_dbtp), bool(found.gated), digest)
+    return Rendered(lufs - gain_db, peak_dbtp - gain_db, span.gated, digest)
 
 
 def _silent(label: str) -> SettingError:

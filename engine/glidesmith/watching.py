@@ -67,7 +67,7 @@ def watch(
     jobs, survey = checked_jobs(jobs), Survey(request)
     with ExitStack() as stack:
         desk = stack.enter_context(Desk(request.output).held())
-        runner = run or stack.enter_context(local_runner(jobs))
+        runner = run or stack.enter_context(local_runner(jobs, at_once=True))
         watcher = Watcher(request, desk, runner, heard or _unheard)
         watcher.begin(survey)
         while not (stop is not None and stop()):

@@ -183,4 +183,6 @@ def _loudness_text(loudness: dict[str, Any]) -> str:
     said = f"all at {common:.1f} LUFS"
     if limit is not None:
         said += f", not {loudness['target_lufs']:g}: the peaks of {limit} allow no more"
-    return said if loudness["gated"] else f"{said} (ungated: too short for the meter's gate)"
+    if loudness["gated"]:
+        return said
+    return f"{said} (too short for the meter's gate: by the energy over {loudness['metered_s']:.3g} s)"

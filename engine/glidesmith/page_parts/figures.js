@@ -167,12 +167,12 @@ class Figures {
     return [element("h3", {}, "Loudness"), element("p", {}, ...this.loudnessWords(loudness)), scrolled(table, "Loudness")];
   }
 
-  loudnessWords({ common_lufs: common, target_lufs: target, limited_by: limit, gated }) {
+  loudnessWords({ common_lufs: common, target_lufs: target, limited_by: limit, gated, metered_s }) {
     const said = [`All candidates are brought to ${fixed(common)} LUFS (ITU-R BS.1770) by one gain each.`];
     if (limit !== null && limit !== undefined) {
       said.push(` That is under the usual ${fixed(target)} LUFS, because the true peak of `, named(limit), " would pass \u22121 dBTP there.");
     }
-    if (!gated) said.push(" At least one is shorter than a gating block of 400 ms: its figure is ungated.");
+    if (!gated) said.push(` At least one is shorter than a gating block of 400 ms: all are measured without the gate, by their energy over the same ${duration(metered_s)}.`);
     return said;
   }
 
