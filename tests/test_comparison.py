@@ -357,12 +357,9 @@ BRIEF = [
 
 
 @pytest.mark.parametrize(("phrase", "vary"), BRIEF)
-@pytest.mark.parametrize("rate", [8000, 44_100, 48_000])
+@pytest.mark.parametrize("rate", [22_050, 44_100, 48_000])
 def test_brief_phrases_are_as_loud_by_an_independent_meter_however_they_end(tmp_path, phrase, vary, rate):
-    """What ends in the middle of a hop counts as much as what ends on one: all clips are of one length.
-
-    At 8 kHz the meters' filters are farther apart, at the top of the shelf's slope (see `k_weighting`).
-    """
+    """What ends in the middle of a hop counts as much as what ends on one: all clips are of one length."""
     facts = compare(make_preset(), tmp_path, phrase=phrase, vary=vary, sample_rate=rate).facts
     assert facts["loudness"]["gated"]
     assert len({entry["frames"] for entry in facts["candidates"]}) == 1
@@ -382,9 +379,9 @@ def weighted_energy(audio, rate):
 
 @pytest.mark.parametrize("fall", [["rc", "linear"], ["linear", "rc"]])
 def test_candidates_on_both_sides_of_a_block_are_measured_one_way(tmp_path, fall):
-    """0.72 s and 0.399 s: by one energy over one time, the longer one's; no gate for either."""
+    """0.38 s and over 2 s: by one energy over one time, the longer one's; no gate for either."""
     brief = make_phrase((0, "0.1", 57))
-    preset = make_preset(gain={"rise": 0.004, "fall": 0.3})
+    preset = make_preset(gain={"rise": 0.004, "fall": 0.28})
     facts = compare(preset, tmp_path, phrase=brief, vary={"gain.law": fall}).facts
     lengths = [render(preset.changed(entry["varied"]), brief).audio.size for entry in facts["candidates"]]
     assert min(lengths) < 0.4 * 48_000 < max(lengths)
@@ -610,7 +607,7 @@ def test_a_wav_of_a_run_that_did_not_end_is_made_again(tmp_path, harm):
 
 
 def test_a_run_killed_while_it_writes_wavs_anew_is_finished_by_the_next(tmp_path, monkeypatch):
-    """A candidate that lowers the loudness: the facts are new already, the WAVs not yet. That is no change."""
+    """A candidate that lowers the loudness: the facts are new, the WAVs not yet. That is no change."""
     clicks = make_phrase(*((k, k + Fraction(1, 100), 33) for k in range(4)))
     preset = make_preset(gain={"rise": 0.0, "fall": 0.001}, oscillator={"width": 0.05})
     waves = {"oscillator.wave": ["sine", "triangle", "pulse"]}

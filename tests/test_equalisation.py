@@ -130,6 +130,15 @@ def test_landing_is_of_the_pitch_as_heard():
     )
 
 
+@pytest.mark.parametrize(("interval", "note"), [(12, "G9"), (None, "G#8"), (67.5, "C4"), (120, "G0")])
+def test_a_reference_glide_ends_on_a_note_that_there_is(interval, note):
+    with pytest.raises(SettingError) as caught:
+        equality("landing", interval, note, make_phrase((0, 1, 60)), 5.0)
+    (line,) = caught.value.lines
+    assert "above G9, the highest note" in line
+    assert equality("landing", 12, "G8", make_phrase((0, 1, 60)), 5.0).notes("rise") == (115.0, 127.0)
+
+
 def test_the_note_defaults_to_the_median_and_the_interval_to_an_octave():
     phrase = make_phrase((0, 1, 50), (1, 2, 57), (2, 3, 62), (3, 4, 51), (4, 5, 53), (5, 6, 74))
     assert median_note(phrase) == 53

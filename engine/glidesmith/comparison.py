@@ -51,7 +51,15 @@ from glidesmith.setfolder import (
     SetFolder,
     ground_of,
 )
-from glidesmith.takes import TARGET_LUFS, Span, Take, check_rate, common_loudness, common_span, warnings_of
+from glidesmith.takes import (
+    TARGET_LUFS,
+    Span,
+    Take,
+    check_rate,
+    common_loudness,
+    common_span,
+    warnings_of,
+)
 from glidesmith.text import printable, shown
 from glidesmith.wav import WavSink
 
@@ -216,7 +224,8 @@ def compare(
     if changed and not replace:
         raise OutputError(
             f"{place.name}: {_listed(changed)} changed since the set was made and would be written anew; "
-            "choose another folder, move what you changed elsewhere, or write there all the same with --replace"
+            "choose another folder, move what you changed elsewhere, or write there all the same with "
+            "--replace"
         )
     steps = _Steps(progress, 2 * len(plan.candidates))
     takes = _takes(plan)

@@ -39,6 +39,7 @@ NO_OUTPUT = (
     "then see glidesmith devices"
 )
 
+_loaded: list[Any] = []
 _MOST_TOLD = 8
 _LOOK_S = 8.0
 _SHORT_NAMES = {"JACK Audio Connection Kit": "JACK"}
@@ -165,25 +166,30 @@ def library() -> Any:
 
     Raises NoSoundError with one line where there is no such library, or it does not start.
     """
-    if "sounddevice" not in sys.modules and sys.platform.startswith("linux"):
-        _try_out()
-    with quiet():
-        if (found := find_library("portaudio")) is not None:
-            _pin(found)  # before anything can interrupt the start
-        try:
-            import sounddevice
-        except ModuleNotFoundError as problem:
-            raise DeviceError(
-                f"the Python package {problem.name} is missing: pip install sounddevice"
-            ) from None
-        except OSError:
-            raise NoSoundError(NO_LIBRARY) from None
-        except Exception as problem:
-            said = printable(str(problem))
-            raise NoSoundError(f"PortAudio does not start ({said}): is your sound system running?") from None
-    _pin(str(_library_file(sounddevice)))
-    # Its own way out terminates PortAudio, which is not always survived.
-    atexit.unregister(sounddevice._exit_handler)
+    if not _loaded:
+        if "sounddevice" not in sys.modules and sys.platform.startswith("linux"):
+            _try_out()
+        with quiet():
+            if (found := find_library("portaudio")) is not None:
+                _pin(found)  # before anything can interrupt the start
+            sounddevice = _imported()
+        _pin(str(_library_file(sounddevice)))
+        # Its own way out terminates PortAudio, which is not always survived.
+        atexit.unregister(sounddevice._exit_handler)
+        _loaded.append(sounddevice)
+    return _loaded[0]
+
+
+def _imported() -> Any:
+    try:
+        import sounddevice
+    except ModuleNotFoundError as problem:
+        raise NoSoundError(f"Python's {problem.name} is missing: pip install sounddevice") from None
+    except OSError:
+        raise NoSoundError(NO_LIBRARY) from None
+    except Exception as problem:
+        said = printable(str(problem))
+        raise NoSoundError(f"PortAudio does not start ({said}): is your sound system running?") from None
     return sounddevice
 
 

@@ -234,8 +234,8 @@ def _require_no_dead_link(path: Path) -> None:
     if path.is_symlink() and not path.exists():
         target = shown(os.readlink(path))
         raise OutputError(
-            f"{printable(str(path))}: is a link to {target}, which is not there; remove the link or make what "
-            "it leads to"
+            f"{printable(str(path))}: is a link to {target}, which is not there; remove the link or "
+            "make what it leads to"
         )
 
 
