@@ -65,6 +65,11 @@ class DummyJack:
             self.kill()
             pytest.skip(f"a dummy JACK server does not start here: {self._said.read_text()[-300:]}")
 
+    def deserted(self) -> bool:
+        """Whether a client vanished without a word, which costs everybody's sound."""
+        said = self._said.read_text()
+        return "Broken pipe" in said or "Could not write notification" in said
+
     def kill(self) -> None:
         """End the server as a crash does."""
         if self._server is not None:

@@ -9,7 +9,9 @@ import pytest
 BENCHMARKS = Path(__file__).resolve().parent / "benchmarks"
 
 
-@pytest.mark.parametrize("name", ["voice", "slew", "memory", "loudness", "comparison", "batch", "cluster", "panel", "live"])
+@pytest.mark.parametrize(
+    "name", ["voice", "slew", "memory", "loudness", "comparison", "batch", "cluster", "panel", "live"]
+)
 def test_a_benchmark_prints_its_ratios(name):
     done = subprocess.run(
         [sys.executable, str(BENCHMARKS), name, "--runs", "1", "--scale", "0.02"],

@@ -127,7 +127,44 @@ def test_listeners_are_shown_and_pooled(tmp_path):
     assert pair["listeners"][0]["probability_corrected"] == pytest.approx(3 * raw[0])
     assert "not independent" in pair["warnings"][0]
     assert pair["evidence"]
-    assert pair["verdict"].startswith("evidence that the two can be told apart")
+    assert [row["evidence"] for row in pair["listeners"]] == [True, False, False]
+    assert pair["verdict"].startswith("evidence that Ada can tell the two apart (")
+    assert pair["verdict"].endswith(", and none that Ben and Cleo can")
+
+
+def test_one_who_hears_it_is_named_among_many_who_do_not(tmp_path):
+    """Nine at 7 of 16 and one at 16 of 16: together 79 of 160, which shows nothing; alone 2^-16."""
+    others = [abx(7, listener=f"listener {n}") for n in range(9)]
+    found = tally_sheets(save(tmp_path, *others, abx(16)))
+    (pair,) = found.facts["abx"]["pairs"]
+    assert (pair["correct"], pair["trials"], pair["evidence"]) == (79, 160, False)
+    assert [row["listener"] for row in pair["listeners"] if row["evidence"]] == ["Ada"]
+    assert pair["listeners"][-1]["probability_corrected"] == pytest.approx(11 / 2**16)
+    assert pair["verdict"].startswith("evidence that Ada can tell the two apart (guessing")
+    assert "1.5e-05, 1.7e-04 after correction for 11 tests" in pair["verdict"]
+    assert pair["verdict"].endswith(
+        "and none that listener 0, listener 1, listener 2, listener 3, listener 4 and 4 more can"
+    )
+
+
+@pytest.mark.parametrize(
+    ("scores", "begin", "pooled"),
+    [
+        ((16, 9), "evidence that Ada can tell the two apart (", True),
+        (
+            (16, 15),
+            "evidence that the two can be told apart by each of Ada and Ben: at worst, guessing",
+            True,
+        ),
+        ((11, 11), "no evidence that the two can be told apart: guessing", False),
+        ((12, 12), "evidence that the two can be told apart by all together, though by none alone: ", True),
+    ],
+)
+def test_the_verdict_says_of_whom_there_is_evidence(tmp_path, scores, begin, pooled):
+    first, second = scores
+    (pair,) = tally(tmp_path, abx(first), abx(second, listener="Ben"))["abx"]["pairs"]
+    assert pair["verdict"].startswith(begin)
+    assert pair["evidence"] is pooled
 
 
 def test_what_shows_nothing_is_said_plainly(tmp_path):
@@ -148,9 +185,48 @@ def test_pairs_are_kept_apart_and_corrected_for_their_number(tmp_path):
     first, second = tally(tmp_path, *sheets)["abx"]["pairs"]
     assert (first["labels"], first["correct"], first["trials"]) == (["rc", "exp"], 25, 32)
     assert (second["labels"], second["correct"]) == (["exp", "cosine"], 12)
-    # 12 of 16 alone would be evidence, at 3.8 %; as the weaker of two results it stays so under Holm.
-    assert first["probability_corrected"] == pytest.approx(2 * first["probability"])
-    assert second["probability_corrected"] == pytest.approx(second["probability"])
+    # Four tests: Ada and Ben and both together, and Ada again. 12 of 16 alone would be evidence, at 3.8 %.
+    assert first["probability_corrected"] == pytest.approx(4 * first["probability"])
+    assert second["probability_corrected"] == pytest.approx(2 * second["probability"])
+    assert second["probability"] < 0.05
+    assert not second["evidence"]
+    assert "a probability of 0.038, 0.077 after correction for 4 tests;" in second["verdict"]
+
+
+def test_excerpts_are_kept_apart(tmp_path):
+    sheets = (
+        abx(12, excerpt_s=[0, 0.2]),
+        abx(9, listener="Ben", excerpt_s=[0, 8]),
+        abx(8, listener="Cleo", excerpt_s=[0.0, 8.0]),
+        abx(7, listener="Dan"),
+    )
+    found = tally_sheets(save(tmp_path, *sheets))
+    pairs = found.facts["abx"]["pairs"]
+    told = [(pair["excerpt_s"], pair["correct"], len(pair["listeners"])) for pair in pairs]
+    assert told == [([0.0, 0.2], 12, 1), ([0.0, 8.0], 17, 2), (None, 7, 1)]
+    lines = tally_text(found).splitlines()
+    assert "  rc  or  exp, excerpt 0 to 0.2 s" in lines
+    assert "  rc  or  exp, excerpt 0 to 8 s" in lines
+    assert "  rc  or  exp" in lines
+
+
+def test_excerpts_of_preferences_are_kept_apart(tmp_path):
+    two = {"candidates": (RC, EXP)}
+    sheets = (
+        preference([RC, EXP], excerpt_s=[0, 1.5], **two),
+        preference([EXP, RC], listener="Ben", excerpt_s=[0, 3], **two),
+    )
+    found = tally_sheets(save(tmp_path, *sheets))
+    told = [(pair["excerpt_s"], pair["wins"]) for pair in found.facts["preference"]["pairs"]]
+    assert told == [([0.0, 1.5], [1, 0]), ([0.0, 3.0], [0, 1])]
+    assert "rc 1 : 0 exp, excerpt 0 to 1.5 s: " in tally_text(found)
+
+
+def test_a_name_in_another_way_of_writing_is_one_listener(tmp_path):
+    """\u00c5 is one letter, or an A and a ring (Unicode Standard Annex 15)."""
+    again = abx(10, listener="A\u030asa", made="2031-05-05T10:00:00")
+    (pair,) = tally(tmp_path, abx(9, listener="\u00c5sa"), again)["abx"]["pairs"]
+    assert [(row["listener"], row["rounds"]) for row in pair["listeners"]] == [("\u00c5sa", 2)]
 
 
 def test_one_name_in_other_letters_is_one_listener_and_no_name_is_none(tmp_path):
@@ -230,9 +306,9 @@ def many(pair, count, best):
 def test_too_few_choices_to_show_a_preference_are_said_so(tmp_path):
     """Five of five have a two-sided probability of 2/32, six of six 2/64 (by hand)."""
     (pair,) = tally(tmp_path, *many((RC, EXP), 5, RC))["preference"]["pairs"]
-    assert "5 choices are too few to show anything, 6 are the fewest" in pair["verdict"]
+    assert "5 votes are too few to show anything, 6 are the fewest" in pair["verdict"]
     (pair,) = tally(tmp_path, *many((RC, EXP), 6, RC))["preference"]["pairs"]
-    assert pair["verdict"].startswith("rc is preferred")
+    assert pair["verdict"] == "rc is preferred by 6 of 6 listeners (probability 0.031)"
     undecided = preference([RC, EXP], candidates=(RC, EXP), undecided=[frozenset((RC, EXP))])
     (pair,) = tally(tmp_path, undecided)["preference"]["pairs"]
     assert "0 choices are too few to show anything" in pair["verdict"]
@@ -251,7 +327,49 @@ def test_what_could_show_something_depends_on_the_other_pairs(tmp_path):
     assert "too few" not in pair["verdict"]
     found = tally(tmp_path, *weak, *split)["preference"]["pairs"]
     (pair,) = [each for each in found if each["labels"] == ["rc", "exp"]]
-    assert "6 choices are too few to show anything, 7 are the fewest" in pair["verdict"]
+    assert "6 votes are too few to show anything, 7 are the fewest" in pair["verdict"]
+
+
+def again(sheet, day):
+    return {**sheet, "made": f"2031-05-{day:02d}T20:30:00.000Z"}
+
+
+def test_what_one_listener_prefers_is_said_of_them_alone(tmp_path):
+    """Six of six choices by one: 2/64, and no word of others."""
+    rounds = [again(preference([RC, EXP], candidates=(RC, EXP)), day) for day in range(1, 7)]
+    (pair,) = tally(tmp_path, *rounds)["preference"]["pairs"]
+    assert (pair["counted"], pair["wins"]) == ("choices", [6, 0])
+    assert pair["verdict"] == "Ada prefers rc (probability 0.031), which tells of no other listener"
+
+
+def test_each_of_several_listeners_has_one_vote(tmp_path):
+    """Ada's six rounds for rc are one vote; Ben's one each way is none; Cleo's two against one is one."""
+    two = {"candidates": (RC, EXP)}
+    rounds = [again(preference([RC, EXP], **two), day) for day in range(1, 7)]
+    rounds += [
+        again(preference([order, RC, EXP], listener="Ben", **two), 8 + n) for n, order in enumerate((RC, EXP))
+    ]
+    rounds += [
+        again(preference([o, RC, EXP], listener="Cleo", **two), 8 + n) for n, o in enumerate((EXP, RC, EXP))
+    ]
+    found = tally_sheets(save(tmp_path, *rounds))
+    (pair,) = found.facts["preference"]["pairs"]
+    assert (pair["wins"], pair["votes"], pair["counted"]) == ([8, 3], [1, 1], "votes")
+    assert pair["probability"] == 1.0
+    assert "2 votes are too few" in pair["verdict"]
+    assert "rc 8 : 3 exp, votes 1 : 1: " in tally_text(found)
+
+
+def test_wins_are_told_of_how_many(tmp_path):
+    """rc against exp only, twice, and one round of all three: rc was in four pairs, cosine in two."""
+    rounds = [again(preference([RC, EXP], candidates=(RC, EXP)), day) for day in (1, 2)]
+    undecided = [frozenset((EXP, COSINE))]
+    found = tally_sheets(save(tmp_path, *rounds, preference([COSINE, RC, EXP], undecided=undecided)))
+    told = {
+        each["label"]: (each["wins"], each["comparisons"]) for each in found.facts["preference"]["candidates"]
+    }
+    assert told == {"rc": (3, 4), "exp": (0, 4), "cosine": (1, 2)}
+    assert "wins in all: rc 3 of 4, cosine 1 of 2, exp 0 of 4" in tally_text(found)
 
 
 def test_rounds_of_some_candidates_add_up_with_rounds_of_all(tmp_path):
@@ -315,17 +433,60 @@ def test_earlier_rounds_of_preferences_are_told_beside_them(tmp_path):
 
 
 def test_more_earlier_rounds_than_a_sheet_lists_are_counted(tmp_path):
-    """Of 60, 50 are listed; of the other ten, one is given and one is listed by another sheet."""
+    """Of 60, 50 are listed; of the other ten, one is given and one is told by another sheet of the device."""
     listed = [told(f"listed {n}") for n in range(50)]
     first = abx(
         8, id="x", made="2031-05-01T10:00:00Z", earlier=earlier(told("w", made="2031-05-01T09:00:00Z"))
     )
-    found = tally_sheets(save(tmp_path, abx(12, id="z", earlier=earlier(*listed, count=60)), first))
+    last = abx(12, id="z", earlier=earlier(*listed, count=60))
+    found = tally_sheets(save(tmp_path, bundle(last, first)))
     assert found.facts["earlier_missing"]["count"] == 51 + 8
     assert "  and 8 that no sheet lists" in tally_text(found)
 
 
+def test_rounds_that_no_sheet_lists_are_counted_device_by_device(tmp_path):
+    """Two devices that tell of 10 and of 7 rounds and list two each: 8 and 5 are listed by none. A second
+    sheet of the first device, which tells of 11 with the first among them, adds none."""
+    one = abx(9, id="o", earlier=earlier(told("a"), told("b"), count=10))
+    next_one = abx(
+        9,
+        id="p",
+        made="2031-05-05T10:00:00Z",
+        earlier=earlier(told("b"), told("o", made=one["made"]), count=11),
+    )
+    other = abx(9, id="x", listener="Ben", earlier=earlier(told("c"), told("d"), count=7))
+    for sheets in ((one, other), (other, one), (one, next_one, other), (next_one, other, one)):
+        found = tally_sheets(save(tmp_path, *sheets))
+        assert found.facts["earlier_missing"]["count"] == 4 + 8 + 5
+        assert "  and 13 that no sheet lists" in tally_text(found)
+
+
+def test_earlier_rounds_of_the_set_as_it_was_are_told_as_such(tmp_path):
+    grown = abx(12, id="c", earlier=earlier(told("a", set="0" * 64), told("b", set=SET, answered=3)))
+    found = tally_sheets(save(tmp_path, grown))
+    assert [each["of_another_set"] for each in found.facts["earlier_missing"]["rounds"]] == [True, False]
+    assert "16 of 16 answered, finished, of another set of these candidates" in tally_text(found)
+    assert any("2 earlier rounds of this pair" in line for line in found.facts["abx"]["pairs"][0]["warnings"])
+
+
 DAMAGED = [
+    *(
+        (abx(9, excerpt_s=excerpt), words)
+        for excerpt, words in (
+            ("foo", 'excerpt_s is "foo", not a list'),
+            ([5, 3], "excerpt_s is 5 to 3, not two times in seconds, in order"),
+            ([3, 3], "in order"),
+            ([-1, 3], "in order"),
+            ([0], "in order"),
+            ([0, "1"], "in order"),
+            ([False, True], "in order"),
+            ([0, 1, 2], "3 entries"),
+            ([0, 10**400], "in order"),
+            (None, "not a list"),
+        )
+    ),
+    (preference([RC, EXP, COSINE], excerpt_s=[5, 3]), "in order"),
+    (abx(9, earlier={"count": 1, "rounds": [told("a", set="x")]}), "64 hexadecimal digits"),
     (abx(9, id=7), "id is 7"),
     (abx(9, id=""), "plain characters"),
     (abx(9, id="\u202e"), "plain characters"),

@@ -149,6 +149,93 @@ def test_every_sheet_tells_of_the_rounds_before_it(held_tab):
     assert "1 earlier round not among these files" in tally_text(facts)
 
 
+@pytest.fixture(scope="module")
+def grown_page(example, tones, tmp_path_factory) -> Path:
+    """The set with one more candidate, and another set of the same phrase that shares only one."""
+    data = json.loads(json.dumps(example[0]))
+    more = {**data["candidates"][0], "number": 4, "label": "one more", "settings_sha256": 64 * "4"}
+    data["candidates"].append(more)
+    data["set"] = 64 * "a"
+    folder = tmp_path_factory.mktemp("grown")
+    write_page(folder / "index.html", data, [*tones, tones[0]])
+    data["candidates"] = [data["candidates"][0], more]
+    data["set"] = 64 * "b"
+    write_page(folder / "other.html", data, tones[:2])
+    return folder / "index.html"
+
+
+def test_rounds_outlast_one_more_candidate(chromium, page, grown_page, example):
+    """They can be saved from the new page, by themselves, and sheets of the new set tell of them."""
+    with opened(chromium, page, held=True) as tab:
+        tab.page.on("dialog", lambda dialog: dialog.accept())
+        begin(tab, trials=5)
+        tab.hear("ab" + 5 * "x1")
+        begin(tab, "preference")
+        tab.hear("ab1ab1ab1")
+        first, _ = saved(tab)
+        tab.page.goto(grown_page.with_name("other.html").as_uri())
+        tab.wait_until_ready()
+        assert tab.page.inner_text("#record") == ""
+        tab.page.goto(grown_page.as_uri())
+        tab.wait_until_ready()
+        assert tab.page.locator("#record li").count() == 2
+        assert "From another set with candidates of this one (5e7000000000)" in tab.page.inner_text("#record")
+        assert saved(tab, "#record")[0] == first
+        with tab.page.expect_download() as download:
+            tab.page.click(".save-others")
+        facts = tally_sheets([Path(download.value.path())]).facts
+        assert (facts["set"], facts["sheets"], facts["refused"]) == (example[0]["set"], 2, [])
+        begin(tab, trials=5)
+        tab.hear("ab" + 5 * "x1")
+        assert "1 earlier round of this pair was begun on this device" in tab.page.inner_text("#result")
+        sheet, _ = saved(tab)
+        told = [(each["test"], each["set"]) for each in sheet["earlier"]["rounds"]]
+        assert told == [("abx", example[0]["set"]), ("preference", example[0]["set"])]
+        with tab.page.expect_download() as download:
+            tab.page.click("#save-all")
+        text = tally_text(tally_sheets([Path(download.value.path())]))
+        assert "2 earlier rounds not among these files" in text
+        assert text.count("of another set of these candidates") == 2
+        tab.page.click("#forget")
+        assert tab.page.locator("#record li").count() == 0
+        tab.page.goto(page.as_uri())
+        tab.wait_until_ready()
+        assert "3 earlier rounds of this set are forgotten here" in tab.page.inner_text("#record")
+        assert tab.complaints == []
+
+
+def test_rounds_are_kept_without_what_was_before_them(held_tab):
+    """Else each would hold all before it, and the browser's store would soon be full."""
+    for _ in range(3):
+        begin(held_tab, trials=5)
+        held_tab.hear("abx1")
+        held_tab.page.click("#give-up")
+    kept = held_tab.page.evaluate("Object.entries(localStorage)")
+    sheets = [sheet for key, value in kept for sheet in json.loads(value) if "trials_planned" in sheet]
+    assert len(sheets) == 3
+    assert not any("earlier" in sheet for sheet in sheets)
+    sheet, _ = saved(held_tab)
+    assert sheet["earlier"]["count"] == len(sheet["earlier"]["rounds"]) == 2
+
+
+def test_a_browser_that_can_not_keep_rounds_is_told_of(held_tab):
+    words = "This browser can’t keep rounds. Save the sheet before you leave this page."
+    begin(held_tab, trials=5)
+    held_tab.hear("abx1")
+    assert words not in held_tab.page.inner_text("#blind")
+    held_tab.page.evaluate(
+        "() => { Storage.prototype.setItem = () => { throw new DOMException('', 'QuotaExceededError'); }; }"
+    )
+    held_tab.hear("x1")
+    assert words in held_tab.page.inner_text("#blind")
+    assert held_tab.page.is_visible("#trial")
+    held_tab.hear("x1x1x1")
+    assert words in held_tab.page.inner_text("#result")
+    assert words in held_tab.page.inner_text("#record")
+    sheet, _ = saved(held_tab)
+    assert len(sheet["trials"]) == 5
+
+
 def test_what_was_chosen_for_a_round_outlasts_a_reload(tab):
     tab.page.fill("#listener", "Ines")
     tab.page.select_option("#first", "1")

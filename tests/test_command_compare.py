@@ -48,6 +48,15 @@ def test_the_page_is_one_file_with_the_audio_in_it(here):
     assert not re.search(r'(?:src|href)\s*=\s*"(?:https?:|//)', page)
 
 
+def test_how_brief_phrases_are_measured_is_said(here):
+    (here / "brief.toml").write_text('notes = [{ at = 0.0, lasts = 0.2, note = "A3" }]\n')
+    arguments = ("--phrase", "brief.toml", "--vary", "gain.fall=50ms,2s")
+    result = run("compare", "lead.toml", "-o", "brief", *arguments)
+    facts = json.loads((here / "brief" / "comparison.json").read_text())["loudness"]
+    assert facts["gated"] is False
+    assert f"by the energy over {facts['metered_s']:.3g} s)" in result.stdout
+
+
 def test_json_is_what_the_folder_holds(here):
     result = run("compare", "lead.toml", "-o", "laws", *LAWS, "--json")
     assert result.exit_code == 0
@@ -105,6 +114,9 @@ def test_a_sheet_and_several_presets_are_candidates_too(here):
         (["lead.toml", "-o", "set", *LAWS, "--equal", "landing", "--from", "H3"], "H3"),
         (["lead.toml", "-o", "set", *LAWS, "--equal", "loudness"], "--equal"),
         (["lead.toml", "-o", "set", "--vary", "pitch.rise=0,1ms", "--equal", "rise"], "pitch.rise is varied"),
+        (["lead.toml", "-o", "set", *LAWS, "--equal", "landing", "--from", "G9"], "the highest note"),
+        (["lead.toml", "-o", "set", *LAWS, "--rate", "96001"], "take 96000 or 96010"),
+        (["lead.toml", "-o", "set", "--sheet", "lead.toml"], "is a preset, not a sheet"),
         (["lead.toml", *LAWS], "--output"),
         (["missing.toml", "-o", "set", *LAWS], "no such file"),
         (["bare.toml", "-o", "set", *LAWS], "--phrase"),

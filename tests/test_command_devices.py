@@ -26,6 +26,7 @@ def test_an_output_is_listed_with_rates_and_latencies(tmp_path):
     with dummy_jack(tmp_path, rate=32_000) as server:
         done = process("devices", env=server.environment, text=True)
         facts = process("devices", "--json", env=server.environment, text=True)
+        assert not server.deserted()
     assert (done.returncode, done.stderr, facts.stderr) == (0, "", "")
     heading, *rows = done.stdout.splitlines()
     assert re.split("  +", heading.strip()) == HEADINGS

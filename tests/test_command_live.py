@@ -10,7 +10,7 @@ import pytest
 
 from commands import ENVIRONMENT, PRESET, complaint, run, write_preset
 from glidesmith.command.livekeys import LiveKeys, capture_line, free_capture_name, status_text
-from glidesmith.command.livestage import EndingSignals
+from glidesmith.command.livesignals import EndingSignals
 from glidesmith.session import Session
 from making import make_phrase, make_preset
 from sound_servers import isolated, needs_portaudio, watched
@@ -205,13 +205,30 @@ def test_the_status_says_slot_position_level_and_loudness(bench):
     assert "| capturing 0 s" in status_text(bench.session)
 
 
-def test_ending_signals_are_noted_and_interrupt_nothing():
+def test_ending_signals_interrupt_once_until_they_are_only_noted():
     before = signal.getsignal(signal.SIGTERM)
     with EndingSignals() as signals:
-        signal.raise_signal(signal.SIGTERM)
+        with pytest.raises(KeyboardInterrupt):
+            signal.raise_signal(signal.SIGTERM)
         signal.raise_signal(signal.SIGINT)
         assert signals.number == signal.SIGTERM
+    with EndingSignals() as signals:
+        signals.interrupts = False
+        signal.raise_signal(signal.SIGINT)
+        signal.raise_signal(signal.SIGTERM)
+        assert signals.number == signal.SIGINT
     assert signal.getsignal(signal.SIGTERM) is before
+
+
+def test_an_interrupt_that_python_swallows_is_still_noted_and_not_told(capfd):
+    class Unlucky:
+        def __del__(self):
+            signal.raise_signal(signal.SIGTERM)
+
+    with EndingSignals() as signals:
+        Unlucky()
+        assert signals.number == signal.SIGTERM
+    assert capfd.readouterr().err == ""
 
 
 def test_an_ignored_signal_stays_ignored():

@@ -116,6 +116,7 @@ def test_a_run_tells_as_json_how_it_went(tmp_path):
         arguments = (LEAD, "--no-panel", "--seconds", "1", "--capture", "take.wav", "--json")
         with running(server.environment, tmp_path, *arguments) as process:
             said, told = process.communicate(timeout=180)
+        assert not server.deserted()
     facts = json.loads(said)
     assert process.returncode == 0
     assert set(facts) >= REPORTED

@@ -3,6 +3,7 @@
 # ruff: noqa: F401, F811 - fixtures are imported, and asked for by name
 
 import json
+from pathlib import Path
 
 import pytest
 
@@ -10,6 +11,7 @@ from browser import Tab, opened
 from glidesmith.page import write_page
 from pages import (
     LABELS,
+    SAMPLE_RATE,
     begin,
     chosen,
     chromium,
@@ -232,6 +234,7 @@ def test_what_is_equal_what_limits_and_what_warns_is_said(chromium, example, tmp
         {"mode": "landing", "interval_semitones": 7.0, "from": "D3"}, up_s=0.296, down_s=0.444
     )
     data["loudness"] = {"common_lufs": -25.3, "target_lufs": -23.0, "limited_by": LABELS[1], "gated": False}
+    data["loudness"]["metered_s"] = 0.72
     data["candidates"][2]["differs"] = ["D3 to C4 (+10): lands after 115 ms, the preset never"]
     data["candidates"][2]["warnings"] = ["the fall is cut off"]
     path = tmp_path / "index.html"
@@ -241,7 +244,8 @@ def test_what_is_equal_what_limits_and_what_warns_is_said(chromium, example, tmp
         assert tab.complaints == []
     for words in (
         "7 semitones from D3 takes equally long to land", "296 ms up, 444 ms down",
-        data["candidates"][2]["differs"][0], "−25.3 LUFS", "ungated", "the fall is cut off",
+        data["candidates"][2]["differs"][0], "−25.3 LUFS",
+        "without the gate, by their energy over the same 720 ms", "the fall is cut off",
         f"the true peak of {LABELS[1]} would pass −1 dBTP",
     ):  # fmt: skip
         assert words in text
@@ -278,6 +282,82 @@ def test_keys_are_not_shown_where_they_do_nothing(held_tab):
     held_tab.page.uncheck("#single-keys")
     begin(held_tab)
     assert held_tab.page.locator(".clip kbd:visible, .answers kbd:visible").count() == 0
+
+
+# Long phrases
+
+
+@pytest.fixture(scope="module")
+def long_page(example, tmp_path_factory) -> Path:
+    """Facts and curves of 3000 notes in the time of the example: all gates agree, most glides don't."""
+    data = json.loads(json.dumps(example[0]))
+    frames = data["candidates"][0]["frames"]
+    length_s = frames / data["sample_rate"]
+    for number, candidate in enumerate(data["candidates"]):
+        glide, gate = candidate["facts"]["glides"][0], candidate["facts"]["gates"][0]
+        times = [length_s * k / 3000 for k in range(3000)]
+        candidate["facts"]["glides"] = [
+            {**glide, "start_s": time, "landing_s": 1e-3 * (number + 1) * (k % 7)}
+            for k, time in enumerate(times)
+        ]
+        same = {**gate, "attack_10_90_s": 0.01, "peak_loss_db": 0.0, "gap_db": None, "edge_click": False}
+        candidate["facts"]["gates"] = [{**same, "start_s": time} for time in times]
+        candidate["curves"]["pitch"] = [[time, (k * 37 % 24 - 12) / 12] for k, time in enumerate(times)]
+    path = tmp_path_factory.mktemp("long") / "index.html"
+    write_page(path, data, example[1])
+    return path
+
+
+def test_rows_of_a_long_phrase_are_made_when_they_are_asked_for(chromium, long_page):
+    with opened(chromium, long_page) as tab:
+        tables = tab.page.locator("table.compared tbody")
+        assert [tables.nth(place).locator("tr").count() for place in (0, 1)] == [8, 8]
+        assert "the first 8" in tab.page.locator("select", has_text="all 3000 gates").inner_text()
+        assert tab.page.evaluate("document.querySelectorAll('*').length") < 2500
+        tab.page.locator("select", has_text="all 3000 gates").select_option("3000")
+        assert [tables.nth(place).locator("tr").count() for place in (0, 1)] == [8, 3000]
+        assert tab.complaints == []
+
+
+LINE = "document.querySelector('#graph .line.chosen').getAttribute('d').slice(1).split('L')"
+
+
+def test_a_line_has_as_many_points_as_can_be_seen(chromium, long_page, example):
+    """Far off the lowest and the highest of each column of pixels; close up every one, as it is."""
+    with opened(chromium, long_page, viewport={"width": 700, "height": 800}) as tab:
+        redrawn(tab)
+        far = [tuple(map(float, point.split())) for point in tab.page.evaluate(LINE)]
+        width = tab.page.locator("#graph").bounding_box()["width"]
+        assert len(far) <= 2 * width
+        lane = tab.page.evaluate(
+            "(({ y, height }) => [y, height])(document.querySelector('#graph .lane').getBBox())"
+        )
+        heights = [up for _, up in far]
+        whole = 26 / 12  # octaves that the lane shows: 23 semitones, and 1.5 on both sides
+        assert max(heights) - min(heights) == pytest.approx(23 / 12 / whole * lane[1], abs=1.0)
+        for _ in range(12):
+            tab.page.click("text=Closer")
+        redrawn(tab)
+        near = tab.page.evaluate(LINE)
+        length_s = example[0]["candidates"][0]["frames"] / SAMPLE_RATE
+        assert len(near) == pytest.approx(3000 * 1.6**-12, abs=4)
+        assert length_s > 1.0
+
+
+def test_what_moves_while_it_plays_does_not_touch_the_lines(chromium, long_page):
+    """A mark among the lines would have them all painted again with each frame."""
+    with opened(chromium, long_page) as tab:
+        changed = """() => { window.touched = 0;
+          for (const svg of document.querySelectorAll("#graph > svg:not(.layer), #transfer svg:not(.layer)"))
+            new MutationObserver((all) => { touched += all.length; })
+              .observe(svg, { subtree: true, childList: true, attributes: true }); }"""
+        redrawn(tab)
+        tab.page.evaluate(changed)
+        tab.page.click("#play")
+        tab.wait_for_position(0.3)
+        marks = tab.page.eval_on_selector_all(".layer .play-mark, .layer .dot", "(all) => all.length")
+        assert marks == 3
+        assert tab.page.evaluate("touched") == 0
 
 
 # Safety and looks
@@ -364,6 +444,30 @@ def test_it_fits_every_width_and_is_readable_in_both_schemes(chromium, page, sch
         assert tab.complaints == []
 
 
+@pytest.mark.parametrize("scheme", ["light", "dark"])
+def test_lines_stand_out_from_what_they_are_drawn_on(chromium, page, scheme):
+    """At least 3:1, on the page and in the plot (WCAG 2.2, success criterion 1.4.11)."""
+    names = ["--paper", "--plot", *(f"--ink-{number}" for number in range(5))]
+    with opened(chromium, page, color_scheme=scheme) as tab:
+        colours = tab.page.evaluate(
+            """(names) => names.map((name) =>
+              getComputedStyle(document.documentElement).getPropertyValue(name).trim())""",
+            names,
+        )
+    paper, plot, *inks = map(luminance, colours)
+    for ground in (paper, plot):
+        for number, ink in enumerate(inks):
+            low, high = sorted((ground, ink))
+            assert (high + 0.05) / (low + 0.05) >= 3.0, number
+
+
+def luminance(colour):
+    """Relative luminance of #rrggbb (WCAG 2.2, definition)."""
+    parts = [int(colour[place : place + 2], 16) / 255 for place in (1, 3, 5)]
+    linear = [part / 12.92 if part <= 0.04045 else ((part + 0.055) / 1.055) ** 2.4 for part in parts]
+    return 0.2126 * linear[0] + 0.7152 * linear[1] + 0.0722 * linear[2]
+
+
 def test_long_labels_fit_a_narrow_screen(chromium, example, tmp_path):
     data = json.loads(json.dumps(example[0]))
     for number, candidate in enumerate(data["candidates"]):
@@ -390,8 +494,14 @@ def test_each_candidates_line_differs_from_its_neighbours_in_colour_and_in_dashe
 
 
 def test_in_print_all_rows_are_there_and_the_controls_are_not(tab):
+    rows = tab.page.locator("table.compared").first.locator("tbody tr:visible")
+    tab.page.evaluate("dispatchEvent(new Event('beforeprint'))")
+    assert rows.count() == 28
+    tab.page.evaluate("dispatchEvent(new Event('afterprint'))")
+    assert rows.count() == 8
     tab.page.emulate_media(media="print", color_scheme="dark")
-    assert tab.page.locator("table.compared").first.locator("tbody tr:visible").count() == 28
+    redrawn(tab)
+    assert rows.count() == 28
     for part in ("#transport", "#blind", "#level-sheet"):
         assert not tab.page.is_visible(part)
     assert tab.page.evaluate("getComputedStyle(document.documentElement).color") == "rgb(0, 0, 0)"

@@ -379,6 +379,7 @@ while True:
         if ") is back" in line:
             before = source.counters().frames
             until(lambda: source.counters().frames > before + 10_000)
+            print("plays on", flush=True)
             returns -= 1
             if returns == 0:
                 print(card.stop(), card.left_behind, flush=True)
@@ -396,6 +397,7 @@ def test_a_lost_server_is_told_and_come_back_to_by_name(tmp_path):
             assert line.startswith("system (JACK) is gone: its device or sound server stopped"), line
             server.start()
             assert process.stdout.readline().startswith("system (JACK) is back True")
+            assert process.stdout.readline() == "plays on\n"
         assert process.stdout.readline() == "False True\n"
         assert process.wait(60) == 0
         assert process.stderr.read() == ""

@@ -8,7 +8,7 @@ the sum matters, because a sum hides who heard what, and trials of one listener 
 other. Where the figures show nothing, the verdict says so.
 """
 
-from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from itertools import combinations
 from pathlib import Path
@@ -33,6 +33,7 @@ from glidesmith.sheets import (
     accepted_sheets,
     instant,
 )
+from glidesmith.tallytext import counted, facts_text, named, rounded, with_correction
 from glidesmith.text import shortened
 
 __all__ = [
@@ -50,8 +51,14 @@ __all__ = [
 SIGNIFICANCE = 0.05
 """A probability under this counts as evidence: a chance result in twenty (common practice)."""
 
-PREFERENCE_TEST = "exact two-sided sign test, corrected by Holm's method for the number of pairs"
-ABX_TEST = "exact one-sided binomial test, corrected by Holm's method for the number of pairs"
+ABX_TEST = (
+    "exact one-sided binomial test, corrected by Holm's method for the number of tests: one for each "
+    "listener of each pair, and one for all together where there are several"
+)
+PREFERENCE_TEST = (
+    "exact two-sided sign test over listeners, a vote each, or over the choices of the only one; corrected "
+    "by Holm's method for the number of pairs"
+)
 
 DEPENDENT = (
     "pooled trials are not independent: those of one listener resemble each other, so the pooled "
@@ -64,7 +71,8 @@ REPEATED = (
 GIVEN_UP = "giving up when it goes badly makes the rest look better than it is"
 PICKED = "a result that is picked from several proves less than it seems"
 NO_PROOF_OF_SAMENESS = "this is no evidence that they sound the same"
-NO_PROOF_OF_EQUAL_LIKING = "this is no evidence that they are liked equally"
+
+Excerpt = tuple[float, float] | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,6 +98,7 @@ class Score:
             "trials": self.trials,
             "probability": self.probability,
             "probability_corrected": corrected,
+            "evidence": corrected < SIGNIFICANCE,
             "confidence_interval": list(confidence_interval(self.correct, self.trials)),
         }
 
@@ -128,11 +137,16 @@ def tally_sheets(paths: Sequence[Path]) -> Tally:
         "unfinished": [_unfinished(sheet) for sheet in sheets if not sheet.finished],
         "earlier_missing": {
             "count": len(missing) + unlisted,
-            "rounds": [_missing_facts(round_) for round_ in missing],
+            "rounds": [_missing_facts(round_, sheets[0].set) for round_ in missing],
         },
         "refused": list(refused),
     }
     return Tally(facts, refused)
+
+
+def tally_text(tally: Tally) -> str:
+    """The tally for a terminal: plain text, one pair of candidates after the other."""
+    return facts_text(tally.facts)
 
 
 def _missing(sheets: Sequence[Sheet]) -> tuple[list[EarlierRound], int]:
@@ -140,14 +154,36 @@ def _missing(sheets: Sequence[Sheet]) -> tuple[list[EarlierRound], int]:
     told: dict[str, EarlierRound] = {}
     for sheet in sorted(sheets, key=lambda sheet: instant(sheet.made)):
         told.update((each.id, each) for each in sheet.earlier.rounds)
-    given = {sheet.id: sheet.made for sheet in sheets if sheet.id}
-    known = {each.id: each.made for each in told.values()} | given
+    given = {sheet.id for sheet in sheets}
     missing = sorted((each for each in told.values() if each.id not in given), key=lambda each: each.made)
-    return missing, max(_unlisted(sheet, known) for sheet in sheets)
+    return missing, sum(_unlisted_of_device(own) for own in _devices(sheets))
+
+
+def _devices(sheets: Sequence[Sheet]) -> list[list[Sheet]]:
+    """The sheets of each device: those that tell of the same rounds, or stand in one file."""
+    found: list[tuple[set[object], list[Sheet]]] = []
+    for sheet in sheets:
+        marks: set[object] = {sheet.path, *(each.id for each in sheet.earlier.rounds)}
+        if sheet.id:
+            marks.add(sheet.id)
+        own = [sheet]
+        for device in [device for device in found if not marks.isdisjoint(device[0])]:
+            found.remove(device)
+            marks |= device[0]
+            own += device[1]
+        found.append((marks, own))
+    return [own for _, own in found]
+
+
+def _unlisted_of_device(sheets: Sequence[Sheet]) -> int:
+    """How many rounds of a device no sheet lists."""
+    known = {each.id: each.made for sheet in sheets for each in sheet.earlier.rounds}
+    known |= {sheet.id: sheet.made for sheet in sheets if sheet.id}
+    return max(_unlisted(sheet, known) for sheet in sheets)
 
 
 def _unlisted(sheet: Sheet, known: Mapping[str, str]) -> int:
-    """How many of a sheet's earlier rounds neither it nor another sheet lists."""
+    """How many of a sheet's earlier rounds neither it nor another sheet of its device lists."""
     listed = {each.id for each in sheet.earlier.rounds}
     before = [
         made for key, made in known.items() if key not in listed and instant(made) < instant(sheet.made)
@@ -155,7 +191,7 @@ def _unlisted(sheet: Sheet, known: Mapping[str, str]) -> int:
     return max(sheet.earlier.count - len(listed) - len(before), 0)
 
 
-def _missing_facts(told: EarlierRound) -> dict[str, object]:
+def _missing_facts(told: EarlierRound, of_set: str) -> dict[str, object]:
     return {
         "test": told.test,
         "listener": told.listener,
@@ -164,6 +200,7 @@ def _missing_facts(told: EarlierRound) -> dict[str, object]:
         "answered": told.answered,
         "planned": told.planned,
         "finished": told.finished,
+        "of_another_set": told.set not in ("", of_set),
     }
 
 
@@ -173,7 +210,7 @@ def _fewest(
     """How many trials could show something, where so many can't; None where they can.
 
     ``best(n)`` is the probability of the clearest result of n trials. It is corrected as the one at ``place``
-    among the ``probabilities`` of all pairs.
+    among the ``probabilities`` of all tests.
     """
 
     def could(n: int) -> bool:
@@ -193,102 +230,147 @@ def _names(sheets: Sequence[Sheet]) -> list[str]:
     ]
 
 
-def _abx(
-    sheets: Sequence[AbxSheet], given_up: Sequence[AbxSheet], missing: Sequence[EarlierRound]
-) -> dict[str, object] | None:
-    """Every pair of candidates that was listened to, with its listeners and what rounds are not counted."""
-    if not sheets:
-        return None
-    names = _names(sheets)
-    pairs: dict[frozenset[str], list[tuple[str, AbxSheet]]] = {}
-    for name, sheet in zip(names, sheets, strict=True):
-        pairs.setdefault(frozenset(sheet.pair), []).append((name, sheet))
-    pooled = [_score("", (sheet for _, sheet in members)) for members in pairs.values()]
-    probabilities = [score.probability for score in pooled]
-    corrected = holm(probabilities)
-    entries = []
-    for place, (pair, members) in enumerate(pairs.items()):
-        entry = _abx_pair(members, pooled[place], corrected[place])
-        fewest = _fewest(pooled[place].trials, lambda n: guessing_probability(n, n), place, probabilities)
-        uncounted = _uncounted(
-            sum(frozenset(sheet.pair) == pair for sheet in given_up),
-            sum(each.pair == pair for each in missing),
-        )
-        entry["verdict"] = _abx_verdict(pooled[place], corrected[place], fewest)
-        entry["warnings"] = [*_abx_warnings([name for name, _ in members]), *uncounted]
-        entries.append(entry)
-    return {"test": ABX_TEST, "confidence": CONFIDENCE, "pairs": entries}
+@dataclass(frozen=True, slots=True)
+class _Group:
+    """Rounds of one pair of candidates over one excerpt: ``members`` are listeners and their sheets."""
+
+    excerpt_s: Excerpt
+    members: list[tuple[str, AbxSheet]]
+
+    @property
+    def pair(self) -> frozenset[str]:
+        return frozenset(self.members[0][1].pair)
+
+    @property
+    def listeners(self) -> list[Score]:
+        names = dict.fromkeys(name for name, _ in self.members)
+        return [_score(name, [sheet for member, sheet in self.members if member == name]) for name in names]
+
+    @property
+    def pooled(self) -> Score:
+        return _score("", [sheet for _, sheet in self.members])
 
 
-def _score(name: str, sheets: Iterable[AbxSheet]) -> Score:
-    rounds = list(sheets)
+def _score(name: str, rounds: Sequence[AbxSheet]) -> Score:
     return Score(name, len(rounds), sum(s.correct for s in rounds), sum(s.trials for s in rounds))
 
 
-def _abx_pair(members: Sequence[tuple[str, AbxSheet]], pooled: Score, corrected: float) -> dict[str, object]:
-    first = members[0][1]
-    listeners = [
-        _score(name, (sheet for member, sheet in members if member == name))
-        for name in dict.fromkeys(name for name, _ in members)
+def _abx(
+    sheets: Sequence[AbxSheet], given_up: Sequence[AbxSheet], missing: Sequence[EarlierRound]
+) -> dict[str, object] | None:
+    """Every pair of candidates that was listened to, excerpt by excerpt, with its listeners and what rounds
+    are not counted."""
+    if not sheets:
+        return None
+    groups: dict[tuple[frozenset[str], Excerpt], _Group] = {}
+    for name, sheet in zip(_names(sheets), sheets, strict=True):
+        key = frozenset(sheet.pair), sheet.excerpt_s
+        groups.setdefault(key, _Group(sheet.excerpt_s, [])).members.append((name, sheet))
+    # A test for each listener; where there are several, one for their sum before them.
+    scores = [
+        [group.pooled, *listeners] if len(listeners) > 1 else listeners
+        for group, listeners in ((group, group.listeners) for group in groups.values())
     ]
-    own = holm([score.probability for score in listeners])
-    total = pooled.as_dict(corrected)
+    probabilities = [score.probability for own in scores for score in own]
+    corrected = holm(probabilities)
+    entries, place = [], 0
+    for group, own in zip(groups.values(), scores, strict=True):
+        tested = list(zip(own, corrected[place : place + len(own)], strict=True))
+        fewest = _fewest(own[0].trials, lambda n: guessing_probability(n, n), place, probabilities)
+        entry = _abx_entry(group, tested)
+        entry["verdict"] = _abx_verdict(tested, fewest, len(probabilities))
+        entry["warnings"] = [*_abx_warnings(group), *_uncounted(group, given_up, missing)]
+        entries.append(entry)
+        place += len(own)
+    return {"test": ABX_TEST, "tests": len(probabilities), "confidence": CONFIDENCE, "pairs": entries}
+
+
+def _abx_entry(group: _Group, tested: Sequence[tuple[Score, float]]) -> dict[str, object]:
+    first = group.members[0][1]
+    total = tested[0][0].as_dict(tested[0][1])
     del total["listener"]
+    listeners = tested[1:] or tested
     return {
         "pair": list(first.pair),
         "labels": list(first.labels),
+        "excerpt_s": None if group.excerpt_s is None else list(group.excerpt_s),
         **total,
-        "evidence": corrected < SIGNIFICANCE,
-        "listeners": [score.as_dict(value) for score, value in zip(listeners, own, strict=True)],
+        "listeners": [score.as_dict(value) for score, value in listeners],
     }
 
 
-def _abx_warnings(names: Sequence[str]) -> list[str]:
+def _abx_warnings(group: _Group) -> list[str]:
     """What to bear in mind of rounds by these listeners."""
+    names = [name for name, _ in group.members]
     several = [DEPENDENT] if len(set(names)) > 1 else []
     return [*several, REPEATED] if len(set(names)) < len(names) else several
 
 
-def _uncounted(given_up: int, missing: int) -> Iterator[str]:
+def _uncounted(group: _Group, given_up: Sequence[AbxSheet], missing: Sequence[EarlierRound]) -> Iterator[str]:
     """Warnings of a pair's rounds that are not counted."""
-    if given_up:
-        yield f"{_counted(given_up, 'round')} of this pair given up and not counted; {GIVEN_UP}"
-    if missing:
-        yield f"{_counted(missing, 'earlier round')} of this pair not among these files; {PICKED}"
+    left = sum(frozenset(sheet.pair) == group.pair for sheet in given_up)
+    absent = sum(each.pair == group.pair for each in missing)
+    if left:
+        yield f"{counted(left, 'round')} of this pair given up and not counted; {GIVEN_UP}"
+    if absent:
+        yield f"{counted(absent, 'earlier round')} of this pair not among these files; {PICKED}"
 
 
-def _abx_verdict(score: Score, corrected: float, fewest: int | None) -> str:
-    """``fewest``: see `_fewest`."""
+def _abx_verdict(tested: Sequence[tuple[Score, float]], fewest: int | None, tests: int) -> str:
+    """In a sentence. ``tested``: scores with their corrected probabilities, that of all together first where
+    there are several listeners; ``fewest``: see `_fewest`."""
+    score, corrected = tested[0]
+    said = _by_guessing(score.probability, corrected, tests)
+    listeners = tested[1:]
+    heard = [each for each in listeners if each[1] < SIGNIFICANCE]
+    if heard:
+        return _who_heard(heard, [each for each in listeners if each not in heard], tests)
     if corrected < SIGNIFICANCE:
-        return f"evidence that the two can be told apart: {_by_guessing(corrected)}"
+        alone = " by all together, though by none alone" if listeners else f" by {score.listener}"
+        return f"evidence that the two can be told apart{alone}: {said}"
     if fewest is not None:
         return f"no evidence, and there could be none: {_too_few(score.trials, 'trial', fewest)}"
     so_few = guessing_probability(score.trials - score.correct, score.trials)
     if so_few < SIGNIFICANCE:
         return (
             f"no evidence that the two can be told apart, but so few correct answers come by guessing with a "
-            f"probability of only {_rounded(so_few)}: were the answers the wrong way round?"
+            f"probability of only {rounded(so_few)}: were the answers the wrong way round?"
         )
-    return f"no evidence that the two can be told apart: {_by_guessing(corrected)}; {NO_PROOF_OF_SAMENESS}"
+    return f"no evidence that the two can be told apart: {said}; {NO_PROOF_OF_SAMENESS}"
+
+
+def _who_heard(
+    heard: Sequence[tuple[Score, float]], others: Sequence[tuple[Score, float]], tests: int
+) -> str:
+    """Of whom there is evidence, and of whom there is none."""
+    least = max(heard, key=lambda each: each[1])
+    worst = "at worst, " if len(heard) > 1 else ""
+    said = f"{worst}{_by_guessing(least[0].probability, least[1], tests)}"
+    names = named([score.listener for score, _ in heard])
+    if not others:
+        return f"evidence that the two can be told apart by each of {names}: {said}"
+    rest = named([score.listener for score, _ in others])
+    return f"evidence that {names} can tell the two apart ({said}), and none that {rest} can"
 
 
 def _too_few(count: int, noun: str, fewest: int) -> str:
     verb = "is" if count == 1 else "are"
-    return f"{_counted(count, noun)} {verb} too few to show anything, {fewest} are the fewest"
+    return f"{counted(count, noun)} {verb} too few to show anything, {fewest} are the fewest"
 
 
-def _by_guessing(probability: float) -> str:
-    return f"guessing does as well with a probability of {_rounded(probability)}"
+def _by_guessing(probability: float, corrected: float, tests: int) -> str:
+    chance = with_correction(probability, corrected, tests, "test")
+    return f"guessing does as well with a probability of {chance}"
 
 
-def _rounded(probability: float) -> str:
-    return f"{probability:.3f}" if probability >= 0.001 else f"{probability:.1e}"
+_Choice = tuple[str, str | None]
+"""A listener, and what they chose: a hash, or None for neither."""
 
 
 def _preference(
     sheets: Sequence[PreferenceSheet], missing: Sequence[EarlierRound]
 ) -> dict[str, object] | None:
-    """Every pair of candidates, with who won how often, and each listener's choices."""
+    """Every pair of candidates, excerpt by excerpt, with who won how often, and each listener's choices."""
     if not sheets:
         return None
     names = _names(sheets)
@@ -296,21 +378,25 @@ def _preference(
     for sheet in sheets:
         for digest, label in sheet.labels.items():
             labels.setdefault(digest, label)
-    choices: dict[frozenset[str], list[tuple[str, str | None]]] = {}
+    choices: dict[tuple[Excerpt, frozenset[str]], list[_Choice]] = {}
     for name, sheet in zip(names, sheets, strict=True):
         for judgement in sheet.judgements:
-            choices.setdefault(frozenset(judgement.pair), []).append((name, judgement.preferred))
-    pairs = [pair for pair in combinations(labels, 2) if frozenset(pair) in choices]
-    entries = _preference_pairs(labels, {pair: choices[frozenset(pair)] for pair in pairs})
-    totals = [
-        {"label": label, "settings_sha256": digest, "wins": _total_wins(digest, entries)}
-        for digest, label in labels.items()
-    ]
-    totals.sort(key=lambda total: -int(str(total["wins"])))
+            key = sheet.excerpt_s, frozenset(judgement.pair)
+            choices.setdefault(key, []).append((name, judgement.preferred))
+    excerpts = dict.fromkeys(excerpt for excerpt, _ in choices)
+    groups = {
+        (excerpt, pair): choices[excerpt, frozenset(pair)]
+        for excerpt in excerpts
+        for pair in combinations(labels, 2)
+        if (excerpt, frozenset(pair)) in choices
+    }
+    entries = _preference_pairs(labels, groups)
+    totals = [_total(digest, label, entries) for digest, label in labels.items()]
+    totals.sort(key=lambda total: total["wins"] / max(total["comparisons"], 1), reverse=True)
     warnings = [REPEATED] if len(set(names)) < len(names) else []
     absent = sum(each.test == "preference" for each in missing)
     if absent:
-        rounds = _counted(absent, "earlier round")
+        rounds = counted(absent, "earlier round")
         warnings.append(f"{rounds} of preferences not among these files; {PICKED}")
     return {
         "test": PREFERENCE_TEST,
@@ -322,26 +408,37 @@ def _preference(
 
 
 def _preference_pairs(
-    labels: Mapping[str, str], choices: Mapping[tuple[str, str], Sequence[tuple[str, str | None]]]
+    labels: Mapping[str, str], groups: Mapping[tuple[Excerpt, tuple[str, str]], Sequence[_Choice]]
 ) -> list[dict[str, Any]]:
-    """What listeners chose of each pair of hashes, and what that shows."""
-    wins = [[_count(judged, digest) for digest in pair] for pair, judged in choices.items()]
-    probabilities = [sign_test(*counts) for counts in wins]
+    """What listeners chose of each pair of hashes, and what that shows.
+
+    Choices of one listener are not independent of each other: of several listeners each has one vote. Where
+    there is one only, their choices tell of them alone.
+    """
+    votes = [_votes(judged, pair) for (_, pair), judged in groups.items()]
+    probabilities = [sign_test(*counts) for counts in votes]
     corrected = holm(probabilities)
     entries = []
-    for place, (pair, judged) in enumerate(choices.items()):
+    for place, ((excerpt, pair), judged) in enumerate(groups.items()):
         both = [labels[digest] for digest in pair]
-        fewest = _fewest(sum(wins[place]), lambda n: sign_test(n, 0), place, probabilities)
+        names = list(dict.fromkeys(name for name, _ in judged))
+        only = names[0] if len(names) == 1 else None
+        fewest = _fewest(sum(votes[place]), lambda n: sign_test(n, 0), place, probabilities)
+        chance = with_correction(probabilities[place], corrected[place], len(groups), "pair")
+        shows = corrected[place] < SIGNIFICANCE
         entries.append(
             {
                 "pair": list(pair),
                 "labels": both,
-                "wins": wins[place],
+                "excerpt_s": None if excerpt is None else list(excerpt),
+                "wins": [_count(judged, digest) for digest in pair],
                 "no_preference": _count(judged, None),
+                "counted": "votes" if only is None else "choices",
+                "votes": votes[place],
                 "probability": probabilities[place],
                 "probability_corrected": corrected[place],
-                "evidence": corrected[place] < SIGNIFICANCE,
-                "verdict": _preference_verdict(both, wins[place], corrected[place], fewest),
+                "evidence": shows,
+                "verdict": _preference_verdict(both, votes[place], only, shows, chance, fewest),
                 "listeners": [
                     {"listener": name, "preferred": None if chosen is None else labels[chosen]}
                     for name, chosen in judged
@@ -351,26 +448,52 @@ def _preference_pairs(
     return entries
 
 
-def _count(judged: Sequence[tuple[str, str | None]], chosen: str | None) -> int:
+def _count(judged: Sequence[_Choice], chosen: str | None) -> int:
     return sum(choice == chosen for _, choice in judged)
 
 
-def _total_wins(digest: str, entries: Sequence[Mapping[str, Any]]) -> int:
-    return sum(each["wins"][each["pair"].index(digest)] for each in entries if digest in each["pair"])
+def _votes(judged: Sequence[_Choice], pair: Sequence[str]) -> list[int]:
+    """For each of the pair, how many listeners chose it more often than the other; of one listener, how often
+    they chose it."""
+    own: dict[str, list[_Choice]] = {}
+    for name, chosen in judged:
+        own.setdefault(name, []).append((name, chosen))
+    counts = [[_count(choices, digest) for digest in pair] for choices in own.values()]
+    if len(counts) == 1:
+        return counts[0]
+    return [sum(one > other for one, other in counts), sum(other > one for one, other in counts)]
+
+
+def _total(digest: str, label: str, entries: Sequence[Mapping[str, Any]]) -> dict[str, Any]:
+    """How often a candidate won, of how often it was heard in a pair."""
+    own = [each for each in entries if digest in each["pair"]]
+    return {
+        "label": label,
+        "settings_sha256": digest,
+        "wins": sum(each["wins"][each["pair"].index(digest)] for each in own),
+        "comparisons": sum(len(each["listeners"]) for each in own),
+    }
 
 
 def _preference_verdict(
-    labels: Sequence[str], wins: Sequence[int], probability: float, fewest: int | None
+    labels: Sequence[str],
+    votes: Sequence[int],
+    only: str | None,
+    shows: bool,
+    chance: str,
+    fewest: int | None,
 ) -> str:
-    """``fewest``: see `_fewest`."""
-    if probability < SIGNIFICANCE:
-        better = labels[0] if wins[0] > wins[1] else labels[1]
-        return f"{better} is preferred (probability {_rounded(probability)})"
+    """``only``: the one listener whose choices ``votes`` are, if there is one; ``fewest``: see `_fewest`."""
+    better = labels[0] if votes[0] > votes[1] else labels[1]
+    if shows and only is not None:
+        return f"{only} prefers {better} (probability {chance}), which tells of no other listener"
+    if shows:
+        of_all = f"{max(votes)} of {counted(sum(votes), 'listener')}"
+        return f"{better} is preferred by {of_all} (probability {chance})"
     if fewest is not None:
-        return (
-            f"no evidence of a preference, and there could be none: {_too_few(sum(wins), 'choice', fewest)}"
-        )
-    return f"no evidence of a preference (probability {_rounded(probability)})"
+        too_few = _too_few(sum(votes), "vote" if only is None else "choice", fewest)
+        return f"no evidence of a preference, and there could be none: {too_few}"
+    return f"no evidence of a preference (probability {chance})"
 
 
 def _unfinished(sheet: Sheet) -> dict[str, object]:
@@ -381,95 +504,3 @@ def _unfinished(sheet: Sheet) -> dict[str, object]:
         return {**told, "test": "abx", "labels": list(sheet.labels), **counts}
     planned = len(sheet.labels) * (len(sheet.labels) - 1) // 2
     return {**told, "test": "preference", "pairs": len(sheet.judgements), "pairs_planned": planned}
-
-
-def tally_text(tally: Tally) -> str:
-    """The tally for a terminal: plain text, one pair of candidates after the other."""
-    facts: Mapping[str, Any] = tally.facts
-    lines = [f"{_counted(facts['sheets'], 'listening sheet')} of the set {facts['set'][:12]}"]
-    if facts["abx"]:
-        lines += ["", f"A/B/X ({facts['abx']['test']})"]
-        for pair in facts["abx"]["pairs"]:
-            lines += _abx_lines(pair)
-    if facts["preference"]:
-        lines += ["", f"Preference ({facts['preference']['test']})"]
-        lines += _preference_lines(facts["preference"])
-    if facts["unfinished"]:
-        lines += ["", "Not finished, and not counted:"]
-        lines += [f"  {_unfinished_line(told)}" for told in facts["unfinished"]]
-    lines += _missing_lines(facts["earlier_missing"])
-    if not facts["abx"] and not facts["preference"]:
-        lines += ["", "No finished rounds: there is nothing to add up."]
-    return "\n".join(lines)
-
-
-def _counted(count: int, noun: str) -> str:
-    return f"{count:,} {noun}" if count == 1 else f"{count:,} {noun}s"
-
-
-def _abx_lines(pair: Mapping[str, Any]) -> Iterator[str]:
-    yield f"  {pair['labels'][0]}  or  {pair['labels'][1]}"
-    for score in pair["listeners"]:
-        yield f"    {score['listener']}: {_score_text(score)}"
-    if len(pair["listeners"]) > 1:
-        yield f"    all together: {_score_text(pair)}"
-    yield f"    {pair['verdict']}"
-    yield from (f"    note: {warning}" for warning in pair["warnings"])
-
-
-def _score_text(score: Mapping[str, Any]) -> str:
-    low, high = (100.0 * share for share in score["confidence_interval"])
-    rounds = f" in {score['rounds']} rounds" if score["rounds"] > 1 else ""
-    corrected = ""
-    if score["probability_corrected"] != score["probability"]:
-        corrected = f" ({_rounded(score['probability_corrected'])} corrected)"
-    return (
-        f"{score['correct']} of {score['trials']} correct{rounds}, probability by guessing "
-        f"{_rounded(score['probability'])}{corrected}, {100.0 * CONFIDENCE:g} % interval of the share "
-        f"{low:.0f} to {high:.0f} %"
-    )
-
-
-def _preference_lines(preference: Mapping[str, Any]) -> Iterator[str]:
-    for pair in preference["pairs"]:
-        wins = pair["wins"]
-        neither = f", no preference {pair['no_preference']}" if pair["no_preference"] else ""
-        yield f"  {pair['labels'][0]} {wins[0]} : {wins[1]} {pair['labels'][1]}{neither}: {pair['verdict']}"
-    totals = ", ".join(f"{total['label']} {total['wins']}" for total in preference["candidates"])
-    yield f"  wins in all: {totals}"
-    chosen: dict[str, list[str]] = {}
-    for pair in preference["pairs"]:
-        for row in pair["listeners"]:
-            chosen.setdefault(row["listener"], []).append(row["preferred"] or "neither")
-    yield from (f"  {listener} chose {', '.join(choices)}" for listener, choices in chosen.items())
-    if not any(pair["evidence"] for pair in preference["pairs"]):
-        yield f"  no pair shows a preference; {NO_PROOF_OF_EQUAL_LIKING}"
-    yield from (f"  note: {warning}" for warning in preference["warnings"])
-
-
-def _unfinished_line(told: Mapping[str, Any]) -> str:
-    who = f"{told['file']}, {told['listener'] or 'no name'}"
-    if told["test"] == "abx":
-        return (
-            f"{who}: {told['labels'][0]} or {told['labels'][1]}, {told['correct']} of {told['trials']} "
-            f"correct, {told['trials_planned']} planned"
-        )
-    return f"{who}: preference, {told['pairs']} of {told['pairs_planned']} pairs"
-
-
-def _missing_lines(missing: Mapping[str, Any]) -> Iterator[str]:
-    if not missing["count"]:
-        return
-    yield ""
-    yield f"{_counted(missing['count'], 'earlier round')} not among these files, on the same devices:"
-    for told in missing["rounds"]:
-        test = "preference" if told["test"] == "preference" else "A/B/X"
-        between = f" {' or '.join(told['labels'])}," if told["labels"] else ""
-        state = "finished" if told["finished"] else "not finished"
-        yield (
-            f"  {test},{between} {told['listener'] or 'no name'}, {told['made']}: "
-            f"{told['answered']} of {told['planned']} answered, {state}"
-        )
-    unlisted = missing["count"] - len(missing["rounds"])
-    if unlisted:
-        yield f"  and {unlisted:,} that no sheet lists"

@@ -208,9 +208,11 @@ def read_sheet(preset: Preset, path: Path, most: int) -> tuple[str, tuple[Candid
     require_fit(len(tables), most, [], where)
     changed = _Changes(where)
     candidates = [
-        Candidate(shortened(name.strip(), _LONGEST_LABEL), changed.made(name, preset, changes), _told(changes))
+        Candidate(
+            shortened(name.strip(), _LONGEST_LABEL), changed.made(name, preset, changes), _told(changes)
+        )
         for name, changes in tables.items()
-    ]  # fmt: skip
+    ]
     changed.raise_mistakes(len(candidates))
     return title, tuple(_distinct_labels(candidates))
 

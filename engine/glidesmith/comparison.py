@@ -72,7 +72,7 @@ if TYPE_CHECKING:
 MOST_FRAMES = 100_000_000
 """Of all candidates together: some 35 minutes at 48 kHz. A page can't hold much more."""
 
-_TITLES_NAMED = 3
+_TITLES_NAMED = _MOST_NAMED = 3
 
 
 @dataclass(frozen=True)
@@ -243,7 +243,10 @@ def compare(
 
 
 def _listed(names: Sequence[str]) -> str:
-    return f"{', '.join(shown(name) for name in names)} {'was' if len(names) == 1 else 'were'}"
+    named = ", ".join(shown(name) for name in names[:_MOST_NAMED])
+    more = len(names) - _MOST_NAMED
+    told = f"{named} and {more} more" if more > 0 else named
+    return f"{told} {'was' if len(names) == 1 else 'were'}"
 
 
 def _anew_warnings(place: SetFolder, changed: Sequence[str]) -> list[str]:
@@ -464,7 +467,7 @@ def _commit(
     try:
         facts_file.close()
         # Without its page a set was not finished: what is otherwise than its facts say is no one's own work.
-        if sinks or place.facts is None or place.facts.get("set") != facts["set"]:
+        if place.facts is None or place.facts.get("set") != facts["set"]:
             page.unlink(missing_ok=True)
         with ThreadPoolExecutor(_workers()) as pool:
             closing = [pool.submit(sink.close) for sink in sinks]

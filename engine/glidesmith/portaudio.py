@@ -2,9 +2,10 @@
 
 What was seen of it, and is held to here. ALSA's and JACK's libraries print on file descriptor 2. Devices are
 listed once, when PortAudio is initialised. After a JACK server has died, aborting or closing its stream waits
-for ever, and terminating PortAudio ends the whole process by a failed assertion. So where JACK is about,
-PortAudio is never terminated: whoever needs to see new devices looks from a process of its own
-(`outputs_seen_afresh`), and then a fresh copy of the library takes over (`renew`).
+for ever, and terminating PortAudio ends the whole process by a failed assertion. So where JACK is about and
+something was lost, PortAudio is left as it is: whoever needs to see new devices looks from a process of its
+own (`outputs_seen_afresh`), and then a fresh copy of the library takes over (`renew`). In all other cases it
+is terminated in good order (`finish`).
 """
 
 import atexit
@@ -40,6 +41,7 @@ NO_OUTPUT = (
 )
 
 _loaded: list[Any] = []
+_given_up: list[bool] = []
 _MOST_TOLD = 8
 _LOOK_S = 8.0
 _SHORT_NAMES = {"JACK Audio Connection Kit": "JACK"}
@@ -174,10 +176,33 @@ def library() -> Any:
                 _pin(found)  # before anything can interrupt the start
             sounddevice = _imported()
         _pin(str(_library_file(sounddevice)))
-        # Its own way out terminates PortAudio, which is not always survived.
         atexit.unregister(sounddevice._exit_handler)
+        atexit.register(finish)
         _loaded.append(sounddevice)
+    if not _loaded[0]._initialized and not _given_up:
+        with quiet():
+            _loaded[0]._initialize()
     return _loaded[0]
+
+
+def give_up() -> None:
+    """Never terminate PortAudio as it is now: a server that it talked to is gone."""
+    _given_up.append(True)
+
+
+def finish() -> None:
+    """Terminate PortAudio, unless it was given up; done at the process's end.
+
+    A client that only vanishes makes a JACK server drop samples of everybody's.
+    """
+    if not _loaded or _given_up or not _loaded[0]._initialized:
+        return
+    with quiet(), contextlib.suppress(_loaded[0].PortAudioError):
+        try:
+            if not within(_LOOK_S, _loaded[0]._terminate):
+                give_up()
+        except RuntimeError:  # so late there are no new threads
+            _loaded[0]._terminate()
 
 
 def _imported() -> Any:
@@ -212,10 +237,11 @@ def renew() -> None:
     """
     sounddevice = library()
     with quiet():
-        if not has_jack(sounddevice) and within(_LOOK_S, sounddevice._terminate):
+        if not _given_up and not has_jack(sounddevice) and within(_LOOK_S, sounddevice._terminate):
             started = within(_LOOK_S, sounddevice._initialize)
         else:
             copy = _fresh_copy(sounddevice)
+            _given_up.clear()
             sounddevice._lib, sounddevice._initialized = copy, 0
             started = within(_LOOK_S, sounddevice._initialize)
     if not started:
@@ -373,14 +399,14 @@ def outputs_seen_afresh() -> list[Output]:
 def _try_out() -> None:
     """Start PortAudio in a process of its own first: with some settings of ALSA it ends the process."""
     try:
-        broke = _asked_elsewhere().returncode < 0
+        done = _asked_elsewhere()
     except subprocess.TimeoutExpired:
         raise NoSoundError(
             "PortAudio does not answer: restart your sound server (PipeWire, PulseAudio or JACK)"
         ) from None
     except OSError:
         return  # there are no other processes here
-    if broke:
+    if done.returncode < 0 and not done.stdout:
         raise NoSoundError(
             "PortAudio breaks down on this system's sound settings: see what aplay -L says, and mend "
             "/etc/asound.conf, ~/.asoundrc or the package alsa-lib's settings (Debian: libasound2-data)"
@@ -402,8 +428,7 @@ def _asked_elsewhere() -> "subprocess.CompletedProcess[bytes]":
 
 
 def _tell_outputs() -> None:
-    """Print the outputs, and leave without ado."""
+    """Print the outputs."""
     import sounddevice  # noqa: F401 — here, so that nothing is tried out once more
 
     print(json.dumps([asdict(output) for output in outputs(ask_rates=False)]), flush=True)
-    os._exit(0)

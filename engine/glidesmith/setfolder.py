@@ -80,7 +80,6 @@ class SetFolder:
         self.problem = ""
         self._is_damaged_set = False
         self._others: list[str] = []
-        self._codes: dict[str, NDArray[np.int32] | None] = {}
         self._stamp = _stamp(path / FACTS_FILE)
         try:
             _require_no_dead_link(path)
@@ -158,17 +157,14 @@ class SetFolder:
         """WAVs of a set that was finished whose samples are not those written. One that is gone is none."""
         if not os.path.lexists(self.path / PAGE_FILE):
             return []
-        found = []
-        for earlier in self.earlier.values():
-            self._codes[earlier.file] = self.untouched_codes(earlier)
-            if self._codes[earlier.file] is None and os.path.lexists(self.path / earlier.file):
-                found.append(earlier.file)
-        return found
+        return [
+            earlier.file
+            for earlier in self.earlier.values()
+            if os.path.lexists(self.path / earlier.file) and self.untouched_codes(earlier) is None
+        ]
 
     def untouched_codes(self, earlier: Earlier) -> "NDArray[np.int32] | None":
         """The samples of a candidate's WAV as 24-bit numbers; None where they are not those written."""
-        if earlier.file in self._codes:
-            return self._codes.pop(earlier.file)
         import soundfile
 
         try:
@@ -232,7 +228,7 @@ def ground_of(facts: Mapping[str, Any]) -> dict[str, object]:
 def _require_no_dead_link(path: Path) -> None:
     """Raise OutputError for a link that leads nowhere: it exists and yet can't be written or looked into."""
     if path.is_symlink() and not path.exists():
-        target = shown(os.readlink(path))
+        target = shown(str(path.readlink()))
         raise OutputError(
             f"{printable(str(path))}: is a link to {target}, which is not there; remove the link or "
             "make what it leads to"

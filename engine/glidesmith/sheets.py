@@ -8,6 +8,7 @@ told in a line.
 
 import json
 import math
+import unicodedata
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -28,6 +29,7 @@ MOST_EARLIER = 100_000
 
 _LONGEST_NAME = 100
 _LONGEST_ID = 64
+_LONGEST_EXCERPT_S = 1e6
 _MOST_LISTED = 1000
 _HASH_DIGITS = 64
 _HEXADECIMAL = frozenset("0123456789abcdef")
@@ -43,6 +45,7 @@ class EarlierRound:
     """What a sheet tells of a round that was begun before it on the same device.
 
     ``pair`` are the settings' hashes of A and B, and ``labels`` their names; both are empty for preferences.
+    ``set`` is empty where the page didn't save it.
     """
 
     id: str
@@ -54,6 +57,7 @@ class EarlierRound:
     planned: int
     pair: frozenset[str]
     labels: tuple[str, ...]
+    set: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,7 +72,8 @@ class Earlier:
 class AbxSheet:
     """One round of A/B/X. ``pair`` are the settings' hashes and ``labels`` the names of A and B.
 
-    ``id`` is empty, and ``earlier`` tells of no rounds, where the page didn't save them.
+    ``excerpt_s``: what was heard of the phrase, from and to, in seconds. It is None, ``id`` is empty, and
+    ``earlier`` tells of no rounds, where the page didn't save them.
     """
 
     path: Path
@@ -78,6 +83,7 @@ class AbxSheet:
     finished: bool
     id: str
     earlier: Earlier
+    excerpt_s: tuple[float, float] | None
     pair: tuple[str, str]
     labels: tuple[str, str]
     planned: int
@@ -105,6 +111,7 @@ class PreferenceSheet:
     finished: bool
     id: str
     earlier: Earlier
+    excerpt_s: tuple[float, float] | None
     labels: Mapping[str, str]
     judgements: tuple[Judgement, ...]
 
@@ -234,8 +241,9 @@ class _Fields:
         return made
 
     def name(self, name: str) -> str:
-        """What people call something: short, and without spaces that don't show."""
-        return " ".join(shortened(self.text(name), _LONGEST_NAME).split())
+        """What people call something: short, and without spaces and ways of writing that don't show."""
+        text = unicodedata.normalize("NFC", self.text(name))
+        return " ".join(shortened(text, _LONGEST_NAME).split())
 
     def names(self, name: str, most: int) -> tuple[str, ...]:
         return tuple(shortened(str(value), _LONGEST_NAME) for value in self.rows(name, most))
@@ -245,6 +253,15 @@ class _Fields:
         if not (0 < len(text) <= _LONGEST_ID and text.isascii() and text.isprintable()):
             raise _FaultError(f"{self._where}id is {shown(text)}, not 1 to {_LONGEST_ID} plain characters")
         return text
+
+    def stretch(self, name: str) -> tuple[float, float]:
+        """Two times in seconds, the later one last, to the millisecond, as the page tells them."""
+        ends = self.rows(name, 2)
+        numbers = [each for each in ends if isinstance(each, int | float) and not isinstance(each, bool)]
+        if len(numbers) != 2 or not 0.0 <= numbers[0] < numbers[1] <= _LONGEST_EXCERPT_S:
+            told = " to ".join(shown(each) for each in ends)
+            raise _FaultError(f"{self._where}{name} is {told}, not two times in seconds, in order")
+        return round(float(numbers[0]), 3), round(float(numbers[1]), 3)
 
     def part(self, name: str) -> "_Fields":
         return _Fields(self._content[name], f"{self._where}{name}")
@@ -275,6 +292,7 @@ def _checked_sheet(path: Path, fields: _Fields) -> Sheet:
         "finished": fields.flag("finished"),
         "id": fields.id() if fields.has("id") else "",
         "earlier": _earlier(fields.part("earlier")) if fields.has("earlier") else Earlier(),
+        "excerpt_s": fields.stretch("excerpt_s") if fields.has("excerpt_s") else None,
     }
     test = fields.text("test")
     if test == "abx":
@@ -305,6 +323,7 @@ def _earlier_round(fields: _Fields) -> EarlierRound:
         planned=fields.whole("planned", 0, MOST_CANDIDATES**2),
         pair=frozenset(_digest(value, "pair") for value in pair),
         labels=fields.names("labels", 2) if fields.has("labels") else (),
+        set=fields.digest("set") if fields.has("set") else "",
     )
 
 

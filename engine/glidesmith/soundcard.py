@@ -23,6 +23,7 @@ from glidesmith.portaudio import (
     NoSoundError,
     Output,
     find_output,
+    give_up,
     library,
     outputs,
     outputs_seen_afresh,
@@ -379,6 +380,7 @@ class SoundCard:
         """Give up a stream that can't be closed; whatever becomes of it, it will be silent."""
         lease.revoke()
         keep_for_ever((stream, lease, self._source))
+        give_up()
         self.left_behind = True
 
     def _watch_over(self) -> None:

@@ -1,6 +1,7 @@
 """``glidesmith live``: plays presets to the sound card while their settings move."""
 
 import contextlib
+import signal
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -9,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from glidesmith.command import tell
+from glidesmith.command.livesignals import EndingSignals
 from glidesmith.command.options import (
     FilePath,
     FiniteRange,
@@ -140,13 +142,18 @@ def command(presets: tuple[Path, ...], as_json: bool, **options: Any) -> int:
       glidesmith live lead.toml --no-panel --seconds 10 --capture take.wav --json
     """
     _check_together(options)
-    with errors_in_json(as_json):
-        slots = _slots(presets, options)
-        _check_kept(slots, options)
-        from glidesmith.portaudio import quiet
+    with EndingSignals() as signals:
+        try:
+            with errors_in_json(as_json):
+                slots = _slots(presets, options)
+                _check_kept(slots, options)
+                from glidesmith.portaudio import quiet
 
-        with quiet():
-            return _play(slots, options, as_json)
+                with quiet():
+                    return _play(slots, options, as_json, signals)
+        except KeyboardInterrupt:
+            tell("glidesmith: interrupted before it played")
+            return 128 + (signals.number or signal.SIGINT)
 
 
 @dataclass(frozen=True, slots=True)
@@ -212,7 +219,7 @@ def _check_kept(slots: Sequence[Slot], options: dict[str, Any]) -> None:
         check_inputs_kept(outputs, slot.preset, options["phrase"])
 
 
-def _play(slots: Sequence[Slot], options: dict[str, Any], as_json: bool) -> int:
+def _play(slots: Sequence[Slot], options: dict[str, Any], as_json: bool, signals: EndingSignals) -> int:
     """Set the stage, play, and strike it; the exit status."""
     from glidesmith.command.livestage import Stage, leave_now
 
@@ -221,7 +228,7 @@ def _play(slots: Sequence[Slot], options: dict[str, Any], as_json: bool) -> int:
     session = _session(slots, rate, options)
     _compile(session)
     stage = Stage(session, choice, options, as_json)
-    status = stage.play()
+    status = stage.play(signals)
     if stage.left_behind:
         leave_now(status)
     return status

@@ -2,14 +2,12 @@
 
 import contextlib
 import os
-import signal
 import sys
 import threading
 import time
 import webbrowser
 from collections.abc import Iterator
-from types import FrameType
-from typing import TYPE_CHECKING, Any, Self
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -18,12 +16,14 @@ from glidesmith.command.livekeys import LiveKeys, capture_line, status_text
 from glidesmith.command.options import json_text
 from glidesmith.errors import GlidesmithError
 from glidesmith.playreport import report_lines
+from glidesmith.portaudio import finish
 from glidesmith.soundcard import SoundCard
 from glidesmith.terminal import Keys, StatusLine
 from glidesmith.text import counted, printable
 
 if TYPE_CHECKING:
     from glidesmith.browser_sound import BrowserSound
+    from glidesmith.command.livesignals import EndingSignals
     from glidesmith.panel import Panel
     from glidesmith.session import Session
     from glidesmith.soundcard import Choice
@@ -34,29 +34,6 @@ _LOOK_S = 0.05
 _FADE_PATIENCE_S = 0.3
 _FADE_S = 0.02
 _GRACE_S = 5.0
-
-
-class EndingSignals:
-    """Signals that end, while it is entered: the first one's number is kept, and none interrupts anything."""
-
-    def __init__(self) -> None:
-        self.number: int | None = None
-        self._kept: dict[int, Any] = {}
-
-    def __enter__(self) -> Self:
-        if threading.current_thread() is threading.main_thread():
-            for name in ("SIGINT", "SIGTERM", "SIGHUP"):
-                number = getattr(signal, name, None)
-                if number is not None and signal.getsignal(number) is not signal.SIG_IGN:
-                    self._kept[number] = signal.signal(number, self._take)
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        for number, handler in self._kept.items():
-            signal.signal(number, handler)
-
-    def _take(self, number: int, _: FrameType | None) -> None:
-        self.number = self.number or number
 
 
 class Stage:
@@ -90,20 +67,23 @@ class Stage:
         """Whether a stream could not be closed, so that the process must not end the ordinary way."""
         return self._card is not None and self._card.left_behind
 
-    def play(self) -> int:
+    def play(self, signals: "EndingSignals") -> int:
         """Put everything up, play until it ends, and strike; the exit status.
 
         Raises what keeps it from playing.
         """
-        with EndingSignals() as signals:
-            try:
-                self._put_up()
-                self._run(signals)
-            finally:
-                problems = self._strike()
-            for line in problems:
-                tell(f"glidesmith: {line}")
-            self._tell_outcome()
+        signals.interrupts = False
+        if signals.number is not None:
+            self._session.close()
+            raise KeyboardInterrupt
+        try:
+            self._put_up()
+            self._run(signals)
+        finally:
+            problems = self._strike()
+        for line in problems:
+            tell(f"glidesmith: {line}")
+        self._tell_outcome()
         return 128 + signals.number if signals.number else int(bool(problems))
 
     def _put_up(self) -> None:
@@ -158,7 +138,7 @@ class Stage:
         if not self._options["no_browser"] and _has_display():
             threading.Thread(target=webbrowser.open, args=(panel.url,), daemon=True).start()
 
-    def _run(self, signals: EndingSignals) -> None:
+    def _run(self, signals: "EndingSignals") -> None:
         """Until it ends: keys, status, and what there is to tell."""
         live_keys = LiveKeys(self._session, self._status.say, self._report)
         begun = time.monotonic()
@@ -291,6 +271,7 @@ def _has_display() -> bool:
 
 def leave_now(status: int) -> None:
     """End the process at once: a stream that could not be closed may keep an ordinary end from coming."""
+    finish()
     for output in (sys.stdout, sys.stderr):
         with contextlib.suppress(OSError, ValueError):
             output.flush()

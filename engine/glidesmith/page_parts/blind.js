@@ -5,8 +5,8 @@ class BlindListening {
   // `page` hides and shows the rest: enter(), leave(), and excerpt(), the stretch chosen there, or null.
   constructor(body, data, sound, clips, page) {
     Object.assign(this, { body, data, sound, clips, page, round: null });
-    this.record = new Record(data.set);
-    this.setup = new Setup(data, () => page.excerpt(), (kind, choices) => this.start(new kind(data, { ...choices, earlier: this.record.earlier })));
+    this.record = new Record(data);
+    this.setup = new Setup(data, () => page.excerpt(), (kind, choices) => this.start(new kind(data, choices)));
     this.recordBox = element("div", { id: "record" });
     this.record.addEventListener("change", () => this.showRecord());
     this.showSetup();
@@ -45,7 +45,7 @@ class BlindListening {
       heading, element("progress", { max: round.planned, value: round.done, "aria-label": "Answered so far" }),
       element("div", { class: "clips", role: "group", "aria-label": "Clips" }, ...this.clipButtons),
       element("p", { class: "row" }, element("button", { type: "button", id: "round-play", click: () => this.toggle() }, "Play"), this.hint),
-      element("div", { class: "row answers", role: "group", "aria-label": "Answer" }, ...this.answerButtons),
+      element("div", { class: "row answers", role: "group", "aria-label": "Answer" }, ...this.answerButtons), ...this.lossWarning(),
       element("p", { class: "row giving-up" }, element("button", { type: "button", id: "give-up", click: () => this.giveUp() }, "Give up this round")));
     heading.focus({ preventScroll: round.done > 0 });
   }
@@ -113,10 +113,15 @@ class BlindListening {
     this.page.leave();
     this.showSetup();
     const heading = element("h3", { tabindex: -1 }, sheet.finished ? "The round is over" : "The round was given up");
-    const result = element("div", { id: "result", class: "result" }, heading, ...this.resultWords(sheet).map((words) => element("p", {}, ...words)),
-      element("p", { class: "row" }, this.saveButton(sheet, "Save the sheet")));
+    const result = element("div", { id: "result", class: "result" }, heading, ...this.resultWords(this.record.whole(sheet)).map((words) => element("p", {}, ...words)),
+      ...this.lossWarning(), element("p", { class: "row" }, this.saveButton(sheet, "Save the sheet")));
     this.body.prepend(result);
     heading.focus();
+  }
+
+  lossWarning() {
+    if (!this.record.failing) return [];
+    return [element("p", { class: "problem", role: "alert" }, "This browser can\u2019t keep rounds. Save the sheet before you leave this page.")];
   }
 
   resultWords(sheet) {
@@ -129,18 +134,29 @@ class BlindListening {
     const { record } = this;
     const { sheets, rounds } = record;
     const over = sheets.filter(({ id }) => !record.runs(id));
-    const state = JSON.stringify([rounds, sheets.length, over.length]);
+    const state = JSON.stringify([rounds, sheets.length, over.length, record.failing]);
     if (state === this.shownRecord) return;
     this.shownRecord = state;
-    const lines = sheets.map((sheet) => element("li", { class: "row" }, this.recordLine(sheet), over.includes(sheet) ? this.saveButton(sheet, "Save") : ""));
-    const buttons = element("p", { class: "row" },
-      element("button", { type: "button", id: "save-all", disabled: over.length === 0, click: () => saveSheets(over, this.data.set) }, "Save all rounds"),
-      element("button", { type: "button", id: "forget", disabled: over.length === 0, click: () => this.forget() }, "Forget these rounds"));
     const forgotten = rounds.length - sheets.length;
     const gone = forgotten === 0 ? "" : `${counted(forgotten, "earlier round")} of this set ${forgotten === 1 ? "is" : "are"} forgotten here. `;
     const said = element("p", { class: "aside" }, `${gone}Each sheet tells of the rounds begun on this device before it, finished or not.`);
-    const kept = sheets.length === 0 ? [] : [element("ul", { class: "plain" }, ...lines), buttons];
-    this.recordBox.replaceChildren(...(rounds.length === 0 ? [] : [element("h3", {}, "Rounds on this device"), ...kept, said]));
+    const others = [...new Set(sheets.map(({ set }) => set))].filter((set) => set !== this.data.set);
+    const kept = [this.data.set, ...others].flatMap((set) => this.roundsOf(set, sheets.filter((sheet) => sheet.set === set), over));
+    const forget = element("p", { class: "row" }, element("button", { type: "button", id: "forget", disabled: over.length === 0, click: () => this.forget() }, "Forget these rounds"));
+    const parts = [element("h3", {}, "Rounds on this device"), ...this.lossWarning(), ...kept, ...(sheets.length === 0 ? [] : [forget]), said];
+    this.recordBox.replaceChildren(...(rounds.length === 0 ? [] : parts));
+  }
+
+  // A tally takes sheets of one set: those of each are saved together.
+  roundsOf(set, sheets, over) {
+    if (sheets.length === 0) return [];
+    const own = set === this.data.set;
+    const ended = sheets.filter((sheet) => over.includes(sheet));
+    const lines = sheets.map((sheet) => element("li", { class: "row" }, this.recordLine(sheet), ended.includes(sheet) ? this.saveButton(sheet, "Save") : ""));
+    const save = element("button", { type: "button", ...(own ? { id: "save-all" } : { class: "save-others" }), disabled: ended.length === 0,
+      click: () => saveSheets(ended.map((sheet) => this.record.whole(sheet)), set) }, own ? "Save all rounds" : "Save these rounds");
+    const head = own ? [] : [element("p", {}, `From another set with candidates of this one (${set.slice(0, 12)}), which is tallied by itself:`)];
+    return [...head, element("ul", { class: "plain" }, ...lines), element("p", { class: "row" }, save)];
   }
 
   recordLine({ id, test, listener, made, finished }) {
@@ -149,13 +165,13 @@ class BlindListening {
   }
 
   forget() {
-    if (!confirm("Forget the rounds of this set that this browser keeps? Saved files stay, and later sheets still tell that there were these rounds.")) return;
+    if (!confirm("Forget the rounds that are listed here? Saved files stay, and later sheets still tell that there were these rounds.")) return;
     this.record.forget();
     this.showRecord();
   }
 
   saveButton(sheet, words) {
-    return element("button", { type: "button", class: "save", click: () => saveSheet(sheet) }, words);
+    return element("button", { type: "button", class: "save", click: () => saveSheet(this.record.whole(sheet)) }, words);
   }
 }
 

@@ -10,6 +10,7 @@ const EQUAL_WORDS = {
 const GLIDE_STEPS = { landing_s: 0.05, short_by_cents: 20, in_tune_fraction: 0.1 };
 const GATE_STEPS = { attack_10_90_s: 0.01, peak_loss_db: 1, gap_db: 3 };
 const TOLD = { landing_s: 0.001, short_by_cents: 1, in_tune_fraction: 0.01, attack_10_90_s: 0.001, peak_loss_db: 0.1, gap_db: 0.5 };
+const PRINT = matchMedia("print");
 const MIXED_STEPS = 1000; // one lands and another does not, or one clicks
 
 class Figures {
@@ -122,21 +123,27 @@ class Figures {
     this.show(sample.start_s - before, Math.max(until ?? sample.start_s + 1, sample.start_s + 0.1));
   }
 
-  // At first only the rows with the largest differences are there; the rest comes when it is asked for.
+  // At first only the rows with the largest differences are there; the rest is made when it is asked for, or printed.
   comparedTable({ rows, caption, noun, head, note, first, cell }) {
     if (rows.length === 0) return [];
     const differing = rows.filter((row) => row.score > 0).length;
     const byScore = [...rows].sort((one, other) => other.score - one.score);
-    const made = new Map(rows.map((row) => [row, comparedRow(row, first, cell)]));
+    const made = new Map();
+    const rowOf = (row) => {
+      if (!made.has(row)) made.set(row, comparedRow(row, first, cell));
+      return made.get(row);
+    };
     const body = element("tbody");
     const order = selection([["apart", "largest differences first"], ["time", "in order of time"]]);
     const extent = selection(extents(differing, rows.length, noun));
-    const fill = () => {
-      const count = Number(extent.value);
-      byScore.forEach((row, place) => made.get(row).classList.toggle("folded", place >= count));
-      body.replaceChildren(...(order.value === "time" ? rows : byScore).map((row) => made.get(row)));
+    const fill = (count = Number(extent.value)) => {
+      const shown = new Set(byScore.slice(0, count));
+      body.replaceChildren(...(order.value === "time" ? rows : byScore).filter((row) => shown.has(row)).map(rowOf));
     };
-    for (const choice of [order, extent]) choice.addEventListener("change", fill);
+    for (const choice of [order, extent]) choice.addEventListener("change", () => fill());
+    addEventListener("beforeprint", () => fill(rows.length));
+    addEventListener("afterprint", () => fill());
+    PRINT.addEventListener("change", () => fill(PRINT.matches ? rows.length : undefined));
     fill();
     const said = element("caption", {}, agreement(differing, rows.length, noun));
     const table = element("table", { class: "compared" }, said, this.heads(head, "Apart by"), body);
@@ -197,8 +204,10 @@ function agreement(differing, total, noun) {
 // How many rows may be shown: the choices that are not the same.
 function extents(differing, total, noun) {
   const choices = [
-    [Math.min(FEW_ROWS, differing || FEW_ROWS), `the ${FEW_ROWS} largest differences`],
-    [differing, `the ${counted(differing, noun)} with differences`],
+    ...(differing === 0 ? [[FEW_ROWS, `the first ${FEW_ROWS}`]] : [
+      [Math.min(FEW_ROWS, differing), `the ${FEW_ROWS} largest differences`],
+      [differing, `the ${counted(differing, noun)} with differences`],
+    ]),
     [total, `all ${counted(total, noun)}`],
   ];
   const rising = choices.filter(([count], place) => count > 0 && choices.every(([other], later) => later <= place || other > count));

@@ -14,6 +14,7 @@ class Graph {
   constructor(box, data, sound, tell) {
     this.box = box;
     this.svg = box.querySelector("svg");
+    this.layer = layerOver(box);
     this.data = data;
     this.sound = sound;
     this.tell = tell;
@@ -133,14 +134,15 @@ class Graph {
   draw() {
     if (this.box.clientWidth === 0) return;
     this.measure();
-    this.svg.setAttribute("viewBox", `0 0 ${this.width} ${this.height}`);
+    for (const svg of [this.svg, this.layer]) svg.setAttribute("viewBox", `0 0 ${this.width} ${this.height}`);
     this.loopMark = drawn("g", { class: "loop-mark" });
     this.playMark = drawn("path", { class: "play-mark" });
     this.pointMark = drawn("path", { class: "point-mark" });
     this.svg.replaceChildren(
       this.clips(), this.frame(), this.timeAxis(), this.pitchAxis(),
-      this.pitchLane(), this.gainLane(), this.loopMark, this.pointMark, this.playMark,
+      this.pitchLane(), this.gainLane(),
     );
+    this.layer.replaceChildren(this.loopMark, this.pointMark, this.playMark);
     this.drawLoop();
     this.drawPlay(this.sound.position);
   }
@@ -207,7 +209,7 @@ class Graph {
     const target = stretchOf(chosen.target, start, end);
     const group = drawn("g", { "clip-path": "url(#pitch-lane)" });
     group.append(drawn("path", { d: this.bandPath(target), class: "band" }));
-    group.append(drawn("path", { d: pathOf(target, this.x, this.y), class: "target" }));
+    group.append(drawn("path", { d: pathOf(thinned(target, this.x), this.x, this.y), class: "target" }));
     this.appendLines(group, "pitch", this.y);
     this.appendBadges(group);
     return group;
@@ -232,7 +234,7 @@ class Graph {
     for (const index of [...order, this.sound.chosen]) {
       const points = stretchOf(this.data.candidates[index].curves[name], start, end);
       const kind = index === this.sound.chosen ? "line chosen" : "line";
-      group.append(styled(drawn("path", { d: pathOf(points, this.x, y), class: kind }), index));
+      group.append(styled(drawn("path", { d: pathOf(thinned(points, this.x), this.x, y), class: kind }), index));
     }
   }
 
@@ -265,7 +267,7 @@ class Graph {
     const group = drawn("g", { "clip-path": "url(#gain-lane)" });
     for (const name of ["gate", "control"]) {
       const points = stretchOf(chosen[name], start, end);
-      group.append(drawn("path", { d: pathOf(points, this.x, this.yGain), class: name }));
+      group.append(drawn("path", { d: pathOf(thinned(points, this.x), this.x, this.yGain), class: name }));
     }
     this.appendLines(group, "gain", this.yGain);
     return group;

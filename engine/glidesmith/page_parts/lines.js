@@ -2,6 +2,7 @@
 
 const DASHES = ["", "9 4", "2 3", "12 3 2 3", "6 2 2 2 2 2", "16 4", "1 5"];
 const INKS = 5;
+const FEW_POINTS = 1000;
 
 // Colour and dashes both tell candidates apart: neighbours differ in both, and no two of 35 share both.
 function lineStyle(index) {
@@ -46,6 +47,30 @@ function valueAt(line, time) {
 function stretchOf(line, start, end) {
   const inner = line.slice(firstAfter(line, start), firstAfter(line, end));
   return [[start, valueAt(line, start)], ...inner, [end, valueAt(line, end)]];
+}
+
+// As many points as a picture of time can show: of those in one column of pixels, the lowest and the highest.
+function thinned(points, x) {
+  if (points.length <= FEW_POINTS) return points;
+  const kept = [points[0]];
+  for (let begin = 0, end = 0; begin < points.length; begin = end) {
+    const column = Math.floor(x(points[begin][0]));
+    let [low, high] = [begin, begin];
+    for (; end < points.length && Math.floor(x(points[end][0])) === column; end++) {
+      if (points[end][1] < points[low][1]) low = end;
+      if (points[end][1] > points[high][1]) high = end;
+    }
+    kept.push(points[Math.min(low, high)], points[Math.max(low, high)]);
+  }
+  return [...kept, points.at(-1)];
+}
+
+// What moves while the rest stands still has a layer of its own, so that a picture of many lines is not painted anew
+// with every frame.
+function layerOver(box) {
+  const layer = drawn("svg", { class: "layer", "aria-hidden": "true", focusable: "false" });
+  box.append(layer);
+  return layer;
 }
 
 function pathOf(points, x, y) {

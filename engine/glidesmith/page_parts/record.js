@@ -1,5 +1,6 @@
 // The record of blind rounds: kept by the browser where it allows that, so that leaving the page loses none, and
-// saved as files. What was begun is told in every later sheet, also when the rounds themselves are forgotten.
+// saved as files. What was begun is told in every later sheet, also when the rounds themselves are forgotten, and
+// when the set has got more candidates since.
 
 const SHEET = { kind: "glidesmith listening sheet", version: 1 };
 const BUNDLE = { kind: "glidesmith listening sheets", version: 1 };
@@ -12,25 +13,29 @@ function drawId() {
   return [...crypto.getRandomValues(new Uint8Array(16))].map((byte) => byte.toString(16).padStart(2, "0")).join("");
 }
 
-// What later sheets tell of a round.
+// What later sheets tell of a round. `among` are the candidates' hashes, by which it is known whom it concerns.
 function brief(sheet) {
-  const { id, made, test, listener, finished, pair, labels } = sheet;
+  const { id, set, made, test, listener, finished, pair, labels } = sheet;
   const [answered, planned] = sheet.test === "abx"
     ? [sheet.trials.length, sheet.trials_planned]
     : [sheet.pairs.length, pairCount(sheet.candidates.length)];
-  return { id, made, test, listener, finished, answered, planned, ...(pair ? { pair, labels } : {}) };
+  const among = pair ?? sheet.candidates.map(({ settings_sha256 }) => settings_sha256);
+  return { id, set, made, test, listener, finished, answered, planned, among, ...(pair ? { pair, labels } : {}) };
 }
 
 function pairCount(candidates) {
   return (candidates * (candidates - 1)) / 2;
 }
 
-// Several pages of one set share the browser's storage: it is read anew whenever it is asked or written.
+// Pages of one phrase share the browser's storage: it is read anew whenever it is asked or written. A round of
+// another set concerns this one where at least two of its candidates are here too.
 class Record extends EventTarget {
-  constructor(set) {
+  constructor({ set, phrase, sample_rate, equal, candidates }) {
     super();
     this.set = set;
-    this.key = `glidesmith ${set}`;
+    this.hashes = new Set(candidates.map(({ settings_sha256 }) => settings_sha256));
+    this.key = ["glidesmith", phrase.sha256, sample_rate, equal.mode, equal.interval_semitones, equal.from].join(" ");
+    this.failing = false; // whether the browser refused to keep a round
     this.own = new Map(); // this page's sheets: they last as long as it is open, whatever the storage does
     this.begun = new Map(); // briefs of the same, which forgetting leaves
     this.running = null;
@@ -42,37 +47,53 @@ class Record extends EventTarget {
   }
 
   get sheets() {
+    return this.allSheets().filter((sheet) => this.concerns(brief(sheet)));
+  }
+
+  // Every round of these candidates that was ever begun here, in brief.
+  get rounds() {
+    return this.allRounds().filter((each) => this.concerns(each));
+  }
+
+  concerns({ set, among }) {
+    return set === this.set || among.filter((hash) => this.hashes.has(hash)).length > 1;
+  }
+
+  allSheets() {
     const sheets = new Map(this.stored().map((sheet) => [sheet.id, sheet]));
     for (const [id, sheet] of this.own) sheets.set(id, sheet);
     return inOrder(sheets);
   }
 
-  // Every round that was ever begun here, in brief.
-  get rounds() {
-    const rounds = new Map(this.read("earlier", []).filter((each) => each?.id).map((each) => [each.id, each]));
+  allRounds() {
+    const known = this.read("earlier", []).filter((each) => each?.id && Array.isArray(each.among));
+    const rounds = new Map(known.map((each) => [each.id, each]));
     for (const [id, each] of this.begun) rounds.set(id, each);
-    for (const sheet of this.sheets) rounds.set(sheet.id, brief(sheet));
+    for (const sheet of this.allSheets()) rounds.set(sheet.id, brief(sheet));
     return inOrder(rounds);
   }
 
-  // For a sheet that is about to begin.
-  get earlier() {
-    const { rounds } = this;
-    return { count: rounds.length, rounds: rounds.slice(-MOST_TOLD) };
+  // A sheet as it is saved: with what was begun here before it.
+  whole(sheet) {
+    const before = this.rounds.filter(({ id, made }) => id !== sheet.id && made <= sheet.made);
+    const told = before.slice(-MOST_TOLD).map(({ among, ...each }) => each);
+    return { ...sheet, earlier: { count: before.length, rounds: told } };
   }
 
   keep(sheet) {
     this.own.set(sheet.id, sheet);
     this.begun.set(sheet.id, brief(sheet));
-    this.write("", this.sheets);
-    this.write("earlier", this.rounds);
+    const written = [this.write("", this.allSheets()), this.write("earlier", this.allRounds())];
+    this.failing = !written.every(Boolean);
   }
 
-  // Rounds that run elsewhere stay.
+  // Rounds that run elsewhere stay, and those of other candidates.
   forget() {
-    const kept = this.sheets.filter(({ id }) => this.runs(id));
+    const gone = new Set(this.sheets.map(({ id }) => id).filter((id) => !this.runs(id)));
+    const kept = this.allSheets().filter(({ id }) => !gone.has(id));
     this.own.clear();
     this.write("", kept);
+    this.failing = false;
   }
 
   // Running rounds: while one goes on, no page gives away what it holds.
@@ -104,7 +125,7 @@ class Record extends EventTarget {
   // Storage
 
   stored() {
-    return this.read("", []).filter((sheet) => sheet?.kind === SHEET.kind && sheet.set === this.set && sheet.id);
+    return this.read("", []).filter((sheet) => sheet?.kind === SHEET.kind && sheet.id && (sheet.pair ?? sheet.candidates));
   }
 
   read(name, otherwise) {
@@ -116,11 +137,13 @@ class Record extends EventTarget {
     }
   }
 
+  // Whether it could be written. Without storage the record lasts as long as the page is open.
   write(name, value) {
     try {
       localStorage.setItem(this.place(name), JSON.stringify(value));
+      return true;
     } catch {
-      // Without storage the record lasts as long as the page is open.
+      return false;
     }
   }
 

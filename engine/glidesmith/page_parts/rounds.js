@@ -5,11 +5,11 @@ const [FEWEST_TRIALS, MOST_TRIALS] = [5, 100];
 
 // What both kinds of round share: a sheet that grows, and trials over a fixed excerpt of clips.
 class Round {
-  constructor(data, { listener, excerpt, earlier }) {
+  constructor(data, { listener, excerpt }) {
     this.data = data;
     this.excerpt = excerpt;
     this.done = 0;
-    this.head = { ...SHEET, id: drawId(), set: data.set, listener, made: new Date().toISOString(), excerpt_s: excerpt, earlier };
+    this.head = { ...SHEET, id: drawId(), set: data.set, listener, made: new Date().toISOString(), excerpt_s: excerpt };
   }
 
   begin() {

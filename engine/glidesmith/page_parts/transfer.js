@@ -8,6 +8,7 @@ class Transfer {
   // `pair` names the two curves; pitch is in octaves, the rest from 0 to 1.
   constructor(box, data, graph, pair) {
     this.svg = box.querySelector("svg");
+    this.layer = layerOver(box);
     this.box = box;
     this.data = data;
     this.graph = graph;
@@ -27,7 +28,7 @@ class Transfer {
     this.stepAcross = this.stepOf((most - least) / ((width - this.left) / (hasCents ? 72 : 48)));
     this.x = (value) => this.left + ((value - least) / (most - least)) * (width - this.left - 8);
     this.y = (value) => height - FOOT_MARGIN - ((value - least) / (most - least)) * (height - FOOT_MARGIN - 8);
-    this.svg.setAttribute("viewBox", `0 0 ${width} ${height}`);
+    for (const svg of [this.svg, this.layer]) svg.setAttribute("viewBox", `0 0 ${width} ${height}`);
     this.dot = drawn("circle", { r: 5, class: "dot" });
     const id = `lane-of-${this.output}`;
     const lane = { x: this.left, y: 8, width: width - this.left - 8, height: height - FOOT_MARGIN - 8 };
@@ -35,7 +36,7 @@ class Transfer {
     const chosen = this.graph.sound.chosen;
     const others = this.data.candidates.map((_, index) => index).filter((index) => index !== chosen);
     for (const index of [...others, chosen]) lines.append(this.line(index, start, end));
-    lines.append(this.dot);
+    this.layer.replaceChildren(drawn("g", { "clip-path": `url(#${id})` }, this.dot));
     this.svg.replaceChildren(
       drawn("defs", {}, drawn("clipPath", { id }, drawn("rect", lane))),
       drawn("rect", { ...lane, class: "lane" }), this.axes(least, most, width, height), lines,
