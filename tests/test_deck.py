@@ -64,6 +64,9 @@ PRESETS = {
     "drone": preset(drone={"note": "D2", "level_db": -30.0}),
     "converter": preset(converter={"bits": 8, "span_volts": 10.0}),
     "error": preset(tuning={"scale_error_cents_per_octave": 7.0}),
+    "gate": preset(gain={"rise": 0.0, "fall": 0.0}),
+    "cut": preset(gain={"rise": 0.01, "fall": 0.0}),
+    "stopped": preset(envelope={"attack": 0.02, "decay": 0.1, "sustain": 0.6, "release": 0.0}),
     "pulse": preset(oscillator={"wave": "pulse", "width": 0.3}),
 }  # fmt: skip
 
@@ -245,6 +248,23 @@ class TestSwapping:
         arrives = times[np.flatnonzero(rows["pitch_volts"] == rows["target_volts"])[0]]
         assert 0.2 <= arrives <= 0.2 + 1 / 250
 
+    @pytest.mark.parametrize("glide", ["never", "overlap", "always"])
+    def test_at_the_very_end_of_a_round_the_next_one_has_begun(self, glide):
+        settings = preset(pitch={"glide": glide})
+        deck = started(settings)
+        played(deck, 72_000, 1_000)
+        deck.send(Swap(snapshot_of(settings, LINE, RATE), smooth=True))
+        expected = played(started(settings), 100_000)[72_000:]
+        np.testing.assert_array_equal(played(deck, 28_000), expected)
+        assert deck.state().round == 1
+
+    def test_a_swap_for_the_loop_s_start_sent_at_it_comes_at_once(self):
+        deck = started(PRESETS["rc"])
+        played(deck, 72_000, 1_000)
+        deck.send(Swap(snapshot_of(PRESETS["rc"], LINE, RATE, slot=5), when="loop"))
+        played(deck, 1)
+        assert (deck.state().sounding_slot, deck.state().waiting_slot) == (5, -1)
+
     def test_another_wave_is_blended_in_over_10_ms(self):
         """The two renders of the same pitch, blended by a raised cosine: to float32's rounding."""
         saw, pulse = preset(), preset(oscillator={"wave": "pulse", "width": 0.2})
@@ -266,7 +286,7 @@ class TestSwapping:
         deck.send(Swap(snapshot_of(preset(level_db=-14.0), LINE, RATE, slot=3), when="loop"))
         rest = played(deck, 72_000 - 10_000)
         np.testing.assert_array_equal(rest, played(started(preset(level_db=-20.0)), 72_000)[10_000:])
-        assert deck.state().waiting_slot == 3
+        assert (deck.state().waiting_slot, deck.state().sounding_slot) == (3, 0)
         played(deck, 1)
         assert (deck.state().slot, deck.state().waiting_slot) == (3, -1)
         got = played(deck, 30_000)
@@ -394,6 +414,90 @@ class TestKeys:
         assert rows["gate"][-1] == pytest.approx(0.6)
         assert np.abs(np.diff(rows["pitch_volts"][1:])).max() < 0.02
 
+    @pytest.mark.parametrize("shape", ["linear", "rc"])
+    def test_moving_an_envelope_does_not_strike_a_held_key_again(self, shape):
+        """Sustain from 0.6 to 0.5 and back while a key is held: the control stays between them."""
+        held = PRESETS["envelope"].changed({"envelope.shape": shape})
+        deck = plain_deck()
+        deck.send(Swap(snapshot_of(held, LINE, RATE)))
+        deck.send(Note(0.0, False, 1.0, True))
+        played(deck, 48_000)
+        cursor, _ = deck.rows(0)
+        for sustain in (0.5, 0.6, 0.55, 0.6):
+            after = held.changed({"envelope.sustain": sustain, "envelope.shape": shape})
+            deck.send(Swap(snapshot_of(after, LINE, RATE), smooth=True))
+            played(deck, 2_400)
+        _, rows = deck.rows(cursor)
+        assert rows["control"].min() > 0.49
+        assert rows["control"].max() < 0.61
+        deck.send(Release())
+        played(deck, 48_000)
+        assert deck.rows(0)[1]["control"][-1] == 0.0
+
+    def test_a_pitch_that_waits_for_a_tick_is_carried_into_another_tuning(self):
+        converter = {"bits": 16, "span_volts": 20.0, "rate_hz": 10.0}
+        low, high = (preset(converter=converter, tuning={"zero_volts": name}) for name in ("C4", "C5"))
+        deck = plain_deck()
+        deck.send(Swap(snapshot_of(low, LINE, RATE)))
+        deck.send(Note(0.0, False, 1.0, True, RATE / 10))
+        played(deck, 6_000)
+        deck.send(Note(0.5, False, 1.0, False, RATE / 10))
+        played(deck, 500)
+        deck.send(Swap(snapshot_of(high, LINE, RATE), keyed_volts=-0.5))
+        played(deck, 2_000)
+        assert deck.rows(0)[1]["pitch_volts"][-1] == pytest.approx(-1.0)
+        played(deck, 48_000)
+        assert deck.rows(0)[1]["pitch_volts"][-1] == pytest.approx(-0.5)
+
+
+class TestPanic:
+    def test_it_waits_for_nothing(self):
+        deck = started(PRESETS["rc"])
+        played(deck, 30_000)
+        for _ in range(20):
+            deck.send(Play())
+        deck.send(Level(-40.0))
+        number = deck.send(Panic())
+        got = played(deck, 3_000, 64)
+        assert not got[96:].any()
+        stamps = dict(deck.taken())
+        assert stamps[number] == 30_000
+        assert deck.state().mode == "stopped"
+        played(deck, 48_000)
+        assert deck.state().level_db == pytest.approx(-40.0)
+
+    def test_what_is_sent_after_it_is_played_after_it(self):
+        deck = started(PRESETS["rc"])
+        played(deck, 30_000)
+        deck.send(Panic())
+        deck.send(Play())
+        assert played(deck, 3_000, 64)[200:].any()
+        assert deck.state().mode == "phrase"
+
+    @pytest.mark.parametrize("gains_db", [(-60.0, -3.0), (-3.0, -60.0)])
+    def test_in_the_midst_of_a_fade_it_makes_nothing_louder_and_no_click(self, gains_db):
+        """Between two samples no more than the saw's own edge at the gain that is heard."""
+        loud = [preset(level_db=max(gain, -60.0), oscillator={"wave": "sine"}) for gain in gains_db]
+        deck = started(loud[0])
+        played(deck, 30_000)
+        deck.send(Swap(snapshot_of(loud[1], LINE, RATE)))
+        before = played(deck, 240 if gains_db[0] > gains_db[1] else 8, 8)
+        deck.send(Panic())
+        got = np.concatenate([before, played(deck, 300, 4)])
+        assert not got[before.size + 96 :].any()
+        steepest = 0.71 * 2 * np.pi * 440 / RATE
+        assert np.abs(np.diff(got)).max() < 1.3 * steepest
+        if gains_db[0] < gains_db[1]:
+            assert np.abs(got).max() < 0.05
+
+    def test_just_after_a_stop(self):
+        deck = started(PRESETS["rc"])
+        played(deck, 30_000)
+        deck.send(Stop())
+        played(deck, 48)
+        deck.send(Panic())
+        assert not played(deck, 1_000)[96:].any()
+
 
 class TestListening:
     def test_starts_30_db_down_and_fades_in(self):
@@ -449,6 +553,31 @@ class TestListening:
         chain = played(started(PRESETS["rc"]), 32_000)[30_000:]
         heard = np.abs(chain) > 0.01
         assert np.all(20 * np.log10(got[heard] / chain[heard])[np.flatnonzero(heard) > FADE] < -11.99)
+
+    def test_a_smooth_swap_to_a_quieter_slot_does_not_jump(self):
+        """A falling gain is down 40 dB in 20 ms: 0.0417 dB a sample."""
+        deck = started(PRESETS["rc"])
+        played(deck, 30_000)
+        deck.send(Swap(snapshot_of(PRESETS["rc"], LINE, RATE, gain_db=-6.0), smooth=True))
+        got = played(deck, 2_000)
+        chain = played(started(PRESETS["rc"]), 32_000)[30_000:]
+        heard = np.abs(chain) > 0.01
+        falls_db = np.diff(20 * np.log10(got[heard] / chain[heard])) / np.diff(np.flatnonzero(heard))
+        assert falls_db.min() > -0.0418
+        assert got[-1] == pytest.approx(chain[-1] * 10 ** (-6 / 20), rel=1e-6)
+
+    def test_level_and_match_raised_together_rise_by_6_db_in_50_ms(self):
+        deck = started(PRESETS["rc"], gain_db=-20.0, deck=plain_deck(level_db=-20.0))
+        played(deck, 20_000)
+        deck.send(Level(0.0))
+        deck.send(Match(0, 0.0))
+        got = played(deck, 40_000)
+        chain = played(started(PRESETS["rc"]), 60_000)[20_000:]
+        heard = np.abs(chain) > 0.01
+        rises_db = 20 * np.log10(got[heard] / chain[heard])
+        allowed = -40.0 + 120.0 * (np.flatnonzero(heard) + 1) / RATE
+        assert np.all(rises_db <= allowed + 0.001)
+        assert rises_db[-1] == pytest.approx(0.0, abs=1e-5)
 
     def test_a_match_reaches_the_slot_that_it_names(self):
         deck = started(PRESETS["rc"], slot=2)

@@ -87,7 +87,11 @@ class DeckFullError(GlidesmithError):
 
 @dataclass(frozen=True, slots=True)
 class DeckState:
-    """Where the deck is. ``mode`` is ``stopped``, ``phrase`` or ``keys``; ``slot`` -1 where there is none."""
+    """Where the deck is. ``mode`` is ``stopped``, ``phrase`` or ``keys``.
+
+    ``slot`` is the one chosen last, ``waiting_slot`` the one that comes with the next round,
+    ``sounding_slot`` the one that plays; -1 where there is none.
+    """
 
     sample: int
     mode: str
@@ -97,6 +101,7 @@ class DeckState:
     waiting_slot: int
     level_db: float
     gain_reduction_db: float
+    sounding_slot: int
 
 
 class Deck:
@@ -207,8 +212,11 @@ class Deck:
 
     def state(self) -> DeckState:
         """Where the deck was at the last block's end."""
-        newest = int(read_word(self.parts.words, STATES)) - 1
-        row = self.parts.states[max(newest, 0) % _STATES_HELD]
+        while True:
+            newest = int(read_word(self.parts.words, STATES)) - 1
+            row = self.parts.states[max(newest, 0) % _STATES_HELD].copy()
+            if int(read_word(self.parts.words, STATES)) - newest < _STATES_HELD:
+                break  # else the ring went round meanwhile, and the row may be half another
         return DeckState(
             int(row["sample"]),
             _MODES[int(row["mode"])],
@@ -218,6 +226,7 @@ class Deck:
             int(row["waiting_slot"]) if newest >= 0 else -1,
             20.0 * math.log10(max(float(row["level"]), 1e-5)),
             -20.0 * math.log10(max(float(row["limiter"]), 1e-5)) if newest >= 0 else 0.0,
+            int(row["sounding_slot"]) if newest >= 0 else -1,
         )
 
     def _record(self, command: "Command", number: int) -> "NDArray[Any]":

@@ -2,10 +2,10 @@
 
     chain ─► slot gain ─► level ─► limiter ─► device
 
-Ears come first: a gain that rises does so by at most 6 dB in 50 ms, whatever is switched; one that falls is
-down 40 dB in 20 ms. The limiter looks at each sample and lets none over the ceiling; its gain comes back at
-the same 6 dB in 50 ms. With every gain at exactly 1 and a signal under the ceiling not one bit changes: it
-doesn't look ahead, so it delays nothing.
+Ears come first: whatever is switched, the gains together rise by at most 6 dB in 50 ms (the level before the
+slot's gain, and that before the limiter's); one that falls is down 40 dB in 20 ms. The limiter looks at each
+sample and lets none over the ceiling. With every gain at exactly 1 and a signal under the ceiling not one bit
+changes: it doesn't look ahead, so it delays nothing.
 """
 
 import math
@@ -102,6 +102,24 @@ def _largest_size(block: Any) -> float:
     return float(largest)
 
 
+@inlined
+def listen_to(stage: Any, sample: Any, rising: bool) -> Any:
+    """One sample at the listening level and under the ceiling.
+
+    While another gain is ``rising`` the limiter's doesn't, so that all of them together keep to the rate.
+    """
+    rising = rising or stage.level < stage.level_goal
+    stage.level = approach(stage.level, stage.level_goal, stage.rise, stage.fall)
+    if not rising:
+        stage.limiter = min(stage.limiter * stage.rise, 1.0)
+    louder = sample * stage.level
+    size = abs(louder) * stage.limiter
+    if size > stage.ceiling:
+        stage.limiter *= stage.ceiling / size
+        stage.least = min(stage.least, stage.limiter)
+    return np.float32(min(max(louder * stage.limiter, -stage.ceiling), stage.ceiling))
+
+
 @kernel
 def listen(stage: Any, block: Any) -> None:
     """Bring ``block`` (n,) float32 to the listening level and under the ceiling, in place."""
@@ -112,12 +130,4 @@ def listen(stage: Any, block: Any) -> None:
                 block[i] = np.float32(block[i] * stage.level)
         return
     for i in range(block.size):
-        stage.level = approach(stage.level, stage.level_goal, stage.rise, stage.fall)
-        stage.limiter = min(stage.limiter * stage.rise, 1.0)
-        sample = block[i] * stage.level
-        size = abs(sample) * stage.limiter
-        if size > stage.ceiling:
-            stage.limiter *= stage.ceiling / size
-            stage.least = min(stage.least, stage.limiter)
-        held = min(max(sample * stage.limiter, -stage.ceiling), stage.ceiling)
-        block[i] = np.float32(held)
+        block[i] = listen_to(stage, block[i], False)

@@ -143,7 +143,7 @@ def snapshot_of(
     if loop:
         settings["length"] = ENDLESS
         length = math.ceil(loop_length_s(moved) * sample_rate)
-    gates = _within(program.gate_events, length)
+    gates = _open_over_the_seam(_within(program.gate_events, length), length)
     return Snapshot(
         program,
         settings,
@@ -185,6 +185,16 @@ def _later_events(program: Program) -> "NDArray[Any]":
 def _jumps_again(program: Program) -> bool:
     """Whether a round's first note jumps: no key is held where it begins, so only ``always`` glides to it."""
     return program.preset.pitch.glide != "always"
+
+
+def _open_over_the_seam(gates: "NDArray[Any]", length: int) -> "NDArray[Any]":
+    """Gate events without the one that closes where a round ends if the next begins with a note.
+
+    A key that goes down as another goes up leaves no gap in a phrase either.
+    """
+    closes = gates[-1]["level"] == 0.0 and gates[-1]["sample"] == length
+    opens = gates[0]["sample"] == 0 and gates[0]["fraction"] == 0.0
+    return gates[:-1].copy() if length and closes and opens and gates.size > 1 else gates
 
 
 def _within(events: "NDArray[Any]", length: int) -> "NDArray[Any]":

@@ -196,30 +196,45 @@ def target_from(events: Any, index: int, first: float) -> float:
 
 @kernel
 def turn(
-    before: Any, settings: Any, voice: Any, events: Any, hand: Any, position: int, first_volts: float
+    before: Any,
+    settings: Any,
+    voice: Any,
+    events: Any,
+    hand: Any,
+    position: int,
+    first_volts: float,
+    first_level: float,
 ) -> None:
     """Go over from settings ``before`` to ``settings`` and ``events``, at sample ``position`` of these.
 
-    `catch_up` comes first, with what was played before. ``first_volts`` is where the pitch is going before
-    the first event of ``events``; ``hand`` is a gate event's record to work with.
+    `catch_up` comes first, with what was played before. ``first_volts`` and ``first_level`` are where pitch
+    and gate are going before the first of ``events``; ``hand`` is a gate event's record to work with.
     """
     move_by(voice, position - voice.sample)
     voice.pitch_event = first_from(events.pitch, position)
     voice.gate_event = first_from(events.gate, position)
-    level = events.gate[voice.gate_event - 1].level if voice.gate_event > 0 else 0.0
+    level = events.gate[voice.gate_event - 1].level if voice.gate_event > 0 else first_level
     _turn_pitch(before, settings, voice, target_from(events.pitch, voice.pitch_event, first_volts))
     _turn_gain(before, settings, voice, hand, level)
     voice.walk.event = voice.gate_event
 
 
 @kernel
-def turn_keyed(before: Any, settings: Any, voice: Any, hand: Any, volts: float) -> None:
+def turn_keyed(before: Any, settings: Any, voice: Any, pitch_hand: Any, hand: Any, volts: float) -> None:
     """The same while keys are played: the key held goes on, at the ``volts`` that the new settings give it.
 
-    NaN where no key was pressed yet.
+    NaN where no key was pressed yet. A pitch that waits for a converter's tick goes on waiting, at its new
+    volts; ``pitch_hand`` is what was played last.
     """
+    if before.enveloped:
+        voice.gate_event = voice.walk.event
     level = open_level(before, voice)
-    _turn_pitch(before, settings, voice, voice.pitch.target if math.isnan(volts) else volts)
+    waits = voice.pitch_event == 0
+    if waits and not math.isnan(volts):
+        pitch_hand.volts = volts
+    held = (voice.pitch.target * before.octaves_per_volt + before.octaves_at_zero) - settings.octaves_at_zero
+    same = voice.pitch.target if _same_tuning(before, settings) else held / settings.octaves_per_volt
+    _turn_pitch(before, settings, voice, same if waits or math.isnan(volts) else volts)
     _turn_gain(before, settings, voice, hand, level)
     voice.walk.event = voice.gate_event
 

@@ -21,7 +21,7 @@ import numpy as np
 from glidesmith.compiled import inlined, kernel
 from glidesmith.envelope import GATE_EVENT
 from glidesmith.exchange import load_acquire, store_release, view_int64, view_of
-from glidesmith.listening import approach, hush, listen
+from glidesmith.listening import approach, hush, listen, listen_to
 from glidesmith.oscillator import LEVEL
 from glidesmith.program import PITCH_EVENT, SETTINGS
 from glidesmith.steering import begin_round, catch_up, same_place, turn, turn_keyed
@@ -117,12 +117,13 @@ DECK = np.dtype(
         ("row_every", np.int64),
         ("long_fade", np.int64),
         ("short_fade", np.int64),
+        ("panic_left", np.int64),
         ("hushed", np.int64),
     ],
     align=True,
 )
 """The transport's own state. ``cued``: the place that `PLAY` plays; ``waiting``: the one that comes with the
-next round; ``hushed``: the next start fades in."""
+next round; ``panic_left``: samples until a panic has silenced all; ``hushed``: the next start fades in."""
 
 ROW = np.dtype(
     [
@@ -150,6 +151,7 @@ STATE = np.dtype(
         ("round", np.int64),
         ("slot", np.int64),
         ("waiting_slot", np.int64),
+        ("sounding_slot", np.int64),
         ("level", np.float64),
         ("limiter", np.float64),
     ],
@@ -250,14 +252,18 @@ def _go_over(parts: Any, place_index: int, smooth: bool, keyed_volts: float) -> 
         _begin_fade(parts, deck.long_fade)
     channel.place = place_index
     channel.gain_goal = place.gain
-    channel.gain = min(channel.gain, place.gain)
+    if not smooth:
+        channel.gain = min(channel.gain, place.gain)
     hand = parts.gate_hands[2]
     if channel.keyed:
-        turn_keyed(before.settings, place.settings, channel.voice, hand, keyed_volts)
+        turn_keyed(before.settings, place.settings, channel.voice, parts.pitch_hands[0], hand, keyed_volts)
         return
     position = same_place(channel.voice.sample, before.unit_samples, place.unit_samples, place.loop_samples)
-    first_volts = place.settings.first_volts if channel.round == 0 else place.last_volts
-    turn(before.settings, place.settings, channel.voice, _events_of(parts, 0), hand, position, first_volts)
+    events = _events_of(parts, 0)
+    volts, level = place.settings.first_volts, 0.0
+    if channel.round > 0:
+        volts, level = place.last_volts, events.gate[events.gate.size - 1].level
+    turn(before.settings, place.settings, channel.voice, events, hand, position, volts, level)
 
 
 @kernel
@@ -269,7 +275,8 @@ def _swap(parts: Any, command: Any) -> None:
     if channel.place == SILENT:
         return
     loops = parts.places[channel.place].loop_samples > 0 and not channel.keyed
-    if command.at_loop and loops:
+    begins = channel.voice.sample == 0 and channel.round > 0
+    if command.at_loop and loops and not begins:
         deck.waiting = command.place
         deck.waiting_smooth = command.smooth
         return
@@ -298,13 +305,39 @@ def _start(parts: Any, mode: int) -> None:
 
 
 @kernel
-def _stop(parts: Any, fade: int) -> None:
+def _stop(parts: Any) -> None:
     deck = parts.deck[0]
-    _begin_fade(parts, fade)
+    _begin_fade(parts, deck.long_fade)
     parts.channels[0].place = SILENT
     deck.mode = STOPPED
     deck.waiting = SILENT
     deck.waiting_due = 0
+
+
+@kernel
+def _panic(parts: Any) -> None:
+    """Begin to fade all that is heard, whatever is going on."""
+    deck = parts.deck[0]
+    deck.mode = STOPPED
+    deck.hushed = 1
+    if parts.channels[0].place != SILENT or deck.fade_left > 0:
+        deck.panic_left = deck.short_fade
+
+
+@kernel
+def _fade_in_panic(parts: Any, out: Any) -> None:
+    """Fade the finished mix; at the end of it nothing plays any more."""
+    deck, channels = parts.deck[0], parts.channels
+    for i in range(out.size):
+        left = float(deck.panic_left - i) / float(deck.short_fade)
+        out[i] = np.float32(out[i] * (0.5 - 0.5 * np.cos(math.pi * left)))
+    deck.panic_left -= out.size
+    if deck.panic_left == 0:
+        channels[0].place = SILENT
+        channels[1].place = SILENT
+        deck.fade_left = 0
+        deck.waiting = SILENT
+        deck.waiting_due = 0
 
 
 @kernel
@@ -387,17 +420,14 @@ def _fades(kind: int) -> bool:
 
 @kernel
 def _obey(parts: Any, command: Any) -> None:
-    deck = parts.deck[0]
     if command.kind == SWAP:
         _swap(parts, command)
     elif command.kind == PLAY:
         _start(parts, PHRASE)
     elif command.kind == STOP:
-        _stop(parts, deck.long_fade)
+        _stop(parts)
     elif command.kind == PANIC:
-        if parts.channels[0].place != SILENT:
-            _stop(parts, deck.short_fade)
-        deck.hushed = 1
+        _panic(parts)
     elif command.kind == NOTE:
         _note(parts, command)
     elif command.kind == RELEASE:
@@ -409,15 +439,39 @@ def _obey(parts: Any, command: Any) -> None:
 
 
 @kernel
+def _overrule(parts: Any, command: Any) -> None:
+    """Take a command that a panic after it makes needless: only what it settles for later is kept."""
+    if command.kind == SWAP:
+        parts.deck[0].cued = command.place
+    elif command.kind == LEVEL_CHANGE:
+        parts.listening[0].level_goal = command.level
+    elif command.kind == MATCH:
+        _match(parts, command.place, command.level)
+
+
+@kernel
+def _last_panic(parts: Any, sent: int) -> int:
+    """The number of the last panic among the commands not taken yet; -1 where there is none."""
+    for number in range(sent - 1, parts.deck[0].taken - 1, -1):
+        if parts.commands[number & (parts.commands.size - 1)].kind == PANIC:
+            return number
+    return -1
+
+
+@kernel
 def _take_commands(parts: Any) -> None:
-    """Obey what was sent, as far as no fade is in the way, and note when."""
+    """Obey what was sent, as far as no fade is in the way, and note when; a panic waits for nothing."""
     deck = parts.deck[0]
     sent = load_acquire(parts.words, SENT)
+    panic = _last_panic(parts, sent)
     while deck.taken < sent:
         command = parts.commands[deck.taken & (parts.commands.size - 1)]
-        if deck.fade_left > 0 and _fades(command.kind):
+        if deck.taken < panic:
+            _overrule(parts, command)
+        elif command.kind != PANIC and (deck.panic_left > 0 or (deck.fade_left > 0 and _fades(command.kind))):
             return
-        _obey(parts, command)
+        else:
+            _obey(parts, command)
         parts.stamps[deck.taken & (parts.stamps.size - 1)] = deck.sample
         deck.taken += 1
 
@@ -432,31 +486,65 @@ def _pass_borders(parts: Any) -> None:
         deck.waiting_due = 1
     if parts.channels[0].place == SILENT:
         deck.mode = STOPPED
-    if deck.waiting_due and deck.fade_left == 0:
+    if deck.waiting_due and deck.fade_left == 0 and deck.panic_left == 0:
         waiting = deck.waiting
         deck.waiting = SILENT
         deck.waiting_due = 0
         _go_over(parts, waiting, deck.waiting_smooth != 0, np.nan)
 
 
-@kernel
-def _blend(parts: Any, out: Any) -> None:
-    """Cross-fade from the back channel's samples to the front one's, in ``out``."""
-    deck, back = parts.deck[0], parts.back
-    for i in range(out.size):
-        done = float(deck.fade_samples - deck.fade_left + i) / float(deck.fade_samples)
-        weight = 0.5 - 0.5 * np.cos(math.pi * done)
-        out[i] = np.float32(out[i] * weight + back[i] * (1.0 - weight))
+@inlined
+def _blended(deck: Any, i: int, front: Any, back: Any) -> Any:
+    """The cross-fade from the back channel's sample to the front one's, ``i`` samples into a segment."""
+    done = float(deck.fade_samples - deck.fade_left + i) / float(deck.fade_samples)
+    weight = 0.5 - 0.5 * np.cos(math.pi * done)
+    return np.float32(front * weight + back * (1.0 - weight))
 
 
 @kernel
-def _apply_slot_gain(parts: Any, which: int, out: Any) -> None:
-    channel, stage = parts.channels[which], parts.listening[0]
-    if channel.gain == 1.0 and channel.gain_goal == 1.0:
-        return
+def _scale(gain: float, out: Any) -> None:
+    if gain != 1.0:
+        for i in range(out.size):
+            out[i] = np.float32(out[i] * gain)
+
+
+@kernel
+def _mix_steadily(parts: Any, out: Any) -> None:
+    """From both channels' samples to what is heard, while every gain but the limiter's stands still."""
+    deck, channels, back = parts.deck[0], parts.channels, parts.back
+    _scale(channels[0].gain, out)
+    if deck.fade_left > 0:
+        _scale(channels[1].gain, back[: out.size])
+        for i in range(out.size):
+            out[i] = _blended(deck, i, out[i], back[i])
+    listen(parts.listening[0], out)
+
+
+@kernel
+def _mix_in_motion(parts: Any, out: Any) -> None:
+    """The same while gains move: sample by sample, since one that rises keeps the others from it."""
+    deck, stage, back = parts.deck[0], parts.listening[0], parts.back
+    front, behind = parts.channels[0], parts.channels[1]
     for i in range(out.size):
-        channel.gain = approach(channel.gain, channel.gain_goal, stage.rise, stage.fall)
-        out[i] = np.float32(out[i] * channel.gain)
+        rise = 1.0 if stage.level < stage.level_goal else stage.rise
+        rising = front.gain < front.gain_goal
+        front.gain = approach(front.gain, front.gain_goal, rise, stage.fall)
+        sample = np.float32(out[i] * front.gain)
+        if deck.fade_left > 0:
+            rising = rising or behind.gain < behind.gain_goal
+            behind.gain = approach(behind.gain, behind.gain_goal, rise, stage.fall)
+            sample = _blended(deck, i, sample, np.float32(back[i] * behind.gain))
+        out[i] = listen_to(stage, sample, rising)
+
+
+@kernel
+def _mix(parts: Any, out: Any) -> None:
+    deck, stage, channels = parts.deck[0], parts.listening[0], parts.channels
+    steady = stage.level == stage.level_goal and channels[0].gain == channels[0].gain_goal
+    if steady and (deck.fade_left == 0 or channels[1].gain == channels[1].gain_goal):
+        _mix_steadily(parts, out)
+    else:
+        _mix_in_motion(parts, out)
 
 
 @kernel
@@ -487,17 +575,15 @@ def _play_segment(parts: Any, out: Any) -> None:
         parts.rows[deck.rows & (parts.rows.size - 1)].position = channel.voice.sample
     target_volts = channel.voice.pitch.target
     if deck.fade_left > 0:
-        back = parts.back[: out.size]
-        _play_channel(parts, 1, back)
-        _apply_slot_gain(parts, 1, back)
+        _play_channel(parts, 1, parts.back[: out.size])
     _play_channel(parts, 0, out)
     if marks_row:
         _note_row(parts, target_volts)
-    _apply_slot_gain(parts, 0, out)
+    _mix(parts, out)
     if deck.fade_left > 0:
-        _blend(parts, out)
         deck.fade_left -= out.size
-    listen(parts.listening[0], out)
+    if deck.panic_left > 0:
+        _fade_in_panic(parts, out)
 
 
 @inlined
@@ -508,6 +594,8 @@ def _segment(parts: Any, left: int) -> int:
     count = min(count, max(_until_end(parts, 0), 1))
     if deck.fade_left > 0:
         count = min(min(count, deck.fade_left), max(_until_end(parts, 1), 1))
+    if deck.panic_left > 0:
+        count = min(count, deck.panic_left)
     return count
 
 
@@ -539,6 +627,7 @@ def _publish(parts: Any) -> None:
     state.round = channels[0].round
     state.slot = parts.places[deck.cued].slot if deck.cued != SILENT else -1
     state.waiting_slot = parts.places[deck.waiting].slot if deck.waiting != SILENT else -1
+    state.sounding_slot = parts.places[place].slot if place != SILENT else -1
     state.level = parts.listening[0].level
     state.limiter = parts.listening[0].least
     parts.listening[0].least = parts.listening[0].limiter
@@ -557,7 +646,9 @@ def _publish(parts: Any) -> None:
 def play_deck(parts: Any, out: Any) -> None:
     """Make the next ``out.size`` samples, float32, of what is heard."""
     deck = parts.deck[0]
-    _take_commands(parts)
+    if out.size:
+        _pass_borders(parts)
+        _take_commands(parts)
     at: Any = np.int64(0)
     while at < out.size:
         _pass_borders(parts)

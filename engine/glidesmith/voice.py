@@ -88,6 +88,7 @@ def elapsed_s(settings: Any, since: int, fraction: float, sample: int, beyond: f
 
 @inlined
 def next_sample(events: Any, index: int) -> int:
+    """The sample of event ``index``, or one that never comes."""
     return events[index].sample if index < events.size else _NEVER
 
 
