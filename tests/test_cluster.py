@@ -290,23 +290,51 @@ def test_where_no_worker_fits_one_line_says_why(tmp_path):
 
 
 def test_an_absent_scheduler_is_told_in_one_line(tmp_path, monkeypatch, capfd):
-    """Neither where nobody listens nor where somebody never answers is ten seconds waited."""
-    assert scheduler.CONNECT_S + 0.5 < 10.0
+    """Where somebody never answers no ten seconds are waited, and where nobody listens none at all."""
+    assert scheduler.CONNECT_S + scheduler._GRACE_S < scheduler.ANSWER_S + scheduler._GRACE_S < 10.0
     monkeypatch.setattr(scheduler, "CONNECT_S", 0.5)
     with socket.socket() as silent, socket.socket() as closed:
         silent.bind(("127.0.0.1", 0))
         silent.listen()
         closed.bind(("127.0.0.1", 0))
-        for listener in (silent, closed):
+        for listener, said in (
+            (silent, "no scheduler answers there in time"),
+            (closed, "no scheduler is there: the connection is refused"),
+        ):
             address = f"tcp://127.0.0.1:{listener.getsockname()[1]}"
             with pytest.raises(ClusterError) as raised:
                 list(produce_on_cluster(make_orders(1), str(tmp_path), address))
             assert raised.value.lines == (
-                f"cluster {address}: no scheduler answers there within 0.5 s; check the address, or start "
-                "one with `dask scheduler`",
+                f"cluster {address}: {said}; check the address, or start one with `dask scheduler`",
             )
     assert list(tmp_path.iterdir()) == []
     assert capfd.readouterr() == ("", "")
+
+
+def test_whoever_is_refused_hears_it_before_dask_is_loaded(tmp_path):
+    code = (
+        "import sys; from glidesmith.cluster import produce_on_cluster; from glidesmith.errors import *\n"
+        f"try: list(produce_on_cluster([None], {str(tmp_path)!r}, 'tcp://127.0.0.1:1'))\n"
+        "except ClusterError as problem: print(problem, 'distributed' in sys.modules)"
+    )
+    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+    assert "the connection is refused" in done.stdout
+    assert done.stdout.endswith("False\n")
+
+
+def test_the_time_to_answer_begins_with_the_process(monkeypatch):
+    """On Linux its age is known; a process that is old already was not waited for."""
+    for age_s, left_s in ((4.0, scheduler.ANSWER_S - 4.0), (60.0, scheduler.ANSWER_S)):
+        monkeypatch.setattr(scheduler, "_process_age_s", lambda age_s=age_s: age_s)
+        monkeypatch.setattr(scheduler.time, "monotonic", lambda: 100.0)
+        assert scheduler.deadline() == 100.0 + left_s
+
+
+def test_what_stands_before_an_at_sign_is_not_told(tmp_path):
+    with pytest.raises(SettingError) as raised:
+        list(produce_on_cluster(make_orders(1), str(tmp_path), "tcp://user:s3/cret@host:1"))
+    assert "s3" not in str(raised.value)
+    assert "tcp://host:1" in str(raised.value)
 
 
 def test_a_scheduler_without_workers_is_told(tmp_path, monkeypatch):

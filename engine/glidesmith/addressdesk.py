@@ -14,13 +14,14 @@ import sys
 from pathlib import Path
 
 from glidesmith.bank import Stamp, folder_made
-from glidesmith.desk import Desk
+from glidesmith.currency import file_digest
+from glidesmith.desk import HEAD_BYTES, Desk, in_the_way, is_made_with
 from glidesmith.errors import OutputError
-from glidesmith.manifest import MANIFEST_FILE, Record
+from glidesmith.manifest import MANIFEST_FILE, Record, check_head
 from glidesmith.outcome import SUMMARY_FILE
-from glidesmith.partfile import output_error
+from glidesmith.partfile import begins_as_ours, output_error
 from glidesmith.places import RemotePlace
-from glidesmith.text import write_whole
+from glidesmith.text import printable, write_whole
 
 _NO_TIME = 0
 
@@ -62,27 +63,58 @@ class AddressDesk(Desk):
     def look(self) -> None:
         """See what is there, and read the books. Raises OutputError."""
         self._sizes = self._remote.sizes()
-        self._take_up_manifest()
+        was_taken_up = self._take_up_manifest()
         super().look()
+        if was_taken_up:  # what a run here that was cut short has made may have been replaced since
+            for item in self.journal.lines:
+                self.journal.outputs.pop(item, None)
 
-    def _take_up_manifest(self) -> None:
-        """Take the manifest of the address where the one here is another: somebody else was at work there."""
-        here, there = self.folder / MANIFEST_FILE, self._sizes.get(MANIFEST_FILE)
-        known = here.stat().st_size if here.exists() else None
-        if there is None or there == known or not self.folder.is_dir():
-            return
+    def _take_up_manifest(self) -> bool:
+        """Take the manifest of the address where the one here is another: somebody else was at work there.
+
+        Nothing is kept of a file that is no manifest. Raises OutputError.
+        """
+        if MANIFEST_FILE not in self._sizes or not self.folder.is_dir():
+            return False
+        self.require_own_names()
+        here = self.folder / MANIFEST_FILE
+        same_size = here.exists() and self._sizes[MANIFEST_FILE] == here.stat().st_size
+        if same_size and self._remote.digest(MANIFEST_FILE) == file_digest(here):
+            return False
         content = self._remote.read(MANIFEST_FILE)
-        if content is not None:
-            write_whole(here, content)
+        if content is None:
+            return False
+        check_head(content.partition(b"\n")[0], self.called(MANIFEST_FILE))
+        write_whole(here, content)
+        return True
 
-    def require_writable(self, item: str) -> None:
-        """Raise OutputError where something that is not the batch's own stands in an output's place."""
-        is_own = item in self.records or item in self.journal.begun or item in self.journal.outputs
-        if not is_own and item in self._sizes:
-            raise OutputError(
-                f"{self.address}/{item}: is there already, and no manifest lists it; move it elsewhere, or "
-                "choose another place or name"
-            )
+    def _is_summary_foreign(self, is_new: bool) -> bool:
+        """Whether somebody else's file stands in the summary's place; ``is_new``: no batch is known here."""
+        if SUMMARY_FILE not in self._sizes or MANIFEST_FILE in self._sizes:
+            return False
+        return is_new or not begins_as_ours(self._remote.head(SUMMARY_FILE, HEAD_BYTES))
+
+    def called(self, name: str) -> str:
+        """What people call a file of the batch."""
+        return printable(f"{self.address}/{name}")
+
+    def key(self, item: str) -> str:
+        """What two names have in common that stand for one file: they are told apart."""
+        return item
+
+    def require_writable(self, item: str, settings_sha256: str) -> None:
+        """Raise OutputError where something that is not the batch's own stands in an output's place.
+
+        Where there is no manifest, what the books here say may be of files that were replaced since.
+        """
+        line = self.records.line(item)
+        if item not in self._sizes or (line is not None and MANIFEST_FILE in self._sizes):
+            return
+        head = self._remote.head(item, HEAD_BYTES)
+        is_own = is_made_with(head, settings_sha256)
+        is_own |= item in self.journal.begun and begins_as_ours(head)
+        if not is_own and (line is None or self.digest(item) != line.file_sha256):
+            raise in_the_way(self.called(item), head)
 
     def place(self) -> RemotePlace:
         """Where outputs are written to."""
@@ -105,6 +137,15 @@ class AddressDesk(Desk):
     def has(self, name: str) -> bool:
         """Whether the manifest or the summary is here and there."""
         return super().has(name) and name in self._sizes
+
+    def has_summary(self, told: str, verify: bool) -> bool:
+        """Whether the summary is as it was written, here and there."""
+        known = self.journal.summary
+        if known is None or self._sizes.get(SUMMARY_FILE) != known.stamp[0]:
+            return False
+        if verify and self.digest(SUMMARY_FILE) != known.file_sha256:
+            return False
+        return super().has_summary(told, verify)
 
     def publish(self) -> None:
         """Bring manifest and summary to the address. Raises OutputError."""

@@ -7,8 +7,9 @@ real folder once, so that links that go round in a circle come to an end.
 import os
 import re
 import stat
-from collections.abc import Iterable, Iterator, Sequence
-from dataclasses import dataclass
+import unicodedata
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass, replace
 from fnmatch import translate
 from itertools import product
 from math import prod
@@ -71,7 +72,7 @@ class Choice:
     """
 
     def __init__(self, include: Iterable[str] = (), exclude: Iterable[str] = ()) -> None:
-        """Raises SettingError for an empty pattern."""
+        """One pattern may be given as it is. Raises SettingError for an empty one, or what is no text."""
         self._include, self._exclude = _pattern("include", include), _pattern("exclude", exclude)
 
     def takes(self, name: str) -> bool:
@@ -85,10 +86,19 @@ class Choice:
 
 
 def _pattern(option: str, texts: Iterable[str]) -> "re.Pattern[str] | None":
-    patterns = [text.strip("/").removeprefix("./") for text in texts]
+    patterns = [text.strip("/").removeprefix("./") for text in as_texts(option, texts)]
     if not all(patterns):
         raise SettingError(f'{option}: a pattern is empty; give one, as "leads/*" or "draft-*.toml"')
     return re.compile("|".join(translate(pattern) for pattern in patterns)) if patterns else None
+
+
+def as_texts(what: str, given: object) -> tuple[str, ...]:
+    """Texts, of which one alone need not stand in a list. Raises SettingError for anything else."""
+    texts = (given,) if isinstance(given, str) else tuple(given) if isinstance(given, Iterable) else (given,)
+    for text in texts:
+        if not isinstance(text, str):
+            raise SettingError(f'{what} {shown(text)}: give text, as "leads/*"')
+    return texts
 
 
 def find_presets(
@@ -159,6 +169,23 @@ def _identity(path: str | os.PathLike[str] | None) -> tuple[int, int] | None:
     except (OSError, ValueError):
         return None
     return (facts.st_dev, facts.st_ino) if facts is not None else None
+
+
+def is_gone(folder: Path, name: str) -> bool:
+    """Whether there is surely no file of that name below a bank's folder any more.
+
+    One that can't be looked at is not gone, nor what stood behind a link that leads nowhere at the moment: a
+    disk may come back.
+    """
+    path = folder / name
+    try:
+        path.lstat()
+    except (FileNotFoundError, NotADirectoryError):
+        inner = path.parents[: name.count("/")]
+        return not any(above.is_symlink() and not above.exists() for above in inner)
+    except (OSError, ValueError):
+        return False
+    return False
 
 
 def _no_folder(folder: Path, problem: OSError) -> SettingError:
@@ -252,6 +279,7 @@ class NamePattern:
         self.fields = {_placeholder(text, *found.groups()) for found in _BRACES.finditer(text)}
         example = dict.fromkeys(PLACEHOLDERS, "x")
         checked_name(self.fill(**example), f"name = {shown(text)}")
+        _require_portable(self.text, f"name = {shown(text)}")
 
     def fill(self, folder: str, preset: str, phrase: str, values: str) -> str:
         """The name of one output, with forward slashes, not checked yet."""
@@ -308,21 +336,61 @@ def checked_name(name: str, where: str) -> str:
     return name
 
 
+_RESERVED = re.compile(r"(con|prn|aux|nul|com[1-9]|lpt[1-9])(\..*)?", re.IGNORECASE)
+
+
+def _require_portable(name: str, where: str) -> None:
+    """Raise SettingError for a name that some systems can't have: outputs are handed on."""
+    if any(ord(letter) < 32 or ord(letter) == 127 for letter in name):
+        raise SettingError(f"{printable(where)}: holds a control character; leave it out")
+    for part in name.split("/"):
+        if _RESERVED.fullmatch(part):
+            raise SettingError(f"{printable(where)}: {shown(part)} names a device on Windows; choose another")
+        if part.endswith((".", " ")):
+            raise SettingError(f"{printable(where)}: {shown(part)} ends with a dot or a space; leave it out")
+
+
 def is_inside(name: object) -> bool:
     """Whether something is an output's name inside the output folder, as manifests have it."""
     try:
-        return isinstance(name, str) and name == checked_name(name, "") and name.endswith(OUTPUT_SUFFIX)
+        is_name = isinstance(name, str) and name == checked_name(name, "")
     except SettingError:
         return False
+    return is_name and str(name).lower().endswith(OUTPUT_SUFFIX)
 
 
-def collisions(names: Iterator[tuple[str, str]]) -> Iterator[str]:
-    """A line for each output, given with its preset, whose name another one has already."""
-    first: dict[str, str] = {}
-    for name, preset in names:
-        key = os.path.normcase(name)
-        if first.setdefault(key, preset) != preset:
-            yield f"{shown(first[key])} and {shown(preset)} would both write {shown(name)}"
+def folded(name: str) -> str:
+    """A name as a file system sees it that tells neither case nor the ways to write an accent apart."""
+    if name.isascii():
+        return name.casefold()
+    return unicodedata.normalize("NFC", unicodedata.normalize("NFD", name).casefold())
+
+
+class Collisions:
+    """What outputs are called, each given with what it is made of: whether two are called the same.
+
+    ``same`` has a line for each output whose name an earlier one has, ``alike`` for each whose name differs
+    from an earlier one's in case or in the way to write an accent alone.
+    """
+
+    def __init__(self) -> None:
+        self.same: list[str] = []
+        self.alike: list[str] = []
+        self._first: dict[str, tuple[str, str, str]] = {}
+
+    def add(self, name: str, whose: str, found: Found, counts: Callable[[Found], bool]) -> None:
+        """Note a name; where there is a collision, ``counts`` is asked whether it is a preset's."""
+        key = folded(name)
+        first = self._first.get(key)
+        if first is None:
+            self._first[key] = (name, whose, found.place)
+        elif first[1] != whose and counts(found):
+            if not counts(replace(found, place=first[2])):
+                self._first[key] = (name, whose, found.place)
+            elif os.path.normcase(first[0]) == os.path.normcase(name):
+                self.same.append(f"{shown(first[1])} and {shown(whose)} would both write {shown(name)}")
+            else:
+                self.alike.append(f"{shown(first[0])} and {shown(name)}")
 
 
 def phrase_names(phrases: Sequence[Path]) -> list[str]:

@@ -8,6 +8,8 @@ number. What is current stays as it is; one bad preset never stops the others; w
 has made counts for the next one, which ends with the very files that an undisturbed run leaves.
 """
 
+import hashlib
+import json
 import os
 import sys
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
@@ -15,6 +17,7 @@ from contextlib import ExitStack, contextmanager, suppress
 from itertools import chain
 from typing import TYPE_CHECKING, Any
 
+from glidesmith.bank import is_gone
 from glidesmith.desk import Desk, desk_at
 from glidesmith.errors import OutputError, SettingError
 from glidesmith.manifest import MANIFEST_FILE, OutputFacts, Record, write_manifest
@@ -65,8 +68,8 @@ def batch(
         The bank, and where it is mirrored to; made where it is missing. ``output`` may be an address that
         `fsspec` knows, as a str: ``"s3://bucket/takes"``.
     phrases : paths, optional
-        Each preset plays each of these instead of its own; ``track`` and ``channel`` choose among the notes
-        of MIDI files. ``longest_s`` is how long any phrase may be.
+        Each preset plays each of these (or this one) instead of its own; ``track`` and ``channel`` choose
+        among the notes of MIDI files. ``longest_s`` is how long any phrase may be.
     vary : mapping of dotted keys to values, optional
         Each preset under all combinations, as in `compare`.
     name : str, optional
@@ -106,6 +109,8 @@ def batch(
     ------
     SettingError
         For what can't be asked; a line each.
+    PhraseError
+        For one of ``phrases`` that can't be read.
     OutputError
         Where the output folder can't be used, holds something else in the place of what is to be written, or
         another batch is at work there.
@@ -174,7 +179,7 @@ class Round:
         self._handled, self._changed = 0, False
         self._pending: dict[int, tuple[Order, str]] = {}
         desk.look()
-        self.outcome.warnings += desk.damaged
+        self.outcome.warnings += [*desk.damaged, *survey.alike]
         self._plan = Plan(survey, desk, self.outcome, self._count)
         for problem in survey.unread:
             self._plan.fail("", "", problem.lines, 0)
@@ -197,9 +202,13 @@ class Round:
         if self.outcome.stopped:
             return self.outcome
         self._look_at_others()
-        if self.outcome.gone and (prune(self.outcome.gone) if callable(prune) else prune):
-            self._prune()
-        self._settle()
+        self._prune_if_wanted(prune)
+        try:
+            self._settle()
+        except OutputError as problem:  # what was made, and what failed, is to be told all the same
+            if not self._changed and not self.outcome.failed:
+                raise
+            self.outcome.stopped = str(problem)
         return self.outcome
 
     def _make(self, run: Runner) -> None:
@@ -260,15 +269,24 @@ class Round:
         desk, found = self._desk, {each.name for each in self._survey.presets}
         for item in desk.records.items():
             line = desk.records.line(item)
-            if os.path.normcase(item) in self._plan.planned or line is None:
+            if desk.key(item) in self._plan.planned or line is None:
                 continue
             if desk.stamp(item) is None:
                 desk.forget(item)
                 self._changed = True
-            elif line.preset in found or os.path.lexists(self._survey.request.folder / line.preset):
+            elif line.preset in found or not is_gone(self._survey.request.folder, line.preset):
                 self.outcome.others += 1
             else:
                 self.outcome.gone.append(item)
+
+    def _prune_if_wanted(self, prune: bool | Confirm) -> None:
+        gone = self.outcome.gone
+        if prune and self._survey.unread:
+            self.outcome.warnings.append(
+                "nothing is removed, since not all of the bank can be read: mend that, and prune again"
+            )
+        elif gone and (prune(gone) if callable(prune) else prune):
+            self._prune()
 
     def _prune(self) -> None:
         """Remove the outputs whose preset is gone, where they are as they were written."""
@@ -286,15 +304,18 @@ class Round:
         """Write the manifest and the summary, if anything in them is new, and the journal anew."""
         desk = self._desk
         self.outcome.all_never_land = sum(line.never_land > 0 for line in desk.records.lines())
-        is_new = self._changed or self._plan.changed or bool(self.outcome.failed or desk.damaged)
-        missing = not all(desk.has(name) for name in (MANIFEST_FILE, SUMMARY_FILE))
-        if is_new or missing or not desk.journal.is_clean:
+        told = sorted(line for each in self.outcome.failed for line in each.lines)
+        title = printable(self._survey.request.folder.absolute().name) or "Batch"
+        page = hashlib.sha256(json.dumps([title, told]).encode("ascii")).hexdigest()
+        stands = desk.has(MANIFEST_FILE) and desk.has_summary(page, self._survey.request.verify)
+        is_new = self._changed or self._plan.changed or bool(desk.damaged)
+        if is_new or not stands or not desk.journal.is_clean:
             from glidesmith.summary import write_summary
 
+            desk.require_own_names()
             write_manifest(desk.folder / MANIFEST_FILE, desk.records)
-            told = sorted(line for each in self.outcome.failed for line in each.lines)
-            title = printable(self._survey.request.folder.absolute().name) or "Batch"
             write_summary(desk.folder / SUMMARY_FILE, desk.records, told, title=title)
+            desk.remember_summary(page)
             desk.publish()
         elif not self._plan.inputs.changed:
             return

@@ -31,8 +31,10 @@ from glidesmith.scheduler import (
     checked_address,
     close,
     connected,
+    deadline,
     exposed,
     manners,
+    require_listener,
     within,
 )
 from glidesmith.text import printable, shortened
@@ -108,8 +110,9 @@ def produce_on_cluster(
     checked_address(address)
     waiting = iter(orders)
     for first in waiting:  # with nothing to do nobody is called together
-        place = shared_place(output)
-        with manners(), _Run(address, output, place, tell or _unheard) as run:
+        place, until = shared_place(output), deadline()
+        require_listener(address, until)
+        with manners(), _Run(address, output, place, tell or _unheard, until) as run:
             yield from run.outcomes(chain((first,), waiting))
 
 
@@ -136,8 +139,8 @@ class _Errand:
 class _Run:
     """One batch on one cluster, from the first word to the last."""
 
-    def __init__(self, address: str, output: str, place: SharedPlace, tell: Tell) -> None:
-        self._address, self._place, self._tell = address, place, tell
+    def __init__(self, address: str, output: str, place: SharedPlace, tell: Tell, until: float) -> None:
+        self._address, self._place, self._tell, self._until = address, place, tell, until
         run = secrets.token_hex(8)
         target = str(getattr(place, "root", output))
         token_name = f".glidesmith.{secrets.token_hex(4)}.part"
@@ -157,7 +160,7 @@ class _Run:
         note = exposed(self._address)
         if note:
             self._tell(note)
-        self._client = connected(self._address)
+        self._client = connected(self._address, self._until)
         try:
             self._place.put(self._terms.token_name, self._terms.token.encode())
             self._workforce.gather(self._client)

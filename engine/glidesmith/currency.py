@@ -43,7 +43,8 @@ _PRESET_KEYS = frozenset({"pitch", "gain"})
 def origin_of(options: Options, variation: Variation, inputs: Mapping[str, str], choice: object) -> str:
     """SHA-256 of all that an item is made from, as far as it is known without reading any file.
 
-    ``inputs`` are the hashes of its input files, ``choice`` the track and channel of its phrase.
+    ``inputs`` are the hashes of its input files, ``choice`` the track and channel of its phrase, and how long
+    it may be.
     """
     told = [__version__, options.as_dict(), variation.plain(), inputs, choice]
     return hashlib.sha256(json.dumps(told, sort_keys=True).encode("ascii")).hexdigest()
@@ -106,7 +107,7 @@ class Inputs:
         stamp = _trusted(found.stamp)
         if kept is not None and kept.sha256 == sha256:
             facts = replace(kept, stamp=stamp)
-        elif _is_phrase(data):
+        elif is_phrase(data):
             facts = InputFacts(stamp, sha256, "notes")
         else:
             text = decoded(data, file_name(found.path), PresetError)
@@ -199,7 +200,7 @@ def _trusted(stamp: Stamp | None) -> Stamp:
     return stamp
 
 
-def _is_phrase(data: bytes) -> bool:
+def is_phrase(data: bytes) -> bool:
     """Whether a TOML file is a list of notes and no preset."""
     try:
         keys = toml_mapping(decoded(data, "", PhraseError), "", PhraseError).keys()

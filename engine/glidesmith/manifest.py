@@ -10,6 +10,7 @@ holds it. Where it is lost or damaged, the next run reads and hashes instead; no
 """
 
 import contextlib
+import errno
 import hashlib
 import json
 import os
@@ -69,7 +70,15 @@ _GLIDE_KINDS: dict[str, type | tuple[type, ...]] = {
     "note": int, "start_s": _NUMBER, "from": str, "to": str, "short_by_cents": _NUMBER
 }  # fmt: skip
 _LOCKED_BYTE = 1 << 62
-_DAMAGED = (ValueError, TypeError, KeyError, RecursionError)
+_DAMAGED = (ValueError, TypeError, KeyError, RecursionError, OverflowError)
+
+_LONGEST_LINE = 1 << 24
+"""Bytes: more than a record of a phrase with a hundred thousand glides that never land."""
+
+_LARGEST = 1e15
+"""No figure of a record is so large; what is made of figures stays finite and exact below it."""
+
+_LONGEST_HEAD = 1 << 16
 
 Record = dict[str, Any]
 
@@ -84,6 +93,7 @@ def checked_record(record: object) -> Record:
     if not isinstance(record, dict) or not _has(record, _KINDS) or not is_inside(record["item"]):
         raise ValueError("no record")
     json.dumps(record, allow_nan=False)
+    _require_measured(record)
     glides = all(isinstance(glide, dict) and _has(glide, _GLIDE_KINDS) for glide in record["never_lands"])
     points = all(isinstance(point, list) and len(point) == 2 for point in record["curve"])
     numbers = points and all(isinstance(value, _NUMBER) for point in record["curve"] for value in point)
@@ -91,6 +101,17 @@ def checked_record(record: object) -> Record:
     if not (glides and numbers and texts and record["sample_rate"] > 0):
         raise ValueError("no record")
     return record
+
+
+def _require_measured(value: object) -> None:
+    """Raise ValueError where any number in a record is out of reason."""
+    if isinstance(value, dict):
+        value = list(value.values())
+    if isinstance(value, list):
+        for each in value:
+            _require_measured(each)
+    elif isinstance(value, int | float) and not -_LARGEST <= value <= _LARGEST:
+        raise ValueError("no record")
 
 
 def _has(facts: Record, kinds: Mapping[str, type | tuple[type, ...]]) -> bool:
@@ -177,7 +198,7 @@ def read_manifest(path: Path, known: Stamp | None = None) -> tuple[Records, list
     OutputError for a file that is no manifest, or one of a newer version.
     """
     try:
-        file = open(path, "rb")  # noqa: SIM115, PTH123 - records are read from it as long as they are needed
+        file = _opened(path)
     except FileNotFoundError:
         return Records(), []
     except OSError as problem:
@@ -189,11 +210,31 @@ def read_manifest(path: Path, known: Stamp | None = None) -> tuple[Records, list
         raise
 
 
+def _opened(path: Path) -> IO[bytes]:
+    """A regular file to be read, no link, pipe or device. Raises OSError."""
+    flags = os.O_RDONLY | getattr(os, "O_CLOEXEC", 0) | getattr(os, "O_BINARY", 0)
+    flags |= getattr(os, "O_NOFOLLOW", 0) | getattr(os, "O_NONBLOCK", 0)
+    file = os.fdopen(os.open(path, flags), "rb")
+    if not stat.S_ISREG(os.fstat(file.fileno()).st_mode):
+        file.close()
+        raise OSError(errno.EINVAL, "it is no regular file")
+    return file
+
+
+def _lines_of(file: IO[bytes]) -> Iterator[tuple[bytes, int]]:
+    """The lines from where a file stands, and how long each is; one that is too long comes empty."""
+    while text := file.readline(_LONGEST_LINE):
+        length = len(text)
+        while not text.endswith(b"\n") and (more := file.readline(_LONGEST_LINE)):
+            text, length = b"" if not more.endswith(b"\n") else b"\n", length + len(more)
+        yield (text if length == len(text) else b""), length
+
+
 def _read_lines(file: IO[bytes], name: str, is_trusted: bool) -> tuple[Records, list[str]]:
     records, damaged = Records(file), list[str]()
-    _check_head(file.readline(), name)
+    check_head(file.readline(_LONGEST_HEAD), name)
     offset = file.tell()
-    for number, text in enumerate(file, 2):
+    for number, (text, length) in enumerate(_lines_of(file), 2):
         try:
             record = json.loads(text)
             if not is_trusted:
@@ -201,11 +242,12 @@ def _read_lines(file: IO[bytes], name: str, is_trusted: bool) -> tuple[Records, 
             records.put(record["item"], Line.of(record, file, offset, len(text.rstrip())))
         except _DAMAGED:
             damaged.append(f"{name}: line {number:,} is damaged; what it listed is made again")
-        offset += len(text)
+        offset += length
     return records, damaged
 
 
-def _check_head(text: bytes, name: str) -> None:
+def check_head(text: bytes, name: str) -> None:
+    """Raise OutputError where a file that begins with that line is no manifest, or one of a newer version."""
     try:
         head = json.loads(text)
         kind, version = head["kind"], head["version"]
@@ -260,6 +302,15 @@ class OutputFacts:
     origin: str
 
 
+@dataclass(frozen=True, slots=True)
+class SummaryFacts:
+    """The summary as it was written: its stamp, its hash, and that of its title and the failures it names."""
+
+    stamp: Stamp
+    file_sha256: str
+    told: str
+
+
 class Journal:
     """The journal of an output folder: what it says, and the lock, from `hold` to `close`."""
 
@@ -270,6 +321,7 @@ class Journal:
         self.begun: set[str] = set()
         self.lines: dict[str, Line] = {}
         self.manifest: Stamp | None = None
+        self.summary: SummaryFacts | None = None
         self.is_clean = True
         self._file: IO[bytes] | None = None
         self._reading: IO[bytes] | None = None
@@ -285,24 +337,25 @@ class Journal:
             self._take_in(self._file)
             return
         with contextlib.suppress(OSError):
-            self._reading = open(self.path, "rb")  # noqa: PTH123, SIM115 - records are read from it
+            self._reading = _opened(self.path)
             self._take_in(self._reading)
 
     def _take_in(self, file: IO[bytes]) -> None:
         file.seek(0)
         offset, digest, settled = 0, hashlib.sha256(), False
-        for text in file:
+        ended = True
+        for text, length in _lines_of(file):
             try:
                 facts = json.loads(text)
                 if "settled" in facts:
                     settled = facts["settled"] == digest.hexdigest()
                 else:
-                    self._take_line(facts, file, offset, len(text))
+                    self._take_line(facts, file, offset, length)
             except (*_DAMAGED, AttributeError, IndexError):
                 self.is_clean = False
             digest.update(text)
-            offset += len(text)
-        if offset and not text.endswith(b"\n") and self._file is not None:
+            offset, ended = offset + length, text.endswith(b"\n")
+        if not ended and self._file is not None:
             file.write(b"\n")
         if not settled:
             self._distrust()
@@ -313,11 +366,11 @@ class Journal:
         self.inputs.clear()
         for item in self.outputs.keys() - self.lines.keys():
             del self.outputs[item]
-        self.manifest, self.is_clean = None, False
+        self.manifest, self.summary, self.is_clean = None, None, False
 
     def _take_line(self, facts: Any, file: IO[bytes], offset: int, length: int) -> None:
         if "begun" in facts:
-            self.begun.add(str(facts["begun"]))
+            self.begun.add(_inside(facts["begun"]))
             self.is_clean = False
         elif "made" in facts:
             record = checked_record(facts["made"])
@@ -328,15 +381,16 @@ class Journal:
             self.is_clean = False
         elif "output" in facts:
             found = OutputFacts(_stamp(facts), str(facts["file_sha256"]), str(facts["origin"]))
-            self.outputs[str(facts["output"])] = found
+            self.outputs[_inside(facts["output"])] = found
         elif "input" in facts:
-            links = facts["links"]
-            found_links = None if links is None else (links[0], links[1], links[2], links[3])
+            found_links = _links(facts["links"])
             self.inputs[str(facts["input"])] = InputFacts(
                 _stamp(facts), str(facts["sha256"]), str(facts["kind_of_file"]), found_links
             )
         elif "manifest" in facts:
             self.manifest = _stamp(facts)
+        elif "summary" in facts:
+            self.summary = SummaryFacts(_stamp(facts), str(facts["file_sha256"]), str(facts["told"]))
         elif facts.get("kind") != JOURNAL_KIND:
             raise ValueError(facts)
 
@@ -436,6 +490,9 @@ class Journal:
         yield _HEAD
         if self.manifest is not None:
             yield line_of({"manifest": MANIFEST_FILE, **_stamped(self.manifest)})
+        if self.summary is not None:
+            known = {"file_sha256": self.summary.file_sha256, "told": self.summary.told}
+            yield line_of({"summary": True, **_stamped(self.summary.stamp), **known})
         for name, source in sorted(self.inputs.items()):
             facts = {"sha256": source.sha256, "kind_of_file": source.kind, "links": source.links}
             yield line_of({"input": name, **_stamped(source.stamp), **facts})
@@ -460,6 +517,28 @@ def _made_begin(facts: Any) -> int:
     """Where the record begins in the line about an output that was made; it is the last thing there."""
     before = {name: facts[name] for name in ("size", "mtime_ns", "origin")}
     return len(line_of(before)) - len(_MADE_END) + len(b',"made":')
+
+
+def _links(given: Any) -> tuple[str | None, int | None, int | None, str | None] | None:
+    """What a preset names. Raises ValueError for anything else."""
+    if given is None:
+        return None
+    phrase, track, channel, cycle = given
+    texts, numbers = (phrase, cycle), (track, channel)
+    if not (all(isinstance(each, str | None) for each in texts) and all(map(_is_count, numbers))):
+        raise ValueError(given)
+    return phrase, track, channel, cycle
+
+
+def _is_count(value: object) -> bool:
+    return isinstance(value, int | None) and not isinstance(value, bool)
+
+
+def _inside(name: object) -> str:
+    """An output's name, for damage must not lead out of the folder. Raises ValueError."""
+    if not is_inside(name):
+        raise ValueError(name)
+    return str(name)
 
 
 def _stamp(facts: Any) -> Stamp:

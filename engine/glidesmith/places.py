@@ -73,12 +73,18 @@ def shared_place(output: str | os.PathLike[str]) -> SharedPlace:
     Raises SettingError for an address that `fsspec` does not know or lacks a library for.
     """
     text = os.fspath(output)
-    found = _URL.match(text.rsplit("::", 1)[-1])
+    folder = folder_at(text)
+    return RemotePlace(text) if folder is None else SharedFolder(folder)
+
+
+def folder_at(output: str) -> Path | None:
+    """The folder of this machine that a path or an address names; None for an address elsewhere."""
+    found = _URL.match(output.rsplit("::", 1)[-1])
     if found is None:
-        return SharedFolder(Path(text).absolute())
-    if found[1].lower() in ("file", "local") and "::" not in text:
-        return SharedFolder(Path(unquote(text[found.end() :])).absolute())
-    return RemotePlace(text)
+        return Path(output).absolute()
+    if found[1].lower() in ("file", "local") and "::" not in output:
+        return Path(unquote(output[found.end() :])).absolute()
+    return None
 
 
 def is_address(output: str) -> bool:
@@ -313,6 +319,14 @@ class RemotePlace(SharedPlace):
                 return bytes(self._files.cat_file(self.path(name)))
             except FileNotFoundError:
                 return None
+
+    def head(self, name: str, count: int) -> bytes:
+        """The first bytes of a file; none where there is no such file. Raises OutputError."""
+        with self.telling(name):
+            try:
+                return bytes(self._files.cat_file(self.path(name), 0, count))
+            except FileNotFoundError:
+                return b""
 
     def sizes(self) -> dict[str, int]:
         """The bytes of every file below, by name. Raises OutputError."""

@@ -4,38 +4,39 @@ Presets are looked at one after the other, when the next order is asked for; wha
 left out.
 """
 
+import math
 import os
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, replace
+from functools import lru_cache
 from pathlib import Path
 
 from glidesmith.bank import (
     AS_IT_IS,
     Choice,
+    Collisions,
     Found,
     NamePattern,
     Variation,
-    collisions,
+    as_texts,
     default_pattern,
     find_presets,
     phrase_names,
     variations,
 )
-from glidesmith.currency import (
-    Inputs,
-    agrees,
-    origin_of,
-)
+from glidesmith.currency import Inputs, agrees, is_phrase, origin_of
 from glidesmith.desk import Desk
 from glidesmith.errors import GlidesmithError, PhraseError, PresetError, SettingError
 from glidesmith.manifest import InputFacts, OutputFacts, Record
 from glidesmith.outcome import Failed, Outcome
 from glidesmith.production import Options, Order
-from glidesmith.text import file_name, shown
+from glidesmith.text import file_name, read_bytes, shown
 
 LOWEST_LUFS, HIGHEST_LUFS = -70.0, 0.0
 _MOST_COLLISIONS = 5
+_MOST_TRACKS = 65_535
+"""What the header of a MIDI file can count."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,17 +75,48 @@ def checked_request(
     verify: bool = False,
 ) -> Request:
     """What `batch` is asked for. Raises SettingError."""
-    paths = tuple(Path(phrase) for phrase in phrases)
+    bank, target = _path("folder", folder), _path("output", output)
+    paths = _phrase_paths(phrases)
+    _check_choice(*chosen)
     if not paths and chosen[:2] != (None, None):
         raise SettingError("track and channel choose among the notes of a phrase: give the phrase too")
     phrase_names(paths)
     varied = _varied(vary)
     several = len(varied) > 1 or bool(varied[0].changes)
-    pattern = NamePattern(default_pattern(len(paths) > 1, several) if name is None else name)
+    if name is None:
+        name = default_pattern(len(paths) > 1, several)
+    pattern = NamePattern(*as_texts("name", (name,)))
+    choice = Choice(*(as_texts(*each) for each in zip(("include", "exclude"), patterns, strict=True)))
     return Request(
-        Path(folder), Path(output), Choice(*patterns), paths, *chosen, varied, pattern,
+        bank, target, choice, paths, *chosen, varied, pattern,
         _checked_options(options), force, verify,
     )  # fmt: skip
+
+
+def _path(what: str, given: object) -> Path:
+    if not isinstance(given, str | os.PathLike):
+        raise SettingError(f"{what} {shown(given)}: give a path")
+    path = os.fspath(given)
+    if not isinstance(path, str):
+        raise SettingError(f"{what} {shown(given)}: give a path as text")
+    return Path(path)
+
+
+def _phrase_paths(given: object) -> tuple[Path, ...]:
+    """The phrases, of which one alone need not stand in a list."""
+    if isinstance(given, str | os.PathLike) or not isinstance(given, Iterable):
+        return (_path("phrases", given),)
+    return tuple(_path("phrases", each) for each in given)
+
+
+def _check_choice(track: object, channel: object, longest_s: object) -> None:
+    for what, value, most in (("track", track, _MOST_TRACKS), ("channel", channel, 16)):
+        is_whole = isinstance(value, int) and not isinstance(value, bool)
+        if value is not None and not (is_whole and 1 <= value <= most):  # type: ignore[operator]
+            raise SettingError(f"{what} {shown(value)}: give a whole number, 1 to {most:,}")
+    is_number = isinstance(longest_s, int | float) and not isinstance(longest_s, bool)
+    if not is_number or not 0.0 < longest_s < math.inf:  # type: ignore[operator]
+        raise SettingError(f"longest_s {shown(longest_s)}: give seconds above 0; 7200 is usual")
 
 
 def _varied(vary: Mapping[str, Sequence[object]] | None) -> tuple[Variation, ...]:
@@ -129,6 +161,7 @@ class Survey:
         """Raises SettingError where there are none, or two items would be written to one file."""
         self.request = request
         self.presets, self.unread = find_presets(request.folder, request.choice, request.output)
+        self.alike: list[str] = []
         if not self.presets and not self.unread:
             raise SettingError(
                 f"{file_name(request.folder)}: holds no preset that is taken: no .toml file in it or below"
@@ -144,22 +177,36 @@ class Survey:
         request = self.request
         if not request.phrases and "phrase" in request.pattern.fields:
             return  # names are known only once the presets were read
-        lines: list[str] = []
-        for line in collisions(self._names()):
-            lines.append(line)
-            if len(lines) == _MOST_COLLISIONS:
+        names, counts = Collisions(), lru_cache(maxsize=None)(_may_be_preset)
+        for name, whose, found in self._names():
+            names.add(name, whose, found, counts)
+            if len(names.same) == _MOST_COLLISIONS:
                 break
-        if lines:
-            raise SettingError(*lines)
+        if names.same:
+            raise SettingError(*names.same)
+        self.alike = [
+            f"{names}: only some file systems tell these names apart; on others the second can't be made"
+            for names in names.alike[:_MOST_COLLISIONS]
+        ]
 
-    def _names(self) -> Iterator[tuple[str, str]]:
-        """Each item's name, and what it is made of."""
+    def _names(self) -> Iterator[tuple[str, str, Found]]:
+        """Each item's name, what it is made of, and the file that may be its preset."""
         request = self.request
         for found in self.presets:
             for phrase in request.phrases or (Path(),):
                 for variation in request.variations:
                     name = request.pattern.name(found.name, phrase.as_posix(), variation.name)
-                    yield name, made_of(found, phrase.name, variation)
+                    yield name, made_of(found, phrase.name, variation), found
+
+
+def _may_be_preset(found: Found) -> bool:
+    """Whether a file may be a preset; only a list of notes that can be read as one surely is none."""
+    from glidesmith.preset import MOST_PRESET_BYTES
+
+    try:
+        return not is_phrase(read_bytes(found.path, MOST_PRESET_BYTES, PresetError))
+    except PresetError:
+        return True
 
 
 def made_of(found: Found, phrase: str, variation: Variation) -> str:
@@ -196,8 +243,8 @@ class _Item:
 class Plan:
     """The orders of one run.
 
-    ``planned`` has the items thought of, by name, in the system's own case; ``changed`` says whether a record
-    was changed without its output being made again.
+    ``planned`` has the items thought of, by name as the desk tells names apart; ``changed`` says whether a
+    record was changed without its output being made again.
     """
 
     def __init__(self, survey: Survey, desk: Desk, outcome: Outcome, count: Callable[[int], None]) -> None:
@@ -250,7 +297,7 @@ class Plan:
                 item = self._item(name, found, facts, source, variation)
                 order = None if self._stands(item) else self._order(item)
                 if order is not None and not self._still_stands(item, order):
-                    self._desk.require_writable(name)
+                    self._desk.require_writable(name, order.settings_sha256)
                 else:
                     order = None
             except GlidesmithError as problem:
@@ -283,7 +330,7 @@ class Plan:
     def _named(self, found: Found, source: _Source, variation: Variation) -> str:
         name = self._request.pattern.name(found.name, source.path, variation.name)
         whose = made_of(found, source.path.rpartition("/")[2], variation)
-        first = self.planned.setdefault(os.path.normcase(name), whose)
+        first = self.planned.setdefault(self._desk.key(name), whose)
         if first != whose:
             raise SettingError(f"{shown(first)} and {shown(whose)} would both write {shown(name)}")
         return name
@@ -297,7 +344,8 @@ class Plan:
             with _beginning(f"{file_name(found.path)}: oscillator.file: "):
                 cycle_name, known = self.inputs.file(cycle, PresetError)
             hashes[cycle_name] = known.sha256
-        origin = origin_of(self._request.options, variation, hashes, (source.track, source.channel))
+        choice = (source.track, source.channel, self._request.longest_s)
+        origin = origin_of(self._request.options, variation, hashes, choice)
         return _Item(name, found, facts, source, variation, cycle, hashes, origin)
 
     def _order(self, item: _Item) -> Order:

@@ -6,10 +6,14 @@ Whoever reaches a scheduler's port runs code on its workers: keep it on this mac
 import contextlib
 import ipaddress
 import logging
+import os
 import re
+import socket
 import threading
+import time
 import warnings
 from collections.abc import Callable, Iterator
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from glidesmith.errors import ClusterError, SettingError
@@ -21,6 +25,12 @@ if TYPE_CHECKING:
 CONNECT_S = 8.0
 """A scheduler that hasn't answered by then is not there."""
 
+ANSWER_S = 9.5
+"""The same from the user's side: from the start of the process, loading Dask included."""
+
+_SHORTEST_S = 1.0
+_GRACE_S = 0.3
+
 CLOSE_S = 2.0
 LONGEST_SAID = 160
 _LOUD = ("distributed", "tornado", "asyncio")
@@ -29,12 +39,59 @@ _ADDRESS = re.compile(r"(tcp|tls)://(\[[0-9A-Fa-f:.]+\]|[A-Za-z0-9_.-]+):([0-9]{
 
 def checked_address(address: str) -> str:
     """A scheduler's address as Dask wants it. Raises SettingError where it is none."""
+    if not isinstance(address, str):
+        raise SettingError(f"cluster {shown(address)}: give tcp://HOST:PORT or tls://HOST:PORT as text")
     found = _ADDRESS.fullmatch(address)
     if found is None or not 0 < int(found[3]) < 65_536:
+        told = re.sub(r"://.*@", "://", address)  # a password is nobody's business
         raise SettingError(
-            f"cluster {shown(address)}: is no scheduler's address; give tcp://HOST:PORT or tls://HOST:PORT"
+            f"cluster {shown(told)}: is no scheduler's address; give tcp://HOST:PORT or tls://HOST:PORT"
         )
     return address
+
+
+def deadline() -> float:
+    """Until when a scheduler must have answered, by `time.monotonic`: 10 s from when the user began to wait.
+
+    In a process that is older than that, it is not the process that is waited for.
+    """
+    age_s = _process_age_s()
+    return time.monotonic() + ANSWER_S - (age_s if age_s < ANSWER_S else 0.0)
+
+
+def _process_age_s() -> float:
+    """How old this process is, where the system tells (Linux, proc(5)); else 0."""
+    try:
+        stated = Path("/proc/self/stat").read_text("utf-8", "replace").rpartition(")")[2].split()
+        begun_s = int(stated[19]) / os.sysconf("SC_CLK_TCK")
+        return max(float(Path("/proc/uptime").read_text("ascii").split()[0]) - begun_s, 0.0)
+    except (OSError, ValueError, IndexError, AttributeError):
+        return 0.0
+
+
+def require_listener(address: str, until: float) -> None:
+    """Raise ClusterError at once where nobody listens at an address; whatever else is wrong shows later.
+
+    This needs none of Dask, whose loading may take seconds.
+    """
+    found = _ADDRESS.fullmatch(address)
+    assert found is not None
+    begin = f"cluster {address}: "
+    try:
+        patience_s = max(until - time.monotonic(), _SHORTEST_S)
+        socket.create_connection((found[2].strip("[]"), int(found[3])), patience_s).close()
+    except ConnectionRefusedError:
+        raise ClusterError(
+            f"{begin}no scheduler is there: the connection is refused; check the address, or start one with "
+            "`dask scheduler`"
+        ) from None
+    except socket.gaierror:
+        raise ClusterError(f"{begin}nobody knows that host; check the address") from None
+    except TimeoutError:
+        raise _unreachable(address, None) from None
+    except OSError as problem:
+        said = printable(problem.strerror or str(problem))
+        raise ClusterError(f"{begin}can't be connected to ({said}); check the address") from None
 
 
 def exposed(address: str) -> str | None:
@@ -54,10 +111,12 @@ def exposed(address: str) -> str | None:
     )
 
 
-def connected(address: str) -> "Client":
-    """A client of the scheduler at an address. Raises ClusterError within 10 s where there is none."""
+def connected(address: str, until: float | None = None) -> "Client":
+    """A client of the scheduler at an address. Raises ClusterError where there is none by `deadline`."""
     from distributed import Client
 
+    left_s = CONNECT_S if until is None else until - time.monotonic()
+    patience_s = min(CONNECT_S, max(left_s, _SHORTEST_S))
     found: list[Client] = []
     problems: list[Exception] = []
 
@@ -65,11 +124,11 @@ def connected(address: str) -> "Client":
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
             try:
-                found.append(Client(address, timeout=CONNECT_S, set_as_default=False, name="glidesmith"))
+                found.append(Client(address, timeout=patience_s, set_as_default=False, name="glidesmith"))
             except Exception as problem:
                 problems.append(problem)
 
-    if not within(CONNECT_S + 0.5, connect) or not found:
+    if not within(patience_s + _GRACE_S, connect) or not found:
         raise _unreachable(address, problems[0] if problems else None)
     return found[0]
 
@@ -78,7 +137,7 @@ def _unreachable(address: str, problem: Exception | None) -> ClusterError:
     begin = f"cluster {address}: "
     if problem is None or (isinstance(problem, OSError) and "SSL" not in str(problem).upper()):
         return ClusterError(
-            f"{begin}no scheduler answers there within {CONNECT_S:g} s; check the address, or start one with "
+            f"{begin}no scheduler answers there in time; check the address, or start one with "
             "`dask scheduler`"
         )
     said = printable(shortened(" ".join(str(problem).split()), LONGEST_SAID))

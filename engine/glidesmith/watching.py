@@ -10,6 +10,7 @@ import time
 from collections.abc import Callable
 from contextlib import ExitStack
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 from glidesmith.bank import Stamp, find_presets, stamp_of
@@ -19,6 +20,7 @@ from glidesmith.errors import SettingError
 from glidesmith.outcome import Failed, Outcome
 from glidesmith.planning import Request, Survey, checked_request
 from glidesmith.production import Options, Runner
+from glidesmith.text import shown
 
 LOOK_S = 0.1
 """From one look to the next."""
@@ -60,6 +62,8 @@ def watch(
     failed anew; ``stop`` is asked between looks. Errors as those of `batch`, from the first run; later ones
     are told as failures, and watching goes on.
     """
+    if isinstance(output, str) and "://" in output:
+        output = _folder_of(output)
     request = checked_request(
         folder, output, phrases, (track, channel, longest_s), vary, name, (include, exclude),
         Options(sample_rate, depth, loudness, meter, tolerance_cents), force, verify,
@@ -73,6 +77,18 @@ def watch(
         while not (stop is not None and stop()):
             time.sleep(LOOK_S)
             watcher.look()
+
+
+def _folder_of(address: str) -> Path:
+    from glidesmith.places import folder_at, without_credentials
+
+    folder = folder_at(address)
+    if folder is None:
+        raise SettingError(
+            f"output {shown(without_credentials(address))}: watching needs a folder: an address can't follow "
+            "every save"
+        )
+    return folder
 
 
 def _unheard(outcome: Outcome) -> None:

@@ -34,9 +34,12 @@ class OutputPlace(FilePath):
     """A folder as `pathlib.Path`, or an address as it is."""
 
     def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
-        """As a path, unless it is an address."""
-        is_address = isinstance(value, str) and "://" in value
-        return value if is_address else super().convert(value, param, ctx)
+        """As a path, unless it is an address elsewhere."""
+        if isinstance(value, str) and "://" in value:
+            from glidesmith.places import folder_at
+
+            return folder_at(value) or value
+        return super().convert(value, param, ctx)
 
 
 @click.command("batch")
@@ -147,7 +150,8 @@ def command(folder: Path, output: Path | str, as_json: bool, **options: Any) -> 
             if isinstance(output, str):
                 raise click.UsageError("--watch needs a folder: an address can't follow every save")
             return _watch(folder, output, options)
-        with _progress(as_json, options) as progress, _telling_how_to_go_on(progress):
+        progress = _progress(as_json, options)
+        with _telling_how_to_go_on(progress), progress:
             done = _batch(folder, output, options, progress)
     tell(*_remarks(done))
     click.echo(json_text(done.as_dict()) if as_json else "\n".join(_summary(done)))
@@ -233,11 +237,9 @@ def _watch(folder: Path, output: Path | str, options: dict[str, Any]) -> int:
     return 0
 
 
-@contextmanager
-def _progress(as_json: bool, options: dict[str, Any]) -> Iterator[Progress]:
+def _progress(as_json: bool, options: dict[str, Any]) -> Progress:
     wanted = False if as_json and options["progress"] is None else options["progress"]
-    with Progress("rendering", wanted, "items") as progress:
-        yield progress
+    return Progress("rendering", wanted, "items")
 
 
 @contextmanager
@@ -247,12 +249,14 @@ def _telling_how_to_go_on(progress: Progress) -> Iterator[None]:
         yield
     except Exception:
         raise
-    except BaseException:
-        if progress.total:
-            tell(
-                f"glidesmith: {progress.done:,} of {_counted(progress.total, 'item')} are done; run the same "
-                "command again to go on"
-            )
+    except BaseException as stopped:
+        if sys.stderr.isatty():
+            click.echo("\r", err=True, nl=False)  # the terminal shows ^C at the beginning of this line
+        done = f"{progress.done:,} of {_counted(progress.total, 'item')} are done"
+        told = done if progress.total else "no item is done yet"
+        tell(f"glidesmith: {told}; run the same command again to go on")
+        if isinstance(stopped, KeyboardInterrupt):  # of which click would make an empty line
+            raise click.Abort from None
         raise
 
 
