@@ -1,5 +1,7 @@
 """Batches whose outputs stand at an address: the files of a batch on a folder, and the books here."""
 
+import hashlib
+import json
 import logging
 import stat
 
@@ -95,6 +97,89 @@ def test_a_page_that_is_gone_is_written_again(bank, files):
     before = contents(files)
     files.rm_file("/ferry/takes/summary.html")
     assert batch(bank, ADDRESS, jobs=1).made == []
+    assert contents(files) == before
+
+
+MANIFEST, SUMMARY = "/ferry/takes/manifest.jsonl", "/ferry/takes/summary.html"
+
+
+def test_what_another_machine_changed_is_noticed_though_everything_kept_its_size(bank, files):
+    """It has made an output of other settings, and listed it."""
+    batch(bank, ADDRESS, jobs=1)
+    before = contents(files)
+    [line] = [text for text in before["manifest.jsonl"].splitlines() if b'"item":"lead.wav"' in text]
+    record, theirs = json.loads(line), bytes(len(before["lead.wav"]))
+    changed = line.replace(record["file_sha256"].encode(), hashlib.sha256(theirs).hexdigest().encode())
+    changed = changed.replace(record["settings_sha256"].encode(), b"0" * 64)
+    files.pipe_file("/ferry/takes/lead.wav", theirs)
+    files.pipe_file(MANIFEST, before["manifest.jsonl"].replace(line, changed))
+    assert batch(bank, ADDRESS, jobs=1).made == ["lead.wav"]
+    assert contents(files) == before
+
+
+def test_what_a_run_here_made_is_hashed_once_another_machine_was_there(bank, tmp_path, monkeypatch):
+    """Here a run is cut short after it made an output; there the output is replaced, of the same size."""
+    batch(bank, ADDRESS, jobs=1)
+    write_preset(bank / "lead.toml", 0.05)
+    monkeypatch.setattr("glidesmith.addressdesk.AddressDesk.publish", _interrupted)
+    with pytest.raises(KeyboardInterrupt):
+        batch(bank, ADDRESS, jobs=1)
+    monkeypatch.undo()
+    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "elsewhere"))
+    write_preset(bank / "lead.toml", 0.07)
+    assert batch(bank, ADDRESS, jobs=1).made == ["lead.wav"]
+    monkeypatch.setenv("XDG_STATE_HOME", str(tmp_path / "state"))
+    write_preset(bank / "lead.toml", 0.05)
+    assert batch(bank, ADDRESS, jobs=1).made == ["lead.wav"]
+
+
+def _interrupted(self):
+    raise KeyboardInterrupt
+
+
+def test_somebody_elses_page_is_not_overwritten(bank, files):
+    files.pipe_file(SUMMARY, b"<!doctype html>my own")
+    for _ in range(2):
+        with pytest.raises(OutputError, match=r"memory://ferry/takes/summary\.html: belongs to no batch"):
+            batch(bank, ADDRESS, jobs=1)
+    files.rm_file(SUMMARY)
+    batch(bank, ADDRESS, jobs=1)
+    files.rm("/ferry/takes", recursive=True)
+    files.pipe_file(SUMMARY, b"<!doctype html>my own")
+    with pytest.raises(OutputError, match="belongs to no batch"):
+        batch(bank, ADDRESS, jobs=1)
+    assert contents(files) == {"summary.html": b"<!doctype html>my own"}
+
+
+def test_old_books_do_not_make_a_file_the_batchs_own(bank, files):
+    batch(bank, ADDRESS, jobs=1)
+    files.rm("/ferry/takes", recursive=True)
+    files.pipe_file("/ferry/takes/bell.wav", b"RIFF of my own")
+    done = batch(bank, ADDRESS, jobs=1)
+    assert "bell.wav: is there already" in done.failed[0].lines[0]
+    assert files.cat_file("/ferry/takes/bell.wav") == b"RIFF of my own"
+
+
+def test_a_file_that_is_no_manifest_blocks_the_address_while_it_is_there_and_no_longer(bank, files):
+    batch(bank, ADDRESS, jobs=1)
+    before = contents(files)
+    files.pipe_file(MANIFEST, b"a list of cargo\n")
+    for _ in range(2):
+        with pytest.raises(OutputError, match=r"memory://ferry/takes/manifest\.jsonl: is not the manifest"):
+            batch(bank, ADDRESS, jobs=1)
+    files.rm_file(MANIFEST)
+    assert batch(bank, ADDRESS, jobs=1).made == []
+    assert contents(files) == before
+
+
+def test_a_page_that_was_changed_is_written_again(bank, files):
+    batch(bank, ADDRESS, jobs=1)
+    before = contents(files)
+    files.pipe_file(SUMMARY, before["summary.html"] + b"!")
+    assert batch(bank, ADDRESS, jobs=1).made == []
+    assert contents(files) == before
+    files.pipe_file(SUMMARY, before["summary.html"].replace(b"Items", b"items"))
+    batch(bank, ADDRESS, jobs=1, verify=True)
     assert contents(files) == before
 
 

@@ -1,5 +1,6 @@
 """Banks: which files are found, which are taken, and what outputs are called."""
 
+import errno
 import inspect
 import os
 import sys
@@ -15,6 +16,8 @@ from glidesmith.bank import (
     checked_name,
     default_pattern,
     find_presets,
+    folded,
+    is_gone,
     is_inside,
     phrase_names,
     variations,
@@ -211,6 +214,68 @@ def test_names_are_told_in_printable_form():
     with pytest.raises(SettingError) as caught:
         checked_name("../a\n.wav", "evil\x1b")
     assert str(caught.value).isprintable()
+
+
+@pytest.mark.parametrize(
+    ("pattern", "said"),
+    [
+        ("{preset}\n", "control character"),
+        ("{preset}\x7f", "control character"),
+        ("aux/{preset}", "names a device on Windows"),
+        ("Con", "names a device on Windows"),
+        ("lpt1.{preset}", "names a device on Windows"),
+        ("takes./{preset}", "ends with a dot or a space"),
+        ("takes /{preset}", "ends with a dot or a space"),
+        ("{folder}./{preset}", "ends with a dot or a space"),
+    ],
+)
+def test_names_that_not_every_system_can_have_are_refused(pattern, said):
+    with pytest.raises(SettingError, match=said):
+        NamePattern(pattern)
+
+
+def test_capital_suffixes_are_outputs_too():
+    assert NamePattern("{preset}.WAV").name("lead.toml", "", "") == "lead.WAV"
+    assert is_inside("lead.WAV")
+
+
+def test_names_are_compared_as_file_systems_do_that_know_no_case_and_one_form_of_accents():
+    assert folded("Étude/STRASSE.wav") == folded("e\u0301tude/straße.wav")
+    assert folded("a.wav") != folded("b.wav")
+
+
+def test_what_can_not_be_looked_at_is_not_gone(tmp_path, monkeypatch):
+    bank = tmp_path / "bank"
+    (bank / "leads").mkdir(parents=True)
+    (bank / "leads" / "a.toml").touch()
+    (bank / "file").touch()
+    assert not is_gone(bank, "leads/a.toml")
+    assert is_gone(bank, "leads/b.toml")
+    assert is_gone(bank, "no/b.toml")
+    assert is_gone(bank, "file/b.toml")
+    (bank / "share").symlink_to(tmp_path / "away")
+    assert not is_gone(bank, "share/b.toml")
+    assert not is_gone(bank, "share/deep/b.toml")
+    (tmp_path / "away").mkdir()
+    assert is_gone(bank, "share/b.toml")
+    for number in (errno.EACCES, errno.EIO, errno.ESTALE, errno.ELOOP):
+        monkeypatch.setattr(Path, "lstat", lambda self, number=number: _refuse(number))
+        assert not is_gone(bank, "leads/b.toml")
+
+
+def _refuse(number):
+    raise OSError(number, "")
+
+
+@pytest.mark.parametrize("given", [5, [5], [None], b"x"])
+def test_patterns_that_are_no_text_are_refused_in_a_line(given):
+    with pytest.raises(SettingError, match=r"exclude .*: give text"):
+        Choice(exclude=given)
+
+
+def test_one_pattern_need_not_stand_in_a_list():
+    assert Choice("leads").takes("leads/a.toml")
+    assert not Choice("leads").takes("l/a.toml")
 
 
 def test_two_phrases_of_one_name_are_refused():

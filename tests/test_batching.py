@@ -13,6 +13,7 @@ from conftest import PRESETS
 from glidesmith import OutputError, PhraseError, SettingError, load_phrase, load_preset
 from glidesmith.batching import batch
 from glidesmith.command import main  # noqa: F401 - the command's modules import without the engine
+from unprivileged import no_privileges, open_folder
 
 
 def run(folder, output, **options):
@@ -301,6 +302,14 @@ def test_names_that_collide_are_refused_before_anything_is_made(bank, takes):
     assert not takes.exists()
 
 
+def test_phrases_among_the_presets_collide_with_nothing(bank, takes):
+    """Which they are is found out only where there is a collision: a list of notes makes no output."""
+    for folder in ("basses", "a", "z"):
+        lay_preset(bank, f"{folder}/lead.toml", text=(bank / "line.toml").read_text())
+    done = run(bank, takes, name="{preset}")
+    assert (done.made, done.failed) == (["deep.wav", "lead.wav", "round.wav"], [])
+
+
 def test_names_that_collide_only_by_their_own_phrases_fail_for_the_later_ones(bank, takes):
     done = run(bank, takes, name="{phrase}")
     assert done.made == ["line.wav"]
@@ -411,6 +420,99 @@ def test_what_is_gone_is_told_and_pruned_when_asked(bank, takes):
     assert not (takes / "basses").exists()
 
 
+def test_nothing_is_pruned_while_not_all_of_the_bank_can_be_read(monkeypatch):
+    """A folder that is closed, or a disk that answers no more, is not a preset that is gone."""
+    with open_folder() as folder:
+        bank, takes = (
+            lay_bank(folder / "bank", "lead.toml", "gone.toml", "closed/deep.toml"),
+            folder / "takes",
+        )
+        run(bank, takes)
+        for path in (bank, *bank.rglob("*"), takes, *takes.rglob("*")):
+            path.chmod(0o777)
+        (bank / "gone.toml").unlink()
+        (bank / "closed").chmod(0)
+        try:
+            with no_privileges():
+                done = run(bank, takes, prune=True)
+        finally:
+            (bank / "closed").chmod(0o777)
+        assert (done.gone, done.pruned) == (["gone.wav"], [])
+        assert "not all of the bank can be read" in done.warnings[0]
+        assert (takes / "closed/deep.wav").exists()
+        assert (takes / "gone.wav").exists()
+        assert run(bank, takes, prune=True).pruned == ["gone.wav"]
+
+
+def test_one_phrase_and_one_pattern_need_not_stand_in_a_list(bank, takes):
+    phrase = str(bank / "line.toml")
+    assert run(bank, takes, phrases=phrase, include="basses", exclude="round.toml").made == [
+        "basses/deep.wav"
+    ]
+
+
+def test_how_long_a_phrase_may_be_is_asked_each_time(bank, takes):
+    run(bank, takes)
+    [*failed] = run(bank, takes, longest_s=0.01).failed
+    assert len(failed) == 3
+    assert "the longest allowed" in failed[0].lines[0]
+
+
+def page_of(takes):
+    return (takes / "summary.html").read_text("utf-8")
+
+
+def test_a_failure_that_is_mended_leaves_the_summary(bank, takes):
+    """Whether the preset goes, or comes back as it was: nothing is made then, and nothing may be listed."""
+    lay_preset(bank, "bad.toml", text="[pitch\n")
+    run(bank, takes)
+    assert "bad.toml: " in page_of(takes)
+    written = [takes / name for name in contents(takes)]
+    before = [path.stat().st_mtime_ns for path in written]
+    assert len(run(bank, takes).failed) == 1
+    assert [path.stat().st_mtime_ns for path in written] == before
+    (bank / "bad.toml").unlink()
+    done = run(bank, takes)
+    assert (done.made, done.current) == ([], 3)
+    assert "bad.toml" not in page_of(takes)
+    good = (bank / "lead.toml").read_bytes()
+    (bank / "lead.toml").write_text("[pitch\n")
+    run(bank, takes)
+    assert "lead.toml: " in page_of(takes)
+    (bank / "lead.toml").write_bytes(good)
+    assert run(bank, takes).made == []
+    assert "lead.toml: " not in page_of(takes)
+
+
+def test_a_summary_that_was_changed_is_written_again(bank, takes):
+    run(bank, takes)
+    before = contents(takes)
+    (takes / "summary.html").write_text("<!doctype html>Glidesmith, changed")
+    assert run(bank, takes).made == []
+    assert contents(takes) == before
+    os.utime(takes / "summary.html")
+    stamp = (takes / "summary.html").stat().st_mtime_ns
+    run(bank, takes)
+    assert (takes / "summary.html").stat().st_mtime_ns == stamp
+
+
+def test_the_summary_of_a_bank_that_was_renamed_has_its_new_name(bank, takes):
+    run(bank, takes)
+    bank.rename(bank.parent / "new-name")
+    assert run(bank.parent / "new-name", takes).made == []
+    assert "new-name" in page_of(takes)
+
+
+def test_what_was_made_is_told_though_the_manifest_can_not_be_written(bank, takes):
+    lay_preset(bank, "bad.toml", text="[pitch\n")
+    (takes / "summary.html.part").mkdir(parents=True)
+    done = run(bank, takes)
+    assert (len(done.made), len(done.failed)) == (3, 1)
+    assert "in the way" in done.stopped
+    (takes / "summary.html.part").rmdir()
+    assert run(bank, takes).current == 3
+
+
 def test_pruning_removes_nothing_that_was_changed_or_stands_behind_a_link(bank, takes, tmp_path):
     run(bank, takes)
     for name in ("lead.toml", "basses/deep.toml", "basses/round.toml"):
@@ -511,6 +613,17 @@ def test_the_demo_bank_gives_what_rendering_gives(tmp_path):
         ({"jobs": 0}, "jobs"),
         ({"vary": {"pitch.raise": [1]}}, "pitch.rise"),
         ({"vary": {"phrase.file": ["a"]}}, "can't vary phrase.file"),
+        ({"name": 5}, "name 5: give text"),
+        ({"exclude": [5]}, r"exclude 5: give text"),
+        ({"include": 5}, r"include 5: give text"),
+        ({"phrases": [5]}, "phrases 5: give a path"),
+        ({"phrases": 5}, "phrases 5: give a path"),
+        ({"longest_s": -1}, "longest_s -1: give seconds above 0"),
+        ({"longest_s": float("nan")}, "longest_s"),
+        ({"longest_s": "long"}, "longest_s"),
+        ({"phrases": ["x"], "channel": 17}, "channel 17: give a whole number, 1 to 16"),
+        ({"phrases": ["x"], "track": 0}, "track 0"),
+        ({"phrases": ["x"], "track": "1"}, "track"),
     ],
 )
 def test_what_can_not_be_asked_is_told_before_anything_is_made(bank, takes, options, said):

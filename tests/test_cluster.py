@@ -6,6 +6,7 @@ import logging
 import shutil
 import socket
 import subprocess
+import sys
 from dataclasses import replace
 from pathlib import Path
 
@@ -320,6 +321,33 @@ def test_whoever_is_refused_hears_it_before_dask_is_loaded(tmp_path):
     done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert "the connection is refused" in done.stdout
     assert done.stdout.endswith("False\n")
+
+
+def test_what_is_no_scheduler_is_told_and_costs_no_time_at_the_end(tmp_path):
+    """A web server, for instance: its answer is taken for the length of a message."""
+    code = (
+        "import socket, threading; from glidesmith.cluster import produce_on_cluster\n"
+        "from glidesmith.errors import *; from glidesmith.scheduler import connected\n"
+        "from orders import make_orders; import distributed\n"
+        "close = distributed.Client.close; calls = []\n"
+        "distributed.Client.close = lambda self, *a, **k: calls.append(self.status) or close(self, *a, **k)\n"
+        "listener = socket.create_server(('127.0.0.1', 0))\n"
+        "def serve():\n"
+        "  while True:\n"
+        "    there = listener.accept()[0]; there.sendall(b'HTTP/1.1 400 Bad Request\\r\\n\\r\\n')\n"
+        "threading.Thread(target=serve, daemon=True).start()\n"
+        f"orders, place = make_orders(1), {str(tmp_path)!r}\n"
+        "try: list(produce_on_cluster(orders, place, f'tcp://127.0.0.1:{listener.getsockname()[1]}'))\n"
+        "except ClusterError as problem: print(problem)\n"
+        "import gc; gc.collect(); print(calls[1:])"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, cwd=Path(__file__).parent
+    )
+    said, calls = done.stdout.splitlines()
+    assert "what answers there is no Dask scheduler; check host and port" in said
+    assert calls in ("[]", "['closed']")
+    assert "Traceback" not in done.stderr
 
 
 def test_the_time_to_answer_begins_with_the_process(monkeypatch):

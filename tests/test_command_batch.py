@@ -191,6 +191,28 @@ def test_a_read_only_output_is_told_in_a_line():
         assert "you may not write there" in complaint(result)
 
 
+@pytest.mark.parametrize("at", ["glidesmith.batching.batch", "glidesmith.planning.Survey.__init__"])
+def test_an_interrupt_before_anything_is_done_says_how_to_go_on(bank, takes, monkeypatch, at):
+    def interrupted(*arguments, **options):
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(at, interrupted)
+    result = rendered(bank, takes)
+    assert result.exit_code == 130
+    first, second = result.stderr.splitlines()
+    assert first == "glidesmith: no item is done yet; run the same command again to go on"
+    assert second.startswith("glidesmith: interrupted")
+    assert result.stdout == ""
+
+
+def test_the_address_of_a_folder_is_one(bank, tmp_path):
+    address = f"file://{tmp_path}/new%20takes"
+    result = run("batch", bank, "-o", address, "--jobs", 1, "--json")
+    assert result.exit_code == 0
+    assert json.loads(result.stdout)["output"] == str(tmp_path / "new takes")
+    assert (tmp_path / "new takes" / "lead.wav").exists()
+
+
 def test_watching_from_the_command_line(bank, takes):
     command = [
         sys.executable,

@@ -3,10 +3,13 @@
 import os
 import subprocess
 import sys
+import threading
 from pathlib import Path
 
 import pytest
+from numba import config
 
+from glidesmith import compiled
 from glidesmith.compiled import kernel
 
 CODE = "from glidesmith import compiled; print(compiled.CACHE_FOLDER)"
@@ -74,3 +77,21 @@ def test_a_kernel_that_would_allocate_does_not_compile():
 
     with pytest.raises(NumbaError):
         allocates(3)
+
+
+def test_one_thread_at_a_time_chooses_where_compiled_code_is_kept():
+    """numba reads where its cache is from a setting of the whole process; two threads must not mix it up."""
+    inside = threading.Event()
+
+    def enter():
+        with compiled._cached_in_own_folder():
+            inside.set()
+
+    before = config.CACHE_DIR
+    other = threading.Thread(target=enter)
+    with compiled._cached_in_own_folder():
+        other.start()
+        assert not inside.wait(0.2)
+    other.join()
+    assert inside.is_set()
+    assert before == config.CACHE_DIR

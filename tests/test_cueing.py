@@ -105,6 +105,24 @@ def test_a_gain_alone_needs_no_snapshot(desk, cues):
     assert command.snapshot.gain_db == -6.0
 
 
+def test_another_gain_comes_with_a_cross_fade(desk, cues):
+    """What goes on in place has its gain approached slowly: a far quieter slot would begin too loud."""
+    do(desk, "copy", source=1, slot=2)
+    do(desk, "set", slot=2, key="pitch.rise", value=0.2)
+    do(desk, "select", slot=2, when="now")
+    same = cues.next(desk)
+    assert isinstance(same, Swap)
+    assert same.smooth
+    do(desk, "match_gain", slot=1, gain_db=-12.0)
+    for when in ("now", "loop"):
+        do(desk, "select", slot=2, when="now")
+        cues.next(desk)
+        do(desk, "select", slot=1, when=when)
+        other = cues.next(desk)
+        assert isinstance(other, Swap)
+        assert (other.when, other.smooth, other.snapshot.gain_db) == (when, False, -12.0)
+
+
 def test_a_slot_that_waits_is_told_again_after_the_one_that_sounds(desk, cues):
     do(desk, "select", slot=2, when="loop")
     command = cues.next(desk)

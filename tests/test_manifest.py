@@ -1,5 +1,6 @@
 """Manifest and journal: written whole, read with care, locked while held."""
 
+import hashlib
 import json
 import os
 import subprocess
@@ -90,6 +91,11 @@ def test_names_and_texts_in_any_script_survive(tmp_path, journal):
         {"curve": [[0.0, "x"]]},
         {"warnings": [1]},
         {"sources": None},
+        {"frames": 10**400},
+        {"frames": -(10**400)},
+        {"curve": [[1e308, 1e308], [1e300, -1e308]]},
+        {"options": {"depth": [{"x": 1e16}]}},
+        {"true_peak_dbtp": -1e300},
     ],
 )
 def test_records_that_are_none_are_not_believed(harm):
@@ -116,6 +122,54 @@ def test_damaged_lines_are_told_and_the_others_are_read(tmp_path, journal, line)
     assert found.items() == ["a.wav", "b.wav"]
     assert damaged == [f"{path}: line 3 is damaged; what it listed is made again"]
     found.close()
+
+
+def test_a_line_without_end_is_left_out_and_its_neighbours_are_read(tmp_path, journal, monkeypatch):
+    monkeypatch.setattr("glidesmith.manifest._LONGEST_LINE", 4096)
+    for item in ("a.wav", "b.wav"):
+        made(journal, item)
+    made(journal, "big.wav", title="x" * 5000)
+    path = tmp_path / "manifest.jsonl"
+    write_manifest(path, journal_records(journal))
+    head, first, second, big = path.read_bytes().splitlines()
+    path.write_bytes(b"\n".join([head, first, big, second, b"x" * 9000]))
+    found, damaged = read_manifest(path)
+    assert [record["item"] for record in found] == ["a.wav", "b.wav"]
+    assert [line.partition(" is damaged")[0] for line in damaged] == [f"{path}: line {n}" for n in (3, 5)]
+    found.close()
+
+
+@pytest.mark.skipif(not hasattr(os, "mkfifo"), reason="needs named pipes")
+def test_what_is_no_file_is_never_read(tmp_path):
+    pipe, link = tmp_path / "pipe.jsonl", tmp_path / "link.jsonl"
+    os.mkfifo(pipe)
+    link.symlink_to("/dev/zero")
+    for path in (pipe, link, tmp_path):
+        with pytest.raises(OutputError):
+            read_manifest(path)
+
+
+@pytest.mark.parametrize("name", ["../victim.wav", "/victim.wav", "a/../../victim.wav", "", "x.txt"])
+def test_a_journal_names_nothing_outside(tmp_path, journal, name):
+    stamp = {"size": 1, "mtime_ns": 1, "file_sha256": "0", "origin": "0"}
+    journal.path.write_bytes(journal.path.read_bytes() + line_of({"begun": name}))
+    with journal.path.open("ab") as file:
+        file.write(line_of({"output": name, **stamp}) + line_of({"begun": "a.wav"}))
+    journal.read()
+    assert journal.begun == {"a.wav"}
+    assert journal.outputs == {}
+
+
+@pytest.mark.parametrize(
+    "links", [[1, None, None, None], [[], None, None, ""], ["a", "b", None, None], [None]]
+)
+def test_a_journal_with_links_that_are_none_is_not_believed(journal, links):
+    told = {"input": "a.toml", "size": 1, "mtime_ns": 1, "sha256": "0", "kind_of_file": "preset"}
+    good = line_of({**told, "links": ["line.toml", 1, None, None]})
+    text = journal.path.read_bytes() + good + line_of({**told, "input": "b.toml", "links": links})
+    journal.path.write_bytes(text + line_of({"settled": hashlib.sha256(text).hexdigest()}))
+    journal.read()
+    assert list(journal.inputs) == ["a.toml"]
 
 
 @pytest.mark.parametrize("head", [b"", b"x", b"{}", b'{"kind":"glidesmith batch"}', b"[1]", b"\x00" * 50])

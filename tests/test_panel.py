@@ -19,7 +19,7 @@ from glidesmith.errors import OutputError
 from glidesmith.panel import FIRST_PORT, Panel
 from glidesmith.panel_frames import ROW_FIELDS
 from glidesmith.panel_messages import LONGEST_MESSAGE
-from glidesmith.panel_room import Guest, changed_parts
+from glidesmith.panel_room import MOST_ERRANDS, Guest, changed_parts
 from glidesmith.phrase import load_preset_phrase
 from panels import DEADLINE_S, Talk, opened_socket, served, talking, waited_for
 
@@ -380,6 +380,79 @@ def test_a_move_is_made_in_the_handler_that_reads_it(tmp_path):
         talking(found, talk)
 
 
+def test_a_panel_has_few_errands_at_a_time_and_figures_wait_for_none(tmp_path):
+    """What it asks for beyond is refused in a line; what waits when it goes is never begun."""
+    with served(tmp_path) as found:
+        leave, begun = threading.Event(), []
+        found.session.load = lambda slot, path: begun.append(path) or leave.wait(DEADLINE_S)
+        path = str(PRESETS / "deck-tune.toml")
+
+        async def ask(one):
+            await one.told("figures")
+            for number in range(MOST_ERRANDS + 3):
+                await one.say(do="load", slot=2, path=path, id=number)
+            refused = [
+                await one.until(lambda found: isinstance(found, dict) and "refused" in found)
+                for _ in range(3)
+            ]
+            assert [entry["id"] for entry in refused] == [MOST_ERRANDS + number for number in range(3)]
+            await one.say(do="set", slot=1, key="pitch.fall", value=0.2)
+            assert (await one.told("figures"))["facts"]
+
+        async def look(one):
+            await one.say(do="files")
+            await one.told("files")
+
+        talking(found, ask)
+        assert waited_for(lambda: not found.panel._room._guests)
+        leave.set()
+        talking(found, look)
+        assert len(begun) <= 2  # those that were under way, one a worker
+        assert len(found.lines) == 3
+
+
+def test_however_often_files_are_asked_for_they_are_looked_for_once(own):
+    looks, leave = [], threading.Event()
+    files = own.panel._folders.files
+    own.panel._folders.files = lambda: looks.append(1) or (leave.wait(DEADLINE_S) and files())
+
+    async def talk(one, two):
+        for _ in range(300):
+            await one.say(do="files")
+        await two.say(do="files")
+        await one.say(do="set", slot=1, key="pitch.fall", value=0.2)
+        await one.until_state(lambda state: state and one.slot(1)["settings"]["pitch.fall"] == 0.2)
+        leave.set()
+        for panel in (one, two):
+            assert (await panel.told("files"))["presets"]
+
+    talking(own, talk, panels=2)
+    assert len(looks) <= 3
+
+
+def test_no_cycle_outside_is_read_beside_the_preset_of_a_copy(own, tmp_path, tmp_path_factory):
+    """A copy belongs to no file, but names in it start from the folder of the preset that was copied."""
+    cycle = next((PRESETS / "cycles").glob("*.wav")).read_bytes()
+    outside = tmp_path_factory.mktemp("outside")
+    (outside / "cycle.wav").write_bytes(cycle)
+    (tmp_path / "sub").mkdir()
+    (tmp_path / "sub" / "own.wav").write_bytes(cycle)
+    (tmp_path / "sub" / "link").symlink_to(outside, target_is_directory=True)
+    text = (PRESETS / "night-ferry-lead.toml").read_text()
+    (tmp_path / "sub" / "mine.toml").write_text(text.replace("../shared/phrases", str(PHRASES)))
+
+    async def talk(one):
+        await one.say(do="load", slot=2, path="sub/mine.toml")
+        await one.told("done")
+        await one.say(**{"do": "copy", "from": 2, "to": 3})
+        await one.say(do="set", slot=3, key="oscillator.file", value="link/cycle.wav")
+        assert "outside" in await one.told("refused")
+        await one.say(do="set", slot=3, key="oscillator.file", value="own.wav")
+        assert await one.told("done") == "set"
+
+    talking(own, talk)
+
+
 def test_a_preset_is_saved_where_it_may_be_and_comments_are_kept(own, tmp_path):
     (tmp_path / "mine.toml").write_text("# by ear\n" + (PRESETS / "winch-constant-rate.toml").read_text())
     phrase = load_preset(PRESETS / "winch-constant-rate.toml").phrase
@@ -476,6 +549,32 @@ def test_keys_held_by_a_panel_that_goes_come_up(own):
         return own.session.deck.rows(0)[1]["gate"][-20:]
 
     assert waited_for(lambda: len(gates()) == 20 and not gates().any())
+
+
+def test_a_key_that_two_panels_hold_comes_up_with_the_last(own):
+    async def talk(one, two):
+        def gates():
+            return own.session.deck.rows(0)[1]["gate"][-20:]
+
+        async def sounds(still: bool):
+            await asyncio.to_thread(waited_for, lambda: gates().all() == still and gates().any() == still)
+            assert gates().all() == still
+
+        await one.say(do="key_down", note=60, id=1)
+        await two.say(do="key_down", note=60, id=2)
+        await one.told("taken")
+        await two.told("taken")
+        await sounds(True)
+        await one.say(do="key_up", note=60, id=3)
+        await one.say(do="level", db=-40, id=4)
+        assert await one.told("taken") == 4
+        await asyncio.sleep(0.2)
+        await sounds(True)
+        await two.say(do="key_up", note=60, id=5)
+        assert await two.told("taken") == 5
+        await sounds(False)
+
+    talking(own, talk, panels=2)
 
 
 def test_facts_and_curves_follow_what_is_moved(own):

@@ -431,6 +431,38 @@ def test_silence_is_one_key_away_even_in_a_field(tab, panel):
     assert tab.page.locator('.note-button[aria-pressed="true"]').count() == 0
 
 
+def test_a_key_that_is_held_on_a_button_or_alone_acts_once(tab, panel, monkeypatch):
+    calls = []
+    for name in ("play", "stop", "panic", "select"):
+        act = getattr(panel.session, name)
+        monkeypatch.setattr(
+            panel.session, name, lambda *a, _act=act, _name=name: calls.append(_name) or _act(*a)
+        )
+    tab.page.focus("#play")
+    for key, does in (("Enter", ("play", "stop")), ("Escape", ("panic",)), ("1", ("select",))):
+        calls.clear()
+        for _ in range(5):
+            tab.page.keyboard.down(key)  # all but the first are repeats
+        tab.page.keyboard.up(key)
+        assert waited_for(lambda: calls)
+        tab.page.wait_for_timeout(100)
+        assert len(calls) == 1
+        assert calls[0] in does
+
+
+def test_held_notes_are_forgotten_where_the_transport_takes_over(tab, panel):
+    pressed = tab.page.locator('.note-button[aria-pressed="true"]')
+    tab.page.keyboard.down("a")
+    assert waited_for(lambda: panel.session.state()["playing"] == "keys")
+    assert pressed.count() == 1
+    tab.page.keyboard.press("Space")
+    # A start or, where the page was told of the keys only after it, a stop: both take the keys away.
+    assert waited_for(lambda: panel.session.state()["playing"] != "keys")
+    assert pressed.count() == 0
+    tab.page.keyboard.up("a")
+    tab.page.keyboard.press("Escape")
+
+
 # Notes
 
 

@@ -2,6 +2,7 @@
 move. Tolerance throughout: none.
 """
 
+import json
 import random
 from pathlib import Path
 
@@ -99,15 +100,20 @@ def test_a_session_cut_short_replays_up_to_its_last_move(tmp_path):
     assert np.array_equal(again, player.audio[:4800])
 
 
-def test_more_commands_at_one_sample_than_the_deck_holds_come_again(tmp_path):
+@pytest.mark.parametrize("last", ["play", "panic"])
+def test_as_many_commands_at_one_sample_as_the_deck_holds_come_again(last, tmp_path):
+    """Also where the last of them is a panic, which overrules all the others."""
     with Player(*bank("fog-horn"), log=tmp_path / "log") as player:
         player.session.play()
-        player.play(1000)
-        for step in range(600):
-            player.session.level(-60.0 + step % 50)
-            if step % 200 == 199:
-                player.play(0)
-                player.session.deck.play(np.zeros(0, np.float32))
-                player.session.tick()
-        player.play(1000)
+        player.play(5000)
+        for step in range(400):
+            player.session.key_down(step % 100)
+            player.session.key_up(step % 100)
+        getattr(player.session, last)()
+        player.play(20_000)
+        player.session.play()
+        player.play(5000)
+    lines = [json.loads(line) for line in (tmp_path / "log").read_text().splitlines()]
+    stamps = [line["at"] for line in lines if "sent" in line]
+    assert max(stamps.count(at) for at in set(stamps)) > (200 if last == "panic" else 2)
     assert np.array_equal(replayed(tmp_path / "log", whole=True)[0], player.audio)

@@ -94,24 +94,6 @@ def test_keys_and_level_overtake_settings_on_their_way(tmp_path):
     assert sent(tmp_path / "log") == ["swap", "swap", "level", "note", "swap"]
 
 
-def test_a_deck_that_stands_still_is_told_of_and_nothing_is_lost(tmp_path):
-    with player(log=tmp_path / "log") as live:
-        refused = 0
-        for number in range(2000):
-            try:
-                (live.session.play, live.session.stop)[number % 2]()
-            except SettingError as problem:
-                refused += 1
-                said = str(problem)
-                assert "is the device lost?" in said
-        assert 500 < refused < 1000
-        live.session.set(1, "pitch.rise", 0.5)
-        while len(sent(tmp_path / "log")) < 2000 - refused + 2:
-            live.play(600, 600)
-    kinds = [line["do"] for line in lines_of(tmp_path / "log")]
-    assert kinds[1:-2] == (["play", "stop"] * 1000)[: 2000 - refused]
-
-
 def test_a_slot_that_waits_comes_at_the_loops_start(tmp_path):
     with player({}, {"oscillator": {"wave": "sine"}}, log=tmp_path / "log") as live:
         session = live.session

@@ -318,6 +318,26 @@ def test_nothing_is_wider_than_the_window_and_text_stands_out(chromium, folder, 
     assert min(contrast(*pair) for pair in found) >= 4.5
 
 
+@pytest.mark.parametrize(("width", "column"), [(1200, 9), (360, 2)])
+def test_columns_are_whole_as_far_as_they_are_shown(chromium, many, width, column):
+    """At 1200 pixels all of them, to the length; on a telephone the item and where it lands."""
+    with tab_on(chromium, many, viewport={"width": width, "height": 800}) as tab:
+        edges = tab.page.evaluate(
+            """(column) => {
+              const room = document.querySelector("#scrolled").getBoundingClientRect().right;
+              const cells = document.querySelectorAll(`#rows td:nth-child(${column})`);
+              return [...cells].flatMap((cell) => {
+                const text = document.createRange();
+                text.selectNodeContents(cell);
+                return [...text.getClientRects()].map((box) => box.right - room);
+              });
+            }""",
+            column,
+        )
+    assert len(edges) >= 100
+    assert max(edges) <= 0.5
+
+
 def contrast(one, other):
     """The ratio of WCAG 2.2's relative luminances of two colours "rgb(r, g, b)"."""
     lights = sorted(luminance(colour) for colour in (one, other))

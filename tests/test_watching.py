@@ -129,6 +129,28 @@ def test_a_mistake_is_told_once_when_the_file_has_settled_and_watching_goes_on(w
     assert len(watched.settle()) == 1
 
 
+def test_a_mistake_that_is_taken_back_leaves_the_summary(watched):
+    """The preset is as it was when its output was made, so that nothing is made."""
+    path, page = watched.bank / "lead.toml", watched.takes / "summary.html"
+    text = path.read_text()
+    save(path, text.replace("[gain]", "[gian]"))
+    watched.look()
+    watched.settle()
+    assert "lead.toml: " in page.read_text("utf-8")
+    save(path, text)
+    assert watched.look() == []
+    assert "lead.toml: " not in page.read_text("utf-8")
+
+
+def test_an_address_is_refused_unless_it_is_a_folder(tmp_path):
+    bank = lay_bank(tmp_path / "bank")
+    with pytest.raises(SettingError, match="watching needs a folder") as raised:
+        watch(bank, "s3://me:secret@bucket/takes")
+    assert "secret" not in str(raised.value)
+    watch(bank, f"file://{tmp_path}/takes", jobs=1, stop=lambda: True)
+    assert (tmp_path / "takes" / "lead.wav").exists()
+
+
 def test_a_bank_that_goes_and_comes_back(watched):
     watched.bank.rename(watched.bank.with_name("away"))
     assert watched.look() == []

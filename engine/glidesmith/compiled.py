@@ -12,7 +12,9 @@ can be had, kernels are compiled anew in every process.
 import hashlib
 import os
 import sys
-from collections.abc import Callable
+import threading
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -76,20 +78,32 @@ def _private_folder() -> str | None:
 CACHE_FOLDER = _private_folder()
 
 
+_CHOOSING_FOLDER = threading.RLock()
+"""numba reads where its cache is from a setting of the whole process, and threads compile too."""
+
+
+@contextmanager
+def _cached_in_own_folder() -> Iterator[None]:
+    """While it lasts, what is compiled is kept in the engine's folder; afterwards where it was before."""
+    with _CHOOSING_FOLDER:
+        kept = config.CACHE_DIR
+        config.CACHE_DIR = CACHE_FOLDER or ""
+        try:
+            yield
+        finally:
+            config.CACHE_DIR = kept
+
+
 def compiles_first() -> bool:
     """Whether the engine is still to be compiled, which a person at a terminal should be told."""
     return CACHE_FOLDER is None or not any(Path(CACHE_FOLDER).rglob("voice.play-*.nbi"))
 
 
 def _compile(function: Function, **options: Any) -> Function:
-    kept = config.CACHE_DIR
-    config.CACHE_DIR = CACHE_FOLDER or ""
-    try:
+    with _cached_in_own_folder():
         return numba.njit(  # type: ignore[no-any-return]
             nogil=True, error_model="numpy", _nrt=False, cache=CACHE_FOLDER is not None, **options
         )(function)
-    finally:
-        config.CACHE_DIR = kept
 
 
 def kernel(function: Function) -> Function:
@@ -122,13 +136,9 @@ def callback_function(signature: Any) -> Callable[[Function], Any]:
     """Compile a function that C calls: as `kernel`, with a C signature; the result has an ``address``."""
 
     def compiled(function: Function) -> Any:
-        kept = config.CACHE_DIR
-        config.CACHE_DIR = CACHE_FOLDER or ""
-        try:
+        with _cached_in_own_folder():
             return numba.cfunc(signature, cache=CACHE_FOLDER is not None, error_model="numpy", _nrt=False)(
                 function
             )
-        finally:
-            config.CACHE_DIR = kept
 
     return compiled

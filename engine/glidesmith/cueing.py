@@ -136,8 +136,13 @@ def _sounds_as(one: "View", other: "View") -> bool:
 
 
 def _slews_on(one: "View", other: "View") -> bool:
-    """Whether only slews and envelope times differ, so that each goes on from where it is."""
-    if not _sounds_as(replace(one, slot=other.slot), replace(other, preset=one.preset)):
+    """Whether only slews and envelope times differ, so that each goes on from where it is.
+
+    Not with another match gain, which would be there late: what cross-fades has it from its first sample.
+    """
+    if one.gain_db != other.gain_db or not _sounds_as(
+        replace(one, slot=other.slot), replace(other, preset=one.preset)
+    ):
         return False
     return only_slews_differ(one.preset, other.preset)
 

@@ -4,6 +4,10 @@ in the log with the sample at which it was taken.
 Two kinds go two ways. Transport, keys and level go at once. Settings change the model at once, and the deck
 is told of all that changed in one snapshot; while that is under way, further ones wait and go together, so
 that at most one is under way and only the newest is made.
+
+Nothing at once is hoarded either: one start or stop is on its way to the deck at a time, a newer one replaces
+the one that waits behind it and all keys before that, and a newer level the older. A panic clears what waits,
+is never refused and waits for nothing; what was sent before it the deck passes over by itself.
 """
 
 from collections import deque
@@ -21,9 +25,11 @@ if TYPE_CHECKING:
     from glidesmith.commands import Command
 
 MOST_WAITING = 1000
-"""Moves at once that may wait for room in the deck's ring, before the device must be taken for lost."""
+"""Moves at once that may wait for the deck, before the device must be taken for lost."""
 
 _KEPT_FREE = 8
+_MOST_DROPPED = 512
+_TRANSPORT = ("play", "stop")
 
 
 @dataclass(frozen=True, slots=True)
@@ -49,19 +55,22 @@ class Dispatcher:
     """Applies moves to a console and tells a deck; see the module. Not for several threads at once.
 
     ``noted`` has the moves that were taken, in the order in which they count; whoever writes the log takes
-    them from its left. ``problems`` has what went wrong with settings that the console let pass.
+    them from its left. ``problems`` has what went wrong with settings that the console let pass, ``dropped``
+    the last moves that newer ones made needless before the deck was told; no log has them.
     """
 
     def __init__(self, console: Console, deck: Deck) -> None:
         self.console = console
         self.noted: deque[Noted] = deque()
         self.problems: deque[str] = deque(maxlen=20)
+        self.dropped: deque[Move] = deque(maxlen=_MOST_DROPPED)
         self.cues = Cues(deck.sample_rate)
         self._deck = deck
         self._at_once: deque[Move] = deque()
         self._settings: list[Move] = [make_move("pass_on")]
         self._under_way: deque[_Group] = deque()
         self._swap: int | None = None
+        self._transport: int | None = None
         self._look_again = False
         self.pump()
 
@@ -72,20 +81,28 @@ class Dispatcher:
         return not waits and self._swap is None and not self._look_again
 
     def apply(self, move: Move) -> None:
-        """Do a move and send what may be sent. Raises SettingError; nothing has changed then."""
+        """Do a move and send what may be sent.
+
+        Raises SettingError; nothing has changed then. Of the moves at once only a key that goes down can be
+        refused for want of room: what ends a sound never is.
+        """
         self._note_taken()
         self._see_arrival()
-        if move.at_once and len(self._at_once) >= MOST_WAITING:
+        if move.do == "key_down" and len(self._at_once) >= MOST_WAITING:
             raise SettingError("the sound does not go on, so nothing more is taken: is the device lost?")
         self.console.apply(move)
-        (self._at_once if move.at_once else self._settings).append(move)
+        if move.at_once:
+            self._drop_for(move)
+            self._queue(move)
+        else:
+            self._settings.append(move)
         self.pump()
 
     def pump(self) -> None:
         """Note what the deck took, and send what waits."""
         self._note_taken()
         self._see_arrival()
-        while self._at_once and self._has_room():
+        while self._at_once and self._may_go(self._at_once[0]):
             self._send_at_once(self._at_once.popleft())
         if not self._at_once and self._swap is None and self._has_room():
             self._send_settings()
@@ -102,12 +119,38 @@ class Dispatcher:
         self.problems.clear()
         return lines
 
+    def _queue(self, move: Move) -> None:
+        if move.do != "panic":
+            self._at_once.append(move)
+        elif self._sent_last() == "panic":
+            self.dropped.append(move)  # the deck is about to fall silent, and nothing was sent since
+        else:
+            self._send_at_once(move)
+
+    def _drop_for(self, move: Move) -> None:
+        """Drop what waits and is needless once the move comes."""
+        is_full = len(self._at_once) >= MOST_WAITING
+        kept = deque(waiting for waiting in self._at_once if not _replaces(move, waiting, is_full))
+        if len(kept) < len(self._at_once):
+            self.dropped.extend(waiting for waiting in self._at_once if _replaces(move, waiting, is_full))
+            self._at_once = kept
+
+    def _sent_last(self) -> str | None:
+        """The last command that was sent, if the deck has not taken it yet."""
+        return next((group.sent for group in reversed(self._under_way) if group.number is not None), None)
+
+    def _may_go(self, move: Move) -> bool:
+        return self._has_room() and not (move.do in _TRANSPORT and self._transport is not None)
+
     def _has_room(self) -> bool:
         return sum(group.number is not None for group in self._under_way) < COMMANDS_HELD - _KEPT_FREE
 
     def _send_at_once(self, move: Move) -> None:
         command = self.cues.at_once(move)
-        self._under_way.append(self._sent([move], command))
+        group = self._sent([move], command)
+        if move.do in _TRANSPORT:
+            self._transport = group.number
+        self._under_way.append(group)
 
     def _send_settings(self) -> None:
         if not self._settings and not self._look_again:
@@ -143,6 +186,8 @@ class Dispatcher:
             group.at, group.number = at, None
             if number == self._swap:
                 self._swap = None
+            if number == self._transport:
+                self._transport = None
         self._note_finished()
 
     def _note_finished(self) -> None:
@@ -161,10 +206,23 @@ class Dispatcher:
         if waiting is None or later is None or self._swap is not None or later.slot != waiting:
             return
         state = self._deck.state()
-        if state.waiting_slot >= 0:
+        if state.waiting_slot >= 0 or state.slot != waiting:  # what it was told last is that slot
             return
         arrived = make_move("arrive", slot=waiting)
         if state.mode == "keys":
             arrived = make_move("select", slot=waiting, when="now")
         self.console.apply(arrived)
         self._settings.append(arrived)
+
+
+def _replaces(newer: Move, older: Move, is_full: bool) -> bool:
+    """Whether an older move that still waits is needless once a newer one comes.
+
+    A key that comes up leaves a stroke that still waits alone, however short, until there is no more room.
+    """
+    if newer.do == "level":
+        return older.do == "level"
+    if newer.do == "panic" or newer.do in _TRANSPORT:
+        return older.do != "level"
+    ends_key = newer.do == "key_up" and older.do in ("key_down", "key_up")
+    return is_full and ends_key and older["note"] == newer["note"]

@@ -404,6 +404,9 @@ class Journal:
             if self.path.is_symlink():
                 raise self._in_the_way() from None
             raise output_error(str(self.path.parent), problem) from None
+        if not stat.S_ISREG(os.fstat(descriptor).st_mode):
+            os.close(descriptor)
+            raise self._in_the_way()
         self._file = os.fdopen(descriptor, "r+b")
         try:
             _lock(descriptor, self.path.parent)

@@ -74,7 +74,8 @@ class Panel:
         Where to listen; 0 takes the first free one from 8440 on.
     folders : iterable of paths, optional
         Where presets and captures may be written, and presets and phrases read; relative names start from the
-        first. By default the working folder and those of the presets; those of the phrases are only read.
+        first. By default the working folder and those of the presets; that of the phrase which is heard now
+        is only read, and those of other slots' phrases not even that.
     sound : BrowserSound, optional
         Plays through the browser; without it the session's own sound card does.
     hosts : iterable of str
@@ -160,8 +161,14 @@ class Panel:
 
     async def _serve(self, listener: socket.socket, ready: threading.Event) -> None:
         self._loop, self._stopping = asyncio.get_running_loop(), asyncio.Event()
-        with ThreadPoolExecutor(2, "glidesmith panel file") as beside, _quick_switching():
-            self._room = Room(self._session, self._folders, self._refusals, self._tell, beside, self._sound)
+        with (
+            ThreadPoolExecutor(2, "glidesmith panel file") as beside,
+            ThreadPoolExecutor(1, "glidesmith panel figures") as drawing,
+            _quick_switching(),
+        ):
+            self._room = Room(
+                self._session, self._folders, self._refusals, self._tell, beside, drawing, self._sound
+            )
             runner = web.AppRunner(
                 self._application(),
                 access_log=None,

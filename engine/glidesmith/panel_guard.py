@@ -125,8 +125,11 @@ class Folders:
             raise OutputError(f"{file_name(text)}: is not a path that can be followed") from None
         if not any(path.is_relative_to(folder) for folder in folders):
             allowed = ", ".join(file_name(folder) for folder in folders)
+            does = "write to" if writing else "read"
             raise OutputError(
-                f"{file_name(text)}: lies outside the folders that the panel may use; these are {allowed}"
+                f"{file_name(text)}: lies outside the folders that the panel may {does}: {allowed}; "
+                "they are where it was started, those of its presets and, for reading alone, that of the "
+                "phrase heard then, unless `folders` names others"
             )
         return path
 

@@ -61,12 +61,13 @@ def read_message(text: str) -> Message:
     return message
 
 
-def perform(message: Message, session: Any, folders: "Folders") -> Any:
+def perform(message: Message, session: Any, folders: "Folders", holder: object = None) -> Any:
     """Do what a message that `read_message` returned asks of the session.
 
+    ``holder`` is whoever sent it, by whom keys are held. False where nothing was to be done.
     Raises a GlidesmithError where a value or a path is against its rule.
     """
-    return KINDS[message["do"]].action(message, session, folders)
+    return KINDS[message["do"]].action({**message, "holder": holder}, session, folders)
 
 
 def is_slow(message: Message) -> bool:
@@ -134,16 +135,11 @@ def _one_of(*choices: str) -> Check:
 
 def _set(message: Message, session: Any, folders: "Folders") -> None:
     key, value = message["key"], checked_value(message["key"], message["value"])
-    if KEY[key].kind == "file" and isinstance(value, str):
-        folders.inside(str(_folder_of(message["slot"], session) / value), *CYCLE_SUFFIXES)
-    session.set(message["slot"], key, value, message.get("gesture"))
 
+    def allowed(file: Path) -> Path:
+        return folders.inside(str(file), *CYCLE_SUFFIXES)
 
-def _folder_of(number: int, session: Any) -> Path:
-    """Where the relative files of a slot's preset start from."""
-    paths = {slot["number"]: slot["path"] for slot in session.state()["slots"]}
-    path = paths.get(number)
-    return Path(path).parent if path else Path()
+    session.set(message["slot"], key, value, message.get("gesture"), allowed)
 
 
 def _save(message: Message, session: Any, folders: "Folders") -> None:
@@ -193,11 +189,11 @@ KINDS: dict[str, Kind] = {
     "level": Kind(lambda m, session, _: session.level(float(m["db"])), {"db": _number(-60, 0)}),
     "match": Kind(lambda m, session, _: session.match(m["on"]), {"on": _flag}),
     "key_down": Kind(
-        lambda m, session, _: session.key_down(m["note"], float(m.get("velocity", 0.8))),
+        lambda m, session, _: session.key_down(m["note"], float(m.get("velocity", 0.8)), m["holder"]),
         {"note": _NOTE},
         {"velocity": _number(0.0, 1.0)},
     ),
-    "key_up": Kind(lambda m, session, _: session.key_up(m["note"]), {"note": _NOTE}),
+    "key_up": Kind(lambda m, session, _: session.key_up(m["note"], m["holder"]), {"note": _NOTE}),
     "save": Kind(_save, {"slot": _SLOT, "path": _text}, {"replace": _flag}, slow=True),
     "load": Kind(_load, {"slot": _SLOT, "path": _text}, slow=True),
     "phrase": Kind(_phrase, {"path": _text}, {"slot": _SLOT}, slow=True),

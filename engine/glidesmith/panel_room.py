@@ -15,7 +15,7 @@ from aiohttp import ClientError, WSCloseCode, web
 
 from glidesmith import __version__
 from glidesmith.browser_sound import TooFastError
-from glidesmith.errors import GlidesmithError
+from glidesmith.errors import GlidesmithError, SettingError
 from glidesmith.panel_frames import trace_frame
 from glidesmith.panel_messages import (
     MessageError,
@@ -39,6 +39,9 @@ times as long as they took: so they never take more than a ninth of a core."""
 _MOST_WAITING = 120
 """Messages that wait for a browser; one that is so far behind is let go and begins afresh."""
 
+MOST_ERRANDS = 8
+"""Files that one panel may have loaded or saved at a time; it is told where it asks for more."""
+
 _MOST_ROWS = 1500
 REPORT_EVERY_S = 1.0
 _REPORTED = (
@@ -56,7 +59,8 @@ _GOODBYE_S = 2.0
 
 
 class Guest:
-    """One panel that is open: its socket, what waits to be sent to it, and the keys it holds down."""
+    """One panel that is open: its socket, what waits to be sent to it, the keys it holds down and the errands
+    that are run for it."""
 
     _numbers = itertools.count(1)
 
@@ -64,6 +68,7 @@ class Guest:
         self.number = next(self._numbers)
         self.socket = socket
         self.held: set[int] = set()
+        self.errands: set[asyncio.Task[None]] = set()
         self.waiting: asyncio.Queue[str | bytes] = asyncio.Queue()
         self.writer: asyncio.Task[None] | None = None
         self.is_behind = False
@@ -101,6 +106,7 @@ class Room:
         refusals: "Refusals",
         tell: Callable[[str], None],
         beside: Executor,
+        drawing: Executor,
         sound: "BrowserSound | None",
     ) -> None:
         self._session = session
@@ -108,9 +114,12 @@ class Room:
         self._refusals = refusals
         self._tell = tell
         self._beside = beside
+        self._drawing = drawing
         self._sound = sound
         self._guests: list[Guest] = []
         self._errands: set[asyncio.Task[None]] = set()
+        self._want_files: set[Guest] = set()
+        self._is_listing = False
         self._state: dict[str, Any] = {}
         self._figures: str | None = None
         self._figures_wanted = asyncio.Event()
@@ -139,13 +148,16 @@ class Room:
         self._figures_wanted.set()
 
     def leave(self, guest: Guest) -> None:
-        """A panel has closed: its keys come up, and its sound is free for others."""
+        """A panel has closed: its keys come up, what it asked for is left, its sound is free for others."""
         self._guests.remove(guest)
+        self._want_files.discard(guest)
+        for errand in guest.errands:
+            errand.cancel()
         if guest.writer is not None:
             guest.writer.cancel()
         for note in guest.held:
             with contextlib.suppress(GlidesmithError):
-                self._session.key_up(note)
+                self._session.key_up(note, guest)
         if self._sound is not None and self._sound.listener is guest:
             self._sound.leave(guest)
             self._tell_listener()
@@ -177,21 +189,28 @@ class Room:
         if kind in ("listen", "frames"):
             self._play_to(guest, message)
         elif kind == "files":
-            self._run(self._list_files(guest))
-        elif is_slow(message):
-            self._run(self._do_beside(guest, message))
-        else:
+            self._offer_files(guest)
+        elif not is_slow(message):
             self._do(guest, message)
+        elif len(guest.errands) < MOST_ERRANDS:
+            errand = self._run(self._do_beside(guest, message))
+            guest.errands.add(errand)
+            errand.add_done_callback(guest.errands.discard)
+        else:
+            full = SettingError(f"{MOST_ERRANDS} files are being loaded and saved; wait until one is done")
+            self._refusals.add(f"{kind}: {full}")
+            self._say_refused(guest, message, full)
 
     # What a panel asks for
 
     def _do(self, guest: Guest, message: Mapping[str, Any]) -> None:
         try:
-            perform(dict(message), self._session, self._folders)
+            done = perform(dict(message), self._session, self._folders, guest)
         except GlidesmithError as problem:
             self._say_refused(guest, message, problem)
             return
-        self._ways.begin(guest, message)
+        if done is not False:
+            self._ways.begin(guest, message)
         if message["do"] == "key_down":
             guest.held.add(message["note"])
         elif message["do"] == "key_up":
@@ -214,15 +233,29 @@ class Room:
             refused="; ".join(problem.lines), id=message.get("id"), do=message["do"], key=message.get("key")
         )
 
-    async def _list_files(self, guest: Guest) -> None:
-        loop = asyncio.get_running_loop()
-        presets, phrases = await loop.run_in_executor(self._beside, self._folders.files)
-        guest.say(files={"presets": presets, "phrases": phrases})
+    def _offer_files(self, guest: Guest) -> None:
+        """Look into the folders for all who ask meanwhile: however often they do, one look at a time."""
+        self._want_files.add(guest)
+        if not self._is_listing:
+            self._is_listing = True
+            self._run(self._list_files())
 
-    def _run(self, errand: Coroutine[Any, Any, None]) -> None:
+    async def _list_files(self) -> None:
+        loop = asyncio.get_running_loop()
+        try:
+            while self._want_files:
+                asking, self._want_files = self._want_files, set()
+                presets, phrases = await loop.run_in_executor(self._beside, self._folders.files)
+                for guest in asking & set(self._guests):
+                    guest.say(files={"presets": presets, "phrases": phrases})
+        finally:
+            self._is_listing = False
+
+    def _run(self, errand: Coroutine[Any, Any, None]) -> "asyncio.Task[None]":
         task = asyncio.create_task(self._guarded(errand))
         self._errands.add(task)
         task.add_done_callback(self._errands.discard)
+        return task
 
     async def _guarded(self, errand: Coroutine[Any, Any, None]) -> None:
         try:
@@ -314,7 +347,9 @@ class Room:
     def _show_ways(self) -> None:
         """Tell each panel which of its moves are heard, and since when."""
         now, sample = time.time(), self._session.deck.sample
-        stamped = self._session.stamped
+        stamped, dropped = self._session.stamped, self._session.dropped
+        while dropped:
+            self._ways.drop(dropped.popleft())
         while stamped:
             noted = stamped.popleft()
             found = self._ways.end(noted.move)
@@ -350,7 +385,7 @@ class Room:
                 continue
             slot, took = self._state["current"], 0.0
             try:
-                text, took = await loop.run_in_executor(self._beside, self._figures_text, slot)
+                text, took = await loop.run_in_executor(self._drawing, self._figures_text, slot)
             except GlidesmithError as problem:
                 text = _json({"figures": {"slot": slot, "problem": "; ".join(problem.lines)}})
             except Exception as fault:
@@ -383,6 +418,11 @@ class Ways:
         """Whose message a move was that has been taken; None where it was no panel's."""
         waiting = self._begun.get(_way_key({"do": move.do, **move.values}))
         return waiting.popleft() if waiting else None
+
+    def drop(self, move: Any) -> None:
+        """The deck will not be told of a move: the newest of its kind."""
+        if waiting := self._begun.get(_way_key({"do": move.do, **move.values})):
+            waiting.pop()
 
 
 def _way_key(values: Mapping[str, Any]) -> object:

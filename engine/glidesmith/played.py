@@ -78,6 +78,30 @@ class Keys:
         return Sounding(key_volts(preset, note), jump, level, trigger, tick_samples)
 
 
+class Holders:
+    """Who holds which key down: one that several hold stays down until the last of them lets it go."""
+
+    def __init__(self) -> None:
+        self._of: dict[int, set[object]] = {}
+
+    def add(self, note: int, holder: object) -> None:
+        """A holder has pressed a key."""
+        self._of.setdefault(note, set()).add(holder)
+
+    def leave(self, note: int, holder: object) -> bool:
+        """A holder lets a key go; whether it comes up, which it does where nobody holds it."""
+        holders = self._of.get(note, set())
+        holders.discard(holder)
+        if holders:
+            return False
+        self._of.pop(note, None)
+        return True
+
+    def clear(self) -> None:
+        """Forget all: the transport has taken the keys away."""
+        self._of.clear()
+
+
 def key_volts(preset: "Preset", note: int) -> float:
     """The pitch voltage of a key, as it comes from the converter."""
     volts = (note - preset.tuning.zero_volts) / 12.0

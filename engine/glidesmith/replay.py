@@ -26,9 +26,6 @@ if TYPE_CHECKING:
 BLOCK = 16_384
 """Samples made at a time; their number plays no part in what they are."""
 
-_MOST_WAITING = 128
-"""Commands sent before the deck takes them; its ring holds more."""
-
 
 @dataclass(frozen=True, slots=True)
 class Span:
@@ -116,12 +113,12 @@ class _Player:
             if entry.move.do == "arrive":
                 self._cues.arrive()
             command = self._command(entry)
+            # All of one sample are sent before the deck plays on, since a panic overrules those before it.
+            # Its ring holds as many as it can have taken at one.
+            if command is not None:
+                self._sent.append((self._deck.send(command), entry.at))
         except GlidesmithError as problem:
             raise self._reader.error(entry.line, problem.lines[0]) from None
-        if command is not None:
-            if len(self._sent) >= _MOST_WAITING:
-                self._let_take()
-            self._sent.append((self._deck.send(command), entry.at))
 
     def play_to(self, end: int) -> None:
         """Play on to a sample, and write what lies in the span."""
@@ -169,10 +166,6 @@ class _Player:
         self._digest.update(kept.astype("<f4").tobytes())
         self._peak = max(self._peak, float(np.abs(kept).max()))
         self._sink.write(kept)
-
-    def _let_take(self) -> None:
-        self._deck.play(self._block[:0])
-        self._check_taken()
 
     def _check_taken(self) -> None:
         for taken in self._deck.taken():

@@ -117,6 +117,7 @@ def connected(address: str, until: float | None = None) -> "Client":
 
     left_s = CONNECT_S if until is None else until - time.monotonic()
     patience_s = min(CONNECT_S, max(left_s, _SHORTEST_S))
+    client = Client.__new__(Client)  # so that one whose making fails can be let go too
     found: list[Client] = []
     problems: list[Exception] = []
 
@@ -124,13 +125,16 @@ def connected(address: str, until: float | None = None) -> "Client":
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
             try:
-                found.append(Client(address, timeout=patience_s, set_as_default=False, name="glidesmith"))
+                Client.__init__(client, address, timeout=patience_s, set_as_default=False, name="glidesmith")
+                found.append(client)
             except Exception as problem:
-                problems.append(problem)
+                problems.append(problem.with_traceback(None))
 
     if not within(patience_s + _GRACE_S, connect) or not found:
-        raise _unreachable(address, problems[0] if problems else None)
-    return found[0]
+        problem = problems[0] if problems else None  # not what closing makes of it
+        close(client, _GRACE_S)
+        raise _unreachable(address, problem)
+    return client
 
 
 def _unreachable(address: str, problem: Exception | None) -> ClusterError:
@@ -140,6 +144,8 @@ def _unreachable(address: str, problem: Exception | None) -> ClusterError:
             f"{begin}no scheduler answers there in time; check the address, or start one with "
             "`dask scheduler`"
         )
+    if isinstance(problem, MemoryError):  # what came was taken for the length of a message
+        return ClusterError(f"{begin}what answers there is no Dask scheduler; check host and port")
     said = printable(shortened(" ".join(str(problem).split()), LONGEST_SAID))
     hint = (
         "; for tls:// Dask must know the certificates (distributed.comm.tls)" if address[:3] == "tls" else ""
@@ -160,9 +166,13 @@ def _hushed(act: Callable[[], None]) -> None:
         act()
 
 
-def close(client: "Client") -> None:
-    """Let a client go, whatever has become of its scheduler."""
-    within(CLOSE_S, lambda: client.close(timeout=CLOSE_S))
+def close(client: "Client", seconds: float = CLOSE_S) -> None:
+    """Let a client go, whatever has become of its scheduler, and whether or not it came to be.
+
+    One that can't say good-bye in time must not try again when Python ends, for twice its own timeout.
+    """
+    within(seconds, lambda: client.close(timeout=seconds))
+    client.status = "closed"
 
 
 @contextlib.contextmanager

@@ -26,6 +26,7 @@ from glidesmith.logbook import Logbook, header_of
 from glidesmith.matching import Matcher
 from glidesmith.moves import SLOTS, Move, make_move
 from glidesmith.phrase import Phrase, load_phrase, load_preset_phrase
+from glidesmith.played import Holders
 from glidesmith.preset import Preset, load_preset
 from glidesmith.recording import Recorder
 from glidesmith.saving import save_slot
@@ -112,6 +113,7 @@ class Session:
         self._matcher = Matcher(sample_rate, clock)
         self._clock = clock
         self._lock = threading.RLock()
+        self._holders = Holders()
         self._remarks: deque[str] = deque(maxlen=_MOST_REMARKS)
         self._gesture: tuple[object, int, float] = (None, 0, -1e9)
         self._revision = 1
@@ -123,6 +125,8 @@ class Session:
         self._service: Service | None = None
         self.stamped: deque[Noted] = deque(maxlen=_MOST_STAMPED)
         """The last moves that were taken, with their sample stamps, for whoever measures their way."""
+        self.dropped = self._dispatcher.dropped
+        """The last moves that newer ones made needless before the deck was told of them."""
 
     # Moves
 
@@ -130,6 +134,8 @@ class Session:
         """Do a move; see `glidesmith.moves`."""
         with self._lock:
             self._dispatcher.apply(move)
+            if move.do in ("play", "stop", "panic"):
+                self._holders.clear()
             if move.do not in _UNMATCHED:
                 self._matcher.move()
             if move.do not in _UNDRAWN:
@@ -137,15 +143,24 @@ class Session:
                     self._drawn[number] = self._drawn.get(number, 0) + 1
             self._revision += 1
 
-    def set(self, slot: int, key: str, value: object, gesture: int | None = None) -> None:
+    def set(
+        self,
+        slot: int,
+        key: str,
+        value: object,
+        gesture: int | None = None,
+        allowed: Callable[[Path], Path] | None = None,
+    ) -> None:
         """Move a setting by its dotted key; None puts its default back. See `glidesmith.console`.
 
         ``gesture`` joins moves into one step of undo: those of one key with the same number. Without it,
-        moves of one key that follow each other quickly are one.
+        moves of one key that follow each other quickly are one. ``allowed`` gets the full path of a cycle's
+        file before it is read, and returns the one to read; it raises where none may be.
         """
         cycle = None
         if key == "oscillator.file" and isinstance(value, str):
-            cycle = cycle_at(file_beside(self._console.slot(slot).preset, value))
+            file = file_beside(self._console.slot(slot).preset, value)
+            cycle = cycle_at(file if allowed is None else allowed(file.absolute()))
         token = self._token(("set", slot, key)) if gesture is None else gesture
         self.move(make_move("set", slot=slot, key=key, value=value, gesture=token, cycle=cycle))
 
@@ -234,13 +249,19 @@ class Session:
         """Match the slots' loudness or not."""
         self.move(make_move("match", on=on))
 
-    def key_down(self, note: int, velocity: float = 0.8) -> None:
-        """Press a key, a MIDI number; the phrase gives way to played keys."""
-        self.move(make_move("key_down", note=note, velocity=velocity))
+    def key_down(self, note: int, velocity: float = 0.8, holder: object = None) -> None:
+        """Press a key, a MIDI number; the phrase gives way to played keys. ``holder``: whoever presses it."""
+        with self._lock:
+            self.move(make_move("key_down", note=note, velocity=velocity))
+            self._holders.add(note, holder)
 
-    def key_up(self, note: int) -> None:
-        """Release a key."""
-        self.move(make_move("key_up", note=note))
+    def key_up(self, note: int, holder: object = None) -> bool:
+        """Let a key go. It comes up, and this returns True, unless another holder presses it still."""
+        with self._lock:
+            if not self._holders.leave(note, holder):
+                return False
+            self.move(make_move("key_up", note=note))
+            return True
 
     # Looking after it
 

@@ -288,6 +288,8 @@ class PanelPage {
     const { link } = this;
     const click = (id, act) => byId(id).addEventListener("click", act);
     click("play", (event) => this.play(event));
+    // A key that is held on a button presses it once.
+    addEventListener("keydown", (event) => event.repeat && event.key === "Enter" && event.target.closest?.("button") && event.preventDefault(), true);
     click("panic", (event) => this.panic(event));
     click("undo", (event) => link.send({ do: "undo" }, event));
     click("redo", (event) => link.send({ do: "redo" }, event));
@@ -306,6 +308,7 @@ class PanelPage {
 
   play(event) {
     this.clearProblem();
+    this.notes.forget(); // the engine lets held keys go
     this.link.send({ do: this.model.state?.playing === "phrase" ? "stop" : "play" }, event);
   }
 
@@ -365,7 +368,7 @@ class PanelPage {
       if (!isField && this.undoKey(event)) event.preventDefault();
       return;
     }
-    if (event.key === "Escape") this.panic(event);
+    if (event.key === "Escape" && !event.repeat) this.panic(event);
     if (event.altKey || isField || !byId("single-keys").checked) return;
     if (event.key === " " && event.target.closest?.(PRESSED_BY_SPACE)) return;
     if (this.singleKey(event)) event.preventDefault();
@@ -380,11 +383,12 @@ class PanelPage {
 
   singleKey(event) {
     const digit = /^Digit([1-8])$/.exec(event.code);
-    if (digit) this.slots.select(Number(digit[1]), event, event.shiftKey ? "loop" : undefined);
-    else if (event.key === " " && !event.repeat) this.play(event);
-    else if (event.code === "KeyB" && !event.repeat) byId("loop").click();
-    else if (event.code === "KeyC" && !event.repeat) byId("capture").click();
-    else return this.notes.keyDown(event);
+    const doing = digit ? () => this.slots.select(Number(digit[1]), event, event.shiftKey ? "loop" : undefined)
+      : event.key === " " ? () => this.play(event)
+      : event.code === "KeyB" ? () => byId("loop").click()
+      : event.code === "KeyC" ? () => byId("capture").click() : null;
+    if (!doing) return this.notes.keyDown(event);
+    if (!event.repeat) doing();
     return true;
   }
 

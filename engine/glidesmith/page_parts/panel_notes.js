@@ -126,7 +126,7 @@ class Notes {
     for (const holder of [...this.sounding.keys()]) this.up(holder);
   }
 
-  // The link was lost, and the engine has let the keys go by itself.
+  // The engine has let the keys go by itself: the link was lost, or the transport took over.
   forget() {
     this.sounding.clear();
     this.mark();
