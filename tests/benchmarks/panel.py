@@ -92,9 +92,17 @@ def _ways(found: Any, moves: int) -> list[float]:
         for number in range(moves):
             tab.page.keyboard.press("ArrowUp" if number % 20 < 10 else "ArrowDown")
             tab.page.wait_for_timeout(37)
-        tab.page.wait_for_timeout(500)
-    starts = dict(found.driver.times)
-    return [starts[sample] - sent[number] / 1000 for number, sample in taken.items() if number in sent]
+        for _ in range(40):  # a busy machine answers late
+            tab.page.wait_for_timeout(500)
+            starts = dict(found.driver.times)
+            ways = [
+                starts[sample] - sent[number] / 1000
+                for number, sample in taken.items()
+                if number in sent and sample in starts
+            ]
+            if ways:
+                return ways
+    raise RuntimeError(f"none of {len(sent)} moves was answered: {len(taken)} answers, {len(starts)} blocks")
 
 
 def _note(text: str | bytes, noted: dict[int, Any], key: str, value: str) -> None:
