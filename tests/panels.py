@@ -40,6 +40,7 @@ class Driver:
         self._thread = threading.Thread(target=self._run, daemon=True)
 
     def __enter__(self) -> "Driver":
+        self._deck.play(np.zeros(0, np.float32))  # compiled now, so that no test waits for it
         self._thread.start()
         return self
 
