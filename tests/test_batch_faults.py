@@ -286,6 +286,7 @@ def test_a_folder_inside_that_may_not_be_written_fails_its_items_alone(tmp_path)
         takes = folder / "takes"
         (takes / "basses").mkdir(parents=True, mode=0o555)
         takes.chmod(0o777)
+        batch(bank, folder / "before", jobs=1)  # so that nothing has to be compiled by an ordinary user
         with no_privileges():
             done = batch(bank, takes, jobs=1)
         assert done.made == ["lead.wav"]
