@@ -14,6 +14,7 @@ import math
 import re
 from collections import Counter
 from collections.abc import Iterable, Iterator, Mapping, Sequence
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -99,6 +100,7 @@ def summary_pieces(
     return _chunked(_texts(_part("summary.html"), slots, _data(records, failures, title)))
 
 
+@cache
 def _part(name: str) -> str:
     return (PARTS / name).read_text(encoding="utf-8")
 
