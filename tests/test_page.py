@@ -11,7 +11,8 @@ import pytest
 
 from browser import decoded, example_set
 from glidesmith.errors import OutputError
-from glidesmith.page import PARTS, SCRIPTS, write_page
+from glidesmith.page import SCRIPTS, write_page
+from glidesmith.pageparts import PARTS
 
 HOSTILE = "</script><script>alert(1)</script><!-- {{script}} \u2028 \u202e & \" ' \udcff"
 OWN_CODE_BYTES = 160_000

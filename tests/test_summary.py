@@ -11,7 +11,7 @@ import pytest
 
 from glidesmith import summary
 from glidesmith.errors import OutputError
-from glidesmith.page import PARTS
+from glidesmith.pageparts import PARTS
 from glidesmith.summary import CURVE_HEIGHT, CURVE_WIDTH, curve_path, row_of, summary_pieces, write_summary
 from records import make_record, make_records
 

@@ -7,7 +7,6 @@ their hashes, and nothing else: no network, no other script, whatever the data s
 """
 
 import base64
-import hashlib
 import html
 import json
 import re
@@ -15,10 +14,9 @@ from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
+from glidesmith.pageparts import joined, part, policy
 from glidesmith.partfile import PartFile
 from glidesmith.text import printable
-
-PARTS = Path(__file__).with_name("page_parts")
 
 SCRIPTS = (
     "text.js",
@@ -69,9 +67,9 @@ def write_page(path: Path, data: Mapping[str, Any], audio: Sequence[bytes]) -> i
     """
     if len(data["candidates"]) != len(audio):
         raise ValueError(f"{len(audio)} pieces of audio for {len(data['candidates'])} candidates")
-    script, style = _script(), _part("page.css")
+    script, style = joined(SCRIPTS), part("page.css")
     slots = {
-        "policy": _policy(script, style),
+        "policy": policy(script, style),
         "title": html.escape(printable(str(data["title"]))),
         "style": style,
         "data": _json_in_html(data),
@@ -79,39 +77,13 @@ def write_page(path: Path, data: Mapping[str, Any], audio: Sequence[bytes]) -> i
     }
     file = PartFile(path)
     try:
-        for piece in _pieces(_part("page.html"), slots, audio):
+        for piece in _pieces(part("page.html"), slots, audio):
             file.write(piece)
     except BaseException:
         file.abandon()
         raise
     file.close()
     return file.size
-
-
-def _part(name: str) -> str:
-    return (PARTS / name).read_text(encoding="utf-8")
-
-
-def _script() -> str:
-    return "\n".join(_part(name) for name in SCRIPTS)
-
-
-def _policy(script: str, style: str) -> str:
-    """The content security policy (W3C, Content Security Policy Level 3): all is refused but these two."""
-    return "; ".join(
-        (
-            "default-src 'none'",
-            f"script-src '{_source_hash(script)}'",
-            f"style-src '{_source_hash(style)}'",
-            "img-src data:",
-            "base-uri 'none'",
-            "form-action 'none'",
-        )
-    )
-
-
-def _source_hash(text: str) -> str:
-    return "sha256-" + base64.b64encode(hashlib.sha256(text.encode("utf-8")).digest()).decode("ascii")
 
 
 def _json_in_html(data: Mapping[str, Any]) -> str:

@@ -6,19 +6,16 @@ is a short row; texts go in as JSON and become text, never markup. The players r
 address, since the page stands beside them; nothing else is loaded (see `glidesmith.page` for the policy).
 """
 
-import base64
-import hashlib
 import html
 import json
 import math
 import re
 from collections import Counter
 from collections.abc import Iterable, Iterator, Mapping, Sequence
-from functools import cache
 from pathlib import Path
 from typing import Any
 
-from glidesmith.page import PARTS
+from glidesmith.pageparts import joined, part, policy
 from glidesmith.partfile import PartFile
 from glidesmith.text import printable, shortened
 
@@ -84,48 +81,24 @@ def write_summary(
     return file.size
 
 
+_PLAYED_FROM = "media-src 'self' file:"
+"""The page plays WAVs from where it stands itself."""
+
+
 def summary_pieces(
     records: Iterable[Record], failures: Iterable[str] = (), *, title: str = "Batch"
 ) -> Iterator[bytes]:
     """The page in pieces of some 64 KiB, for wherever it is written; see `write_summary`."""
     if iter(records) is records:
         raise ValueError("the records are gone through twice: give a list, not an iterator")
-    script, style = _joined(SCRIPTS), _joined(STYLES)
+    script, style = joined(SCRIPTS), joined(STYLES)
     slots = {
-        "policy": _policy(script, style),
+        "policy": policy(script, style, _PLAYED_FROM),
         "title": html.escape(printable(title)),
         "style": style,
         "script": script,
     }
-    return _chunked(_texts(_part("summary.html"), slots, _data(records, failures, title)))
-
-
-@cache
-def _part(name: str) -> str:
-    return (PARTS / name).read_text(encoding="utf-8")
-
-
-def _joined(names: Sequence[str]) -> str:
-    return "\n".join(_part(name) for name in names)
-
-
-def _policy(script: str, style: str) -> str:
-    """The content security policy: this script, this style sheet, and media from where the page came from."""
-    return "; ".join(
-        (
-            "default-src 'none'",
-            f"script-src '{_source_hash(script)}'",
-            f"style-src '{_source_hash(style)}'",
-            "media-src 'self' file:",
-            "img-src data:",
-            "base-uri 'none'",
-            "form-action 'none'",
-        )
-    )
-
-
-def _source_hash(text: str) -> str:
-    return "sha256-" + base64.b64encode(hashlib.sha256(text.encode("utf-8")).digest()).decode("ascii")
+    return _chunked(_texts(part("summary.html"), slots, _data(records, failures, title)))
 
 
 def _texts(skeleton: str, slots: Mapping[str, str], data: Iterator[str]) -> Iterator[str]:
