@@ -63,7 +63,9 @@ class DummyJack:
         done = subprocess.run(waiting, capture_output=True, env=self.environment, timeout=2 * _START_S)
         if done.returncode != 0 or self._server.poll() is not None:
             self.kill()
-            pytest.skip(f"a dummy JACK server does not start here: {self._said.read_text()[-300:]}")
+            pytest.skip(
+                f"the dummy JACK server (Debian: jackd2) does not start here: {self._said.read_text()[-300:]}"
+            )
 
     def deserted(self) -> bool:
         """Whether a client vanished without a word, which costs everybody's sound."""
@@ -101,7 +103,9 @@ def _own_name() -> tuple[str, IO[bytes]]:
             slot.close()
             continue
         return f"glidesmith-test-{number}", slot
-    pytest.skip("other runs of the tests have all the dummy JACK servers")
+    pytest.skip(
+        "other runs of the tests have all the dummy servers of jackd2; run them again when those are over"
+    )
 
 
 def isolated(folder: Path) -> dict[str, str]:

@@ -244,7 +244,7 @@ def small_disk(tmp_path):
     except FileNotFoundError:
         mounted = False
     if not mounted:
-        pytest.skip("no file system can be mounted here")
+        pytest.skip("mounting a small file system needs root and mount (Debian: mount)")
     yield place
     subprocess.run(["umount", "-l", str(place)], check=True)
 

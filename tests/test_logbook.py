@@ -164,7 +164,7 @@ def test_a_log_that_tells_of_other_samples_is_not_believed(log, tmp_path):
 def test_a_log_that_is_cut_off_is_told(log, tmp_path, kept):
     path = tmp_path / "cut.jsonl"
     path.write_bytes(log.read_bytes()[:kept])
-    complaint(path)
+    assert "cut.jsonl" in complaint(path)
 
 
 def test_a_cut_last_line_says_how_to_mend_it(log, tmp_path):

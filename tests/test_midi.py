@@ -412,7 +412,7 @@ def test_damage_gets_one_line(data: bytes, said: str) -> None:
 def test_every_truncation_is_told() -> None:
     for data in (FORMAT_0, FORMAT_1):
         for length in range(len(data)):
-            refusal(data[:length])
+            assert refusal(data[:length]).startswith("a.mid: ")
 
 
 def test_a_few_bytes_that_claim_days_are_refused_without_work() -> None:

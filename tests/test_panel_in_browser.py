@@ -605,6 +605,7 @@ def test_a_reloaded_page_finds_all_as_it_was(tab, panel):
     tab.page.reload()
     text_of(tab, "#settings-heading", "slot 2")
     tab.page.wait_for_selector("#facts-body tbody tr")
+    assert tab.complaints == []
 
 
 def test_a_lost_link_is_told_and_found_again(tab, panel):

@@ -267,8 +267,8 @@ def test_wave_file_and_its_file_go_together() -> None:
 
 
 def test_a_mistake_does_not_bring_a_second_one_with_it() -> None:
-    line_of(LEAST.replace("[gain]", '[gain]\nlaw = "curved"\ntiming = "fixed"'))
-    line_of(LEAST + '[oscillator]\nwave = "fil"\nfile = "cycle.wav"\n')
+    assert '"curved"' in line_of(LEAST.replace("[gain]", '[gain]\nlaw = "curved"\ntiming = "fixed"'))
+    assert '"fil"' in line_of(LEAST + '[oscillator]\nwave = "fil"\nfile = "cycle.wav"\n')
 
 
 def test_load_preset_names_the_file_in_every_refusal(tmp_path: Path) -> None:

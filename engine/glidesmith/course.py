@@ -6,6 +6,7 @@ left-continuous, as everything in the engine: y(t) is the value before an event 
 in which the output only rises, only falls or rests.
 """
 
+import math
 from abc import ABC, abstractmethod
 from bisect import bisect_right
 from collections.abc import Iterable, Iterator
@@ -207,6 +208,26 @@ class GlideCourse(Course):
             begin_s = until_s
         if begin_s < end_s:
             yield GlideStretch(glide, start_s, begin_s, end_s, target, target, False)
+
+    def stair(self, steps: int, begin_s: float, end_s: float) -> "tuple[list[float], list[float]]":
+        """The corners (seconds and volts) of the course as a glissando of ``steps`` an octave has it.
+
+        Its steps stand where the course crosses half-way between two.
+        """
+        times: list[float] = []
+        volts: list[float] = []
+        for stretch in self.stretches(begin_s, end_s):
+            here, there = (math.floor(value * steps + 0.5) for value in (stretch.first, stretch.last))
+            way = 1 if there > here else -1
+            times.append(stretch.begin_s)
+            volts.append(here / steps)
+            for step in range(here, there, way):
+                at = stretch.time_at((step + 0.5 * way) / steps)
+                times += [at, at]
+                volts += [step / steps, (step + way) / steps]
+            times.append(stretch.end_s)
+            volts.append(there / steps)
+        return times, volts
 
     def fastest(self, begin_s: float, end_s: float) -> float:
         """The largest rate of change, up or down, per second, between two moments. A jump has no rate."""

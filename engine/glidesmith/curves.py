@@ -167,19 +167,7 @@ def _glissando(
     course: GlideCourse, steps: int, heard: Callable[["Floats"], "Floats"], end_s: float
 ) -> "Line":
     """The stair of a stepped pitch, its steps where the course crosses half-way between two."""
-    times: list[float] = []
-    volts: list[float] = []
-    for stretch in course.stretches(0.0, end_s):
-        here, there = (math.floor(value * steps + 0.5) for value in (stretch.first, stretch.last))
-        way = 1 if there > here else -1
-        times.append(stretch.begin_s)
-        volts.append(here / steps)
-        for step in range(here, there, way):
-            at = stretch.time_at((step + 0.5 * way) / steps)
-            times += [at, at]
-            volts += [step / steps, (step + way) / steps]
-        times.append(stretch.end_s)
-        volts.append(there / steps)
+    times, volts = course.stair(steps, 0.0, end_s)
     return _rounded(np.stack([times, heard(np.array(volts))], axis=1))
 
 

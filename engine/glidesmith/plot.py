@@ -18,7 +18,7 @@ import numpy as np
 
 from glidesmith import __version__, compiled
 from glidesmith.amplifier import amplifier_record, fill_gain
-from glidesmith.course import Course, GlideCourse, gain_courses, heard_octaves, pitch_course
+from glidesmith.course import Course, gain_courses, heard_octaves, pitch_course
 from glidesmith.errors import SettingError
 from glidesmith.facts import Facts, glide_summary
 from glidesmith.measuring import measure
@@ -273,23 +273,8 @@ class _Curves:
         if not steps:
             times, volts = self._pitch.corners(0.0, self.end_s, count)
             return times, self._as_numbers(volts)
-        return self._stepped(self._pitch, steps)
-
-    def _stepped(self, course: GlideCourse, steps: int) -> "Line":
-        times: list[float] = []
-        volts: list[float] = []
-        for stretch in course.stretches(0.0, self.end_s):
-            here, there = (math.floor(v * steps + 0.5) for v in (stretch.first, stretch.last))
-            way = 1 if there > here else -1
-            times.append(stretch.begin_s)
-            volts.append(here / steps)
-            for step in range(here, there, way):
-                at = stretch.time_at((step + 0.5 * way) / steps)
-                times += [at, at]
-                volts += [step / steps, (step + way) / steps]
-            times.append(stretch.end_s)
-            volts.append(there / steps)
-        return np.array(times), self._as_numbers(np.array(volts))
+        stair_s, stair_volts = self._pitch.stair(steps, 0.0, self.end_s)
+        return np.array(stair_s), self._as_numbers(np.array(stair_volts))
 
     def gate(self) -> "Line":
         """The gate's level, 0 to 1; each opening starts from 0, so that gates that abut can be told apart."""
