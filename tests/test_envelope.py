@@ -10,21 +10,18 @@ import pytest
 
 from conftest import LONG
 from glidesmith.envelope import (
-    ENVELOPE,
     GATE_EVENT,
     WALK,
-    control_at,
     envelope_record,
     fill_control,
-    stage_times,
-    turning_times,
     walk_reset,
     walk_resettle,
     walk_to,
 )
 from glidesmith.errors import SettingError
-from glidesmith.slew import SLEW, Slew
+from glidesmith.slew import Slew
 from test_pursuit import LAWS, Reference, scaled
+from walks import control_at, stage_times, turning_times
 
 RATES = (8000, 44100, 48000, 192000)
 CASES = 40 if LONG else 6
@@ -538,37 +535,3 @@ def test_a_stage_keeps_the_share_that_is_left_when_its_time_changes():
 def test_settings_out_of_range_are_named(name, value):
     with pytest.raises(SettingError, match=name):
         make_envelope(**{name: value})
-
-
-@pytest.mark.parametrize(
-    "slew", [Slew("curve", 1, 1), Slew("cosine", 1, 1), Slew("linear", 1, 1, timing="fixed")]
-)
-def test_a_timed_slew_is_refused_with_the_reason(slew):
-    with pytest.raises(SettingError, match="no meaning for a target that keeps moving"):
-        control_at(slew.record(), make_envelope(), make_events(PHRASE, 48000), 48000, [0.0])
-
-
-@pytest.mark.parametrize("times", [[1.0, 0.5], [-1.0], [np.nan], [np.inf], [[0.0, 1.0]]])
-def test_times_out_of_order_are_refused(times):
-    with pytest.raises(SettingError, match="times"):
-        control_at(NOW, make_envelope(), make_events(PHRASE, 48000), 48000, times)
-
-
-def test_events_and_records_that_break_their_rules_are_refused():
-    good = make_events(PHRASE, 48000)
-    for field, value in (("sample", -1), ("fraction", 1.0), ("level", 1.01), ("level", np.nan)):
-        bad = good.copy()
-        bad[field][0] = value
-        with pytest.raises(SettingError, match="events"):
-            stage_times(make_envelope(), bad, 48000)
-    with pytest.raises(SettingError, match="order"):
-        stage_times(make_envelope(), good[::-1].copy(), 48000)
-    with pytest.raises(SettingError, match="GATE_EVENT"):
-        stage_times(make_envelope(), np.zeros(3), 48000)
-    with pytest.raises(SettingError, match="sample rate"):
-        stage_times(make_envelope(), good, 0.0)
-    with pytest.raises(SettingError, match="slew"):
-        turning_times(np.zeros(2, SLEW), make_envelope(), good, 48000)
-    with pytest.raises(SettingError, match="envelope"):
-        stage_times(np.zeros(1, SLEW), good, 48000)
-    assert stage_times(np.zeros(1, ENVELOPE), good[:0], 48000).size == 0

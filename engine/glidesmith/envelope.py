@@ -18,12 +18,11 @@ import numpy as np
 
 from glidesmith.compiled import inlined, kernel
 from glidesmith.errors import SettingError
-from glidesmith.pursuit import PIECE, PURSUIT, fill_pursuit, pursue, pursue_on, pursued_level
-from glidesmith.slew import FIXED, LAWS, LINEAR, SLEW, SOFT, TIMINGS
+from glidesmith.pursuit import PURSUIT, fill_pursuit, pursue, pursue_on, pursued_level
 from glidesmith.target import ARC, HOLD, RAMP, TARGET, target_begin, target_level, way_left
 
 if TYPE_CHECKING:
-    from numpy.typing import ArrayLike, NDArray
+    from numpy.typing import NDArray
 
     from glidesmith.preset import Envelope
 
@@ -34,9 +33,6 @@ IDLE, ATTACK, DECAY, SUSTAIN, RELEASE = range(5)
 
 _ALL_BUT_OVER = 1e-9
 """A stage with less than this part of its way left is over when settings change."""
-
-_BORDERS_PER_EVENT = 40
-"""More than an event brings: three stages at most, of at most six stretches."""
 
 _TIE_SAMPLES = 1e-8
 _JUST_AFTER = 1e-300
@@ -351,47 +347,6 @@ def walk_open(walk: Any, slew: Any, envelope: Any, sample: int, level: float, y:
     _begin_stage(walk, slew, envelope, DECAY if level > 0.0 else RELEASE, y, y)
 
 
-@kernel
-def _list_borders(
-    walk: Any, slew: Any, envelope: Any, events: Any, rate: float, every: bool, times: Any
-) -> int:
-    """Walk from border to border to the end of time; returns how many of ``times`` (s) were filled in."""
-    step = 1.0 / rate
-    count = 0
-    while count < times.size:
-        due = walk.event < events.size
-        at = np.inf
-        if due:
-            event = events[walk.event]
-            at = _elapsed(walk, event.sample, event.fraction, step)
-        pursuit = walk.pursuit
-        if _is_beyond(at, pursuit.until, step):
-            goes_on = pursuit.mode == PIECE and pursuit.meets == 0
-            if pursuit.until >= walk.target.duration or (every and not goes_on):
-                samples = float(walk.start_sample) + (walk.start_fraction + pursuit.until * rate)
-                times[count] = samples / rate
-                count += 1
-            _pass_border(walk, slew, envelope, rate)
-        elif due:
-            times[count] = (float(events[walk.event].sample) + events[walk.event].fraction) / rate
-            count += 1
-            _take_event(walk, slew, envelope, events[walk.event], at)
-        else:
-            break
-    return count
-
-
-@kernel
-def _walk_through(
-    walk: Any, slew: Any, envelope: Any, events: Any, rate: float, instants: Any, levels: Any
-) -> None:
-    """Fill ``levels`` (n, 2) with x and y at ``instants``, of which sample and fraction count."""
-    for i in range(instants.size):
-        walk_to(walk, slew, envelope, events, rate, instants[i].sample, instants[i].fraction)
-        levels[i, 0] = walk.x
-        levels[i, 1] = walk.y
-
-
 def envelope_record(envelope: "Envelope") -> "NDArray[Any]":
     """The settings of an envelope as an `ENVELOPE` array of shape (1,), as compiled code reads them.
 
@@ -413,136 +368,3 @@ def _in_range(name: str, value: float, high: float, unit: str) -> float:
     if not 0.0 <= value <= high:
         raise SettingError(f"{name} = {value!r} is out of range: 0 to {high:g}{unit}")
     return float(value)
-
-
-def _one_record(name: str, record: "ArrayLike", kind: "np.dtype[np.void]") -> Any:
-    rows = np.atleast_1d(np.asarray(record))
-    if rows.dtype != kind or rows.shape != (1,):
-        raise SettingError(
-            f"{name}: give one record as its settings class makes it, not {rows.dtype} {rows.shape}"
-        )
-    return rows[0]
-
-
-def _checked_slew(record: "ArrayLike") -> Any:
-    slew = _one_record("slew", record, SLEW)
-    if not LINEAR <= slew["law"] <= SOFT or (slew["law"] == LINEAR and slew["timing"] == FIXED):
-        raise SettingError(
-            f"slew law {LAWS[slew['law']]!r} with timing {TIMINGS[slew['timing']]!r} can't follow an "
-            "envelope: a glide with a duration of its own has no meaning for a target that keeps moving; "
-            "choose linear (rate), rc, log, exp or soft"
-        )
-    return slew
-
-
-def _checked_events(events: "NDArray[Any]", sample_rate: float) -> "NDArray[Any]":
-    if not 0.0 < sample_rate < np.inf:
-        raise SettingError(f"sample rate {sample_rate!r}: give a positive number of hertz")
-    if events.dtype != GATE_EVENT or events.ndim != 1:
-        raise SettingError(
-            f"events: give a GATE_EVENT array of one dimension, not {events.dtype} {events.shape}"
-        )
-    if not (
-        np.all((events["fraction"] >= 0.0) & (events["fraction"] < 1.0)) and np.all(events["sample"] >= 0)
-    ):
-        raise SettingError("events: samples must be 0 or later and fractions from 0 to under 1")
-    if not np.all((events["level"] >= 0.0) & (events["level"] <= 1.0)):
-        raise SettingError("events: levels must be from 0 to 1")
-    order = np.lexsort((events["fraction"], events["sample"]))
-    if not np.array_equal(order, np.arange(events.size)):
-        raise SettingError("events: they must be in order of time")
-    return np.ascontiguousarray(events)
-
-
-def _instants(times_s: "NDArray[np.float64]", events: "NDArray[Any]", sample_rate: float) -> "NDArray[Any]":
-    """Times as sample and fraction; the very double that an event's time gives is that event's instant."""
-    instants = np.zeros(times_s.size, GATE_EVENT)
-    samples = times_s * sample_rate
-    instants["sample"] = np.floor(samples)
-    instants["fraction"] = samples - np.floor(samples)
-    event_times = (events["sample"] + events["fraction"]) / sample_rate
-    if events.size:
-        nearest = np.minimum(np.searchsorted(event_times, times_s), events.size - 1)
-        same = event_times[nearest] == times_s
-        for part in ("sample", "fraction"):
-            instants[part][same] = events[part][nearest[same]]
-    return instants
-
-
-def _new_walk() -> Any:
-    walk = np.zeros(1, WALK)[0]
-    walk_reset(walk)
-    return walk
-
-
-def control_at(
-    slew: "ArrayLike",
-    envelope: "ArrayLike",
-    events: "NDArray[Any]",
-    sample_rate: float,
-    times_s: "ArrayLike",
-) -> "tuple[NDArray[np.float64], NDArray[np.float64]]":
-    """The envelope's level and the slewed control at any instants.
-
-    Parameters
-    ----------
-    slew, envelope
-        A `SLEW` (linear by rate, rc, log, exp or soft) and an `ENVELOPE` record, or arrays of shape (1,).
-    events : GATE_EVENT (m,)
-        In order of time; levels 0 to 1.
-    sample_rate : float
-        Hz, of the events' sample numbers.
-    times_s : float64 (n,)
-        Seconds from sample 0, 0 or later, in order. At an event's own time, (sample + fraction)/sample_rate
-        as a double, the levels are those before the event.
-
-    Returns
-    -------
-    unslewed, slewed : float64 (n,)
-        Levels, 0 to 1.
-
-    Raises
-    ------
-    SettingError
-        For records, events or times that break these rules.
-    """
-    times = np.asarray(times_s, np.float64)
-    if times.ndim != 1 or not np.all((times >= 0.0) & (times < np.inf)) or np.any(np.diff(times) < 0.0):
-        raise SettingError("times: give finite seconds from 0 on, in order, in one dimension")
-    events = _checked_events(events, sample_rate)
-    records = _checked_slew(slew), _one_record("envelope", envelope, ENVELOPE)
-    levels = np.zeros((times.size, 2))
-    _walk_through(
-        _new_walk(), *records, events, float(sample_rate), _instants(times, events, sample_rate), levels
-    )
-    return levels[:, 0].copy(), levels[:, 1].copy()
-
-
-def _borders(
-    slew: Any, envelope: Any, events: "NDArray[Any]", sample_rate: float, every: bool
-) -> "NDArray[np.float64]":
-    events = _checked_events(events, sample_rate)
-    times = np.zeros(_BORDERS_PER_EVENT * (events.size + 1))
-    count = _list_borders(_new_walk(), slew, envelope, events, float(sample_rate), every, times)
-    return np.unique(times[:count])
-
-
-def stage_times(envelope: "ArrayLike", events: "NDArray[Any]", sample_rate: float) -> "NDArray[np.float64]":
-    """The instants, in seconds and in order, at which events happen and at which stages begin or end.
-
-    Between two of them the unslewed level is monotonic. Parameters and errors as for `control_at`.
-    """
-    at_once = np.zeros(1, SLEW)[0]
-    return _borders(at_once, _one_record("envelope", envelope, ENVELOPE), events, sample_rate, every=False)
-
-
-def turning_times(
-    slew: "ArrayLike", envelope: "ArrayLike", events: "NDArray[Any]", sample_rate: float
-) -> "NDArray[np.float64]":
-    """`stage_times`, and the instants at which the slewed control meets the envelope or falls behind it.
-
-    Between two of them the slewed control is monotonic as well: all its peaks and dips are at these instants.
-    Right after one of them it may have jumped, where a side of the slew is immediate and the envelope jumps.
-    """
-    records = _checked_slew(slew), _one_record("envelope", envelope, ENVELOPE)
-    return _borders(*records, events, sample_rate, every=True)
