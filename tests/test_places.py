@@ -12,7 +12,6 @@ from glidesmith.errors import OutputError, SettingError
 from glidesmith.places import (
     RemotePlace,
     SharedFolder,
-    is_address,
     scrubbed,
     shared_place,
     without_credentials,
@@ -255,9 +254,6 @@ def test_a_library_that_is_missing_is_named(monkeypatch):
 
 def test_paths_and_addresses_are_told_apart(tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
-    assert not is_address("takes/a:b")
-    assert is_address("s3://bucket")
-    assert is_address("simplecache::s3://bucket")
     assert shared_place("takes").root == tmp_path / "takes"
     assert shared_place(f"file://{tmp_path}/two%20words").root == tmp_path / "two words"
     assert isinstance(shared_place("memory://ferry"), RemotePlace)

@@ -87,11 +87,6 @@ def folder_at(output: str) -> Path | None:
     return None
 
 
-def is_address(output: str) -> bool:
-    """Whether an output is given as an address and not as a path."""
-    return _URL.match(output.rsplit("::", 1)[-1]) is not None
-
-
 def without_credentials(address: str) -> str:
     """An address without user, password, query and fragment, for people and for files."""
     links = (re.sub(r"(://)[^/]*@", r"\1", link) for link in address.split("::"))

@@ -56,11 +56,6 @@ class Request:
     force: bool = False
     verify: bool = False
 
-    @property
-    def names_need_phrases(self) -> bool:
-        """Whether an output's name is known only once its preset was read."""
-        return not self.phrases and "phrase" in self.pattern.fields
-
 
 def checked_request(
     folder: str | os.PathLike[str],

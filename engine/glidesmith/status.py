@@ -1,7 +1,6 @@
 """What there is to show of a session: its state, facts and curves, as JSON carries them."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -16,14 +15,6 @@ if TYPE_CHECKING:
 _TRANSFER_POINTS = 65
 
 Line = list[list[float]]
-
-
-@dataclass(frozen=True, slots=True)
-class Picture:
-    """Facts and curves of one slot, made on demand and kept by what they hang on."""
-
-    facts: dict[str, Any]
-    curves: dict[str, Any]
 
 
 def state_of(
